@@ -1,0 +1,295 @@
+"""One market, the whole chain, as one pure function.
+
+Belongs here: the order of the rooms. Does not belong here: what happens in any of them, and anything that
+reads or writes a file.
+"""
+
+from dataclasses import dataclass, field, replace
+from typing import Any
+
+import numpy as np
+import pyarrow as pa
+
+from contracts.arrivals import Arrived, settle_arrivals
+from contracts.checks.arrived import check_days, check_files, check_meetings
+from contracts.checks.gaps import check_gaps
+from contracts.checks.rolled import check_rolls
+from contracts.checks.rows import check_rows
+from contracts.checks.stale import find_stale_runs
+from contracts.errors import IntakeError
+from contracts.findings import Finding, Kind, Severity, Waiver, findings_table, waive
+from contracts.intake import FileRows, RawFile, parse_rows, split_file
+from contracts.markets import Market
+from contracts.panel import Panel, lay_panel
+from contracts.quality import Gates, Quality
+from contracts.repairs import Clean, DeclaredRepair, clean_panel
+from contracts.rolls import NEVER, Held, lay_rolls
+from contracts.sessions import day_of
+from contracts.splice import Series, carry_forward, check_identities, splice
+from contracts.trend import impact_of_gap, impact_of_price
+from contracts.written import (
+    bars_table,
+    files_table,
+    rejects_table,
+    rolls_table,
+    series_table,
+    terms_table,
+)
+
+# Gates look back so many sessions.
+RECENT_SESSIONS = 60
+_TELLS_OF_SETTLE = frozenset({"repaired", "masked"})
+
+
+@dataclass(frozen=True)
+class Inputs:
+    """All that decides a market's tables: the same inputs give the same bytes.
+
+    `files` are in any order; `is_old` marks those with a newer version under the same path; `failures` are
+    (path, contract, message) of files that could not even be unpacked.
+    """
+
+    market: Market
+    files: tuple[RawFile, ...]
+    is_old: tuple[bool, ...]
+    failures: tuple[tuple[str, str | None, str], ...] = ()
+    repairs: tuple[DeclaredRepair, ...] = ()
+    waivers: tuple[Waiver, ...] = ()
+    quality: Quality = field(default_factory=Quality)
+    gates: Gates = field(default_factory=Gates)
+    look_backs: tuple[int, ...] = (5, 10, 21, 42)
+
+
+@dataclass(frozen=True, eq=False)
+class Built:
+    """A market's tables by name, and the facts its gates are judged by."""
+
+    tables: dict[str, pa.Table]
+    facts: dict[str, Any]
+
+
+@dataclass(frozen=True, eq=False)
+class Laid:
+    """One plan carried through: its name, what was held, and the series (None where nothing ever was)."""
+
+    name: str
+    held: Held
+    series: Series | None
+
+
+def build_market(inputs: Inputs) -> Built:
+    """Carry one market from raw text to tables.
+
+    Raises ValueError where no usable bar arrived, CalendarError where a day rule fails, IdentityError where
+    the result does not hold together.
+    """
+    market = inputs.market
+    files, is_old, findings = _read(inputs)
+    parsed = parse_rows(files, market)
+    arrived = settle_arrivals(parsed, files, is_old)
+    panel = lay_panel(market, arrived.bars)
+    clean = clean_panel(panel, arrived.bars, inputs.repairs, inputs.quality)
+    findings += check_files(market.code, files, is_old)
+    findings += check_meetings(market.code, parsed, arrived, files, inputs.gates)
+    findings += check_days(panel, _left_out(panel, arrived))
+    findings += check_rows(panel, clean.prices)
+    findings += clean.findings
+    findings += _tell_stale(panel, clean, inputs.quality)
+    findings += check_gaps(panel)
+    laid = lay_plans(panel, clean)
+    for one in laid:
+        findings += check_rolls(panel, one.name, market.plans[one.name], one.held)
+    findings = _weigh(findings, panel, clean, laid, inputs.look_backs)
+    data_date = day_of(panel.sessions[-1])
+    findings = waive(findings, inputs.waivers, market.code, data_date)
+    counts = _counts(findings)
+    impacts = [_gap_impacts(one, inputs.look_backs) for one in laid]
+    tables = {
+        "bars": bars_table(panel, arrived, files, clean),
+        "series": series_table(panel, clean, [(o.name, o.held, o.series) for o in laid], counts),
+        "rolls": rolls_table(panel, [(o.name, o.held, i) for o, i in zip(laid, impacts, strict=True)]),
+        "findings": findings_table(findings),
+        "rejects": rejects_table(market.code, files, is_old),
+        "files": files_table(market.code, files, parsed),
+        "terms": terms_table(panel),
+    }
+    return Built(tables, _facts(findings, panel, files, is_old, laid))
+
+
+def _read(inputs: Inputs) -> tuple[list[FileRows], list[bool], list[Finding]]:
+    """Split every file into rows, in order of intake and path; a file without a usable header is a finding."""
+    code = inputs.market.code
+    findings = [_unreadable(code, *failure) for failure in inputs.failures]
+    files: list[FileRows] = []
+    is_old: list[bool] = []
+    order = sorted(
+        zip(inputs.files, inputs.is_old, strict=True), key=lambda pair: (pair[0].taken_in, pair[0].path, pair[0].file)
+    )
+    for raw, old in order:
+        try:
+            files.append(split_file(raw))
+            is_old.append(old)
+        except IntakeError as error:
+            findings.append(_unreadable(code, raw.path, raw.claim.contract, str(error)))
+    return files, is_old, findings
+
+
+def _unreadable(market: str, path: str, contract: str | None, message: str) -> Finding:
+    return Finding(Kind.UNREADABLE_FILE, Severity.BLOCK, message, market, contract, detail=path)
+
+
+def _left_out(panel: Panel, arrived: Arrived) -> list[tuple[int, str, int]]:
+    bars = arrived.bars
+    places = sorted({*panel.off_session.tolist(), *panel.outside.tolist()})
+    return [(bar, bars.contracts[bars.contract[bar]], int(bars.session[bar])) for bar in places]
+
+
+def _tell_stale(panel: Panel, clean: Clean, quality: Quality) -> list[Finding]:
+    found = []
+    for run in find_stale_runs(panel, panel.field("settle"), quality):
+        label, first = panel.contracts[run.contract], day_of(panel.sessions[run.first])
+        price = float(panel.field("settle")[run.first, run.contract])
+        count = run.last - run.first + 1
+        message = (
+            f"{label}, {first} to {day_of(panel.sessions[run.last])}: settle stands at {price:g} for {count} sessions "
+            f"while the curve moves {run.moved:+g}"
+        )
+        found.append(
+            Finding(
+                Kind.STALE_PRICE, Severity.REVIEW, message, panel.market.code, label, first, "settle", price,
+                round(price + run.moved, 10), score=float(count), threshold=float(quality.stale_sessions),
+            )
+        )  # fmt: skip
+    return found
+
+
+def lay_plans(panel: Panel, clean: Clean) -> list[Laid]:
+    """Every plan of the market and each of its nearbys, spliced and held to its identities."""
+    carried, status = carry_forward(clean.settle, clean.is_repaired)
+    laid = []
+    for name in sorted(panel.market.plans):
+        for held in lay_rolls(panel, clean.usable, clean.settle, panel.market.plans[name]):
+            series = splice(held, carried, status) if held.start != NEVER else None
+            if series is not None:
+                check_identities(series, f"{panel.market.code}, plan {name}, nearby {held.nearby}")
+            laid.append(Laid(name, held, series))
+    return laid
+
+
+def _weigh(
+    findings: list[Finding], panel: Panel, clean: Clean, laid: list[Laid], look_backs: tuple[int, ...]
+) -> list[Finding]:
+    """Give each finding on a replaced settle the sessions whose score it would have turned, at its worst plan."""
+    first_nearbys = [one for one in laid if one.held.nearby == 1 and one.series is not None]
+    weighed = []
+    for finding in findings:
+        if finding.field == "settle" and finding.action in _TELLS_OF_SETTLE and finding.session is not None:
+            session = int(np.searchsorted(panel.sessions, (finding.session - day_of(0)).days))
+            contract = panel.contracts.index(finding.contract or "")
+            finding = replace(
+                finding, impact_sessions=_price_impact(panel, clean, first_nearbys, session, contract, look_backs)
+            )
+        elif finding.kind is Kind.STALE_PRICE:
+            finding = replace(finding, impact_sessions=0)
+        weighed.append(finding)
+    return weighed
+
+
+def _price_impact(
+    panel: Panel, clean: Clean, laid: list[Laid], session: int, contract: int, look_backs: tuple[int, ...]
+) -> int:
+    reported = panel.field("settle")[session, contract]
+    worst = 0
+    for one in laid:
+        series = one.series
+        if series is None or session < one.held.start:
+            continue
+        weight = _weight(one.held, session, contract)
+        at = session - one.held.start
+        used = clean.settle[session, contract]
+        if not weight or np.isnan(series.back_adjusted[at]):
+            continue
+        if np.isnan(used):
+            used = series.settle[at]
+        worst = max(worst, impact_of_price(series.back_adjusted, at, weight * (reported - used), look_backs))
+    return worst
+
+
+def _weight(held: Held, session: int, contract: int) -> float:
+    if held.contract[session] == contract:
+        return float(1.0 - held.weight[session])
+    return float(held.weight[session]) if held.incoming[session] == contract else 0.0
+
+
+def _gap_impacts(one: Laid, look_backs: tuple[int, ...]) -> list[int]:
+    if one.series is None:
+        return []
+    back, start = one.series.back_adjusted, one.held.start
+    return [
+        0 if step.measured == NEVER else impact_of_gap(back, step.effective - start, step.gap, look_backs)
+        for step in one.held.steps
+    ]
+
+
+def _counts(findings: list[Finding]) -> dict[tuple[str, Any], int]:
+    """Number of findings by contract and session."""
+    counts: dict[tuple[str, Any], int] = {}
+    for finding in findings:
+        if finding.contract is not None and finding.session is not None:
+            key = (finding.contract, finding.session)
+            counts[key] = counts.get(key, 0) + 1
+    return counts
+
+
+def _facts(
+    findings: list[Finding], panel: Panel, files: list[FileRows], is_old: list[bool], laid: list[Laid]
+) -> dict[str, Any]:
+    """What the gates are judged by, as plain values."""
+    current = [rows for rows, old in zip(files, is_old, strict=True) if not old]
+    severities: dict[str, int] = {}
+    for finding in findings:
+        severities[finding.severity] = severities.get(finding.severity, 0) + 1
+    plans: dict[str, Any] = {}
+    for one in laid:
+        if one.held.nearby != 1 or one.series is None:
+            continue
+        status = one.series.status
+        plans[one.name] = {
+            "first_session": day_of(panel.sessions[one.series.start]).isoformat(),
+            "last_session": day_of(panel.sessions[-1]).isoformat(),
+            "sessions": len(status),
+            "repaired": int((status == 1).sum()),
+            "carried": int((status == 2).sum()),
+            "missing": int((status == 3).sum()),
+            "recent_without_price": int((status[-RECENT_SESSIONS:] >= 2).sum()),
+            "recent": min(len(status), RECENT_SESSIONS),
+        }
+    return {
+        "rows": sum(rows.row_count for rows in current),
+        "rejected": sum(len(rows.rejects) for rows in current),
+        "expected": len(panel.sessions),
+        "first_session": day_of(panel.sessions[0]).isoformat(),
+        "last_session": day_of(panel.sessions[-1]).isoformat(),
+        "findings": severities,
+        "blocking": _blocking(findings, panel, laid),
+        "plans": plans,
+    }
+
+
+def _blocking(findings: list[Finding], panel: Panel, laid: list[Laid]) -> list[str]:
+    """Messages of unwaived block findings that are recent in a held contract, or belong to no session."""
+    since = day_of(panel.sessions[max(0, len(panel.sessions) - RECENT_SESSIONS)])
+    messages = []
+    for finding in findings:
+        if finding.severity is not Severity.BLOCK or finding.waived_until is not None:
+            continue
+        if finding.session is not None and finding.contract is not None:
+            if finding.session < since or finding.contract not in panel.contracts:
+                continue
+            session = int(np.searchsorted(panel.sessions, (finding.session - day_of(0)).days))
+            contract = panel.contracts.index(finding.contract)
+            around = range(max(0, session - 1), min(len(panel.sessions), session + 1))
+            if not any(_weight(one.held, at, contract) for one in laid for at in around):
+                continue
+        messages.append(finding.message)
+    return messages

@@ -1,0 +1,52 @@
+"""Settles that stand still while the rest of the curve moves.
+
+Belongs here: telling a price that was not updated from a market that did not move. Does not belong here:
+prices that stand apart from the curve (`prices.py`).
+"""
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from contracts.checks.robust import row_medians
+from contracts.panel import Panel
+from contracts.quality import Quality
+
+# The rest of the curve has to move so many ticks on a session for a standing price to be strange on it,
+_LEAST_TICKS = 2.0
+# and on so large a share of the run.
+_LEAST_SHARE = 0.6
+
+
+@dataclass(frozen=True)
+class StaleRun:
+    """A run of unchanged settles: first and last session, contract, and how far the curve moved meanwhile."""
+
+    first: int
+    last: int
+    contract: int
+    moved: float
+
+
+def find_stale_runs(panel: Panel, settle: np.ndarray, quality: Quality) -> list[StaleRun]:
+    """Runs of at least `stale_sessions` unchanged settles (after their first) in a curve that moves.
+
+    `settle` (T, N), NaN where absent. A contract without volume through the whole run does not trade, and its
+    standing price is a fact.
+    """
+    change = np.full(settle.shape, np.nan)
+    change[1:] = settle[1:] - settle[:-1]
+    common = row_medians(np.where(change == 0.0, np.nan, change))
+    moves = np.abs(common) >= _LEAST_TICKS * panel.market.tick_size
+    volume = panel.field("volume")
+    runs: list[StaleRun] = []
+    for contract in np.flatnonzero((change == 0.0).any(axis=0)):
+        still = np.concatenate(([False], change[:, contract] == 0.0, [False]))
+        edges = np.flatnonzero(np.diff(still.astype(np.int8)))
+        for first, end in zip(edges[::2], edges[1::2], strict=True):
+            if end - first < quality.stale_sessions or moves[first:end].mean() < _LEAST_SHARE:
+                continue
+            if not (volume[first:end, contract] > 0).any():
+                continue
+            runs.append(StaleRun(int(first), int(end) - 1, int(contract), float(np.nansum(common[first:end]))))
+    return runs

@@ -1,0 +1,366 @@
+"""Roll plan + panel -> held weights and the roll ledger.
+
+Belongs here: when a plan leaves a contract, for which one, and on which settles the gap is measured. Does not
+belong here: what the series then look like (`splice.py`). All positions are indices of the panel's sessions
+and contracts; nothing later than the close of a decision enters it.
+"""
+
+import math
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from contracts.deliveries import delivery_of
+from contracts.markets import Incoming, Plan, Trigger
+from contracts.panel import Panel, deadlines
+from contracts.sessions import session_index
+
+NEVER = -1
+BACKSTOP = "backstop"
+FORCED = "forced"
+
+
+@dataclass(frozen=True)
+class Decision:
+    """A roll as decided at the close of a session; `planned` is its first effective session."""
+
+    decided: int
+    outgoing: int
+    incoming: int
+    trigger: str
+    planned: int
+
+
+@dataclass(frozen=True)
+class RollStep:
+    """One row of the ledger. `measured` is NEVER where no session has both settles."""
+
+    decision: Decision
+    step: int
+    measured: int
+    effective: int
+    incoming: int
+    weight_before: float
+    weight_after: float
+    outgoing_settle: float
+    incoming_settle: float
+    is_stale: bool = False
+    postponed: int = 0
+
+    @property
+    def gap(self) -> float:
+        """(weight after - weight before) x (incoming - outgoing settle)."""
+        return (self.weight_after - self.weight_before) * (self.incoming_settle - self.outgoing_settle)
+
+    @property
+    def ratio(self) -> float:
+        """Value of the new mix over the old one; NaN where a leg is at or below zero or unknown."""
+        if not (self.outgoing_settle > 0 and self.incoming_settle > 0):
+            return math.nan
+        after = (1 - self.weight_after) * self.outgoing_settle + self.weight_after * self.incoming_settle
+        before = (1 - self.weight_before) * self.outgoing_settle + self.weight_before * self.incoming_settle
+        return after / before
+
+
+@dataclass
+class Held:
+    """What one nearby of a plan holds through each session, and how it came to.
+
+    `start` is the first session held (NEVER where there is none). `contract`, `incoming` (T,) are contract
+    indices, -1 for none; `weight` (T,) is the incoming's share. `steps` is the ledger in order, `decisions`
+    every decision including those not effective within the data, `unused` the forces that found nothing to
+    decide.
+    """
+
+    nearby: int
+    start: int
+    contract: np.ndarray
+    incoming: np.ndarray
+    weight: np.ndarray
+    steps: list[RollStep] = field(default_factory=list)
+    decisions: list[Decision] = field(default_factory=list)
+    unused: list[str] = field(default_factory=list)
+    pending: Decision | None = None
+
+
+class _Market:
+    """What a plan may look at: eligible contracts, usable settles, volume and known open interest."""
+
+    def __init__(self, panel: Panel, usable: np.ndarray, settle: np.ndarray, plan: Plan) -> None:
+        self.plan, self.usable, self.settle = plan, usable, settle
+        self.length, count = panel.shape
+        months = plan.months or panel.market.delivery_months
+        has_bar = panel.bar >= 0
+        self.first_bar = np.where(has_bar.any(axis=0), has_bar.argmax(axis=0), self.length)
+        listed = np.array([delivery_of(name).month in months for name in panel.contracts], dtype=bool)
+        self.eligible = np.flatnonzero(listed & (self.first_bar < self.length))
+        self.deadline = deadlines(panel, plan)
+        self.last_trade = panel.last_trade
+        self.volume = panel.field("volume")
+        lag = panel.market.open_interest_lag
+        self.known_interest = np.full((self.length, count), np.nan)
+        if lag < self.length:
+            self.known_interest[lag:] = panel.field("open_interest")[: self.length - lag]
+        self.forces = {
+            panel.contracts.index(force.outgoing): session_index(panel.sessions, panel.calendar, force.effective)
+            for force in plan.force
+            if force.outgoing in panel.contracts
+        }
+
+    def later(self, contract: int, session: int) -> np.ndarray:
+        """Eligible contracts after one, known at the close of a session, in delivery order."""
+        after = self.eligible[self.eligible > contract]
+        return after[self.first_bar[after] <= session]
+
+    def first_hold(self, start: int, after: int) -> tuple[int, int]:
+        """First session from `start`, and the contract, that rule 2 holds there; (NEVER, NEVER) for none."""
+        able = self.eligible[self.eligible > after]
+        if not len(able) or start >= self.length:
+            return NEVER, NEVER
+        sessions = np.arange(start, self.length)
+        open_to = self.usable[start:, able] & (self.deadline[able] > sessions[:, None])
+        rows = np.flatnonzero(open_to.any(axis=1))
+        if not len(rows):
+            return NEVER, NEVER
+        return int(sessions[rows[0]]), int(able[open_to[rows[0]].argmax()])
+
+    def incoming_from(self, outgoing: int, sessions: np.ndarray) -> np.ndarray:
+        """The contract a roll decided on each of the sessions would go into; NEVER where none is known."""
+        chosen = np.full(len(sessions), NEVER, dtype=np.int64)
+        after = self.eligible[self.eligible > outgoing]
+        if not len(after):
+            return chosen
+        for contract in after[::-1]:
+            chosen[sessions >= self.first_bar[contract]] = contract
+        if self.plan.incoming is Incoming.MOST_ACTIVE:
+            activity = self.volume if self.plan.trigger is Trigger.VOLUME else self.known_interest
+            values = activity[np.ix_(sessions, after)]
+            values = np.where(np.isnan(values) | (self.first_bar[after] > sessions[:, None]), -np.inf, values)
+            best = values.argmax(axis=1)
+            known = values[np.arange(len(sessions)), best] > -np.inf
+            chosen = np.where(known, after[best], chosen)
+        return chosen
+
+    def fires(self, outgoing: int, incoming: np.ndarray, sessions: np.ndarray) -> np.ndarray:
+        """Whether the trigger held on each of the last `confirm` sessions, for each of the sessions."""
+        if self.plan.trigger is Trigger.CALENDAR:
+            return np.zeros(len(sessions), dtype=bool)
+        held = incoming != NEVER
+        for back in range(self.plan.confirm):
+            at = sessions - back
+            held &= (at >= 0) & self._exceeds(outgoing, incoming, np.maximum(at, 0))
+        return held
+
+    def _exceeds(self, outgoing: int, incoming: np.ndarray, at: np.ndarray) -> np.ndarray:
+        # A comparison with NaN is false: a missing value on either side is no.
+        by_volume = self.volume[at, incoming] > self.volume[at, outgoing]
+        by_interest = self.known_interest[at, incoming] > self.known_interest[at, outgoing]
+        made: np.ndarray = {
+            Trigger.VOLUME: by_volume,
+            Trigger.OPEN_INTEREST: by_interest,
+            Trigger.BOTH: by_volume & by_interest,
+            Trigger.EITHER: by_volume | by_interest,
+        }[self.plan.trigger]
+        return made
+
+
+def decide(market: _Market, outgoing: int, start: int, unused: list[int]) -> Decision | None:
+    """The next decision to leave a contract, from the close of `start` on; None where the data hold none."""
+    plan = market.plan
+    if start >= market.length:
+        return None
+    forced = market.forces.get(outgoing)
+    if forced is not None:
+        decided = forced - plan.delay
+        if decided >= start:
+            if decided >= market.length:
+                return None
+            incoming = int(market.incoming_from(outgoing, np.array([decided]))[0])
+            if incoming != NEVER:
+                return Decision(decided, outgoing, incoming, FORCED, forced)
+        unused.append(outgoing)
+        start = max(start, decided + 1)
+        if start >= market.length:
+            return None
+    sessions = np.arange(start, market.length)
+    incoming_by_session = market.incoming_from(outgoing, sessions)
+    fired = market.fires(outgoing, incoming_by_session, sessions)
+    is_due = sessions + plan.delay + plan.steps - 1 >= market.deadline[outgoing]
+    ready = np.flatnonzero((fired | is_due) & (incoming_by_session != NEVER))
+    if not len(ready):
+        return None
+    place = ready[0]
+    deadline_name = str(Trigger.CALENDAR) if plan.trigger is Trigger.CALENDAR else BACKSTOP
+    trigger = str(plan.trigger) if fired[place] else deadline_name
+    decided = int(sessions[place])
+    return Decision(decided, outgoing, int(incoming_by_session[place]), trigger, decided + plan.delay)
+
+
+def carry_out(market: _Market, decision: Decision) -> tuple[list[RollStep], bool]:
+    """Measure a decided roll step by step; returns its rows and whether it is complete within the data."""
+    steps = market.plan.steps
+    outgoing, incoming = decision.outgoing, decision.incoming
+    last = int(market.last_trade[outgoing])
+    rows: list[RollStep] = []
+    earliest = decision.planned - 1
+    for step in range(steps):
+        planned = max(decision.planned - 1 + step, earliest)
+        if planned >= market.length:
+            return rows, False
+        both = market.usable[:, outgoing] & market.usable[:, incoming]
+        found = np.flatnonzero(both[planned : max(last, planned - 1) + 1]) if planned <= last else np.empty(0, np.int64)
+        if len(found):
+            measured = planned + int(found[0])
+            if measured + 1 >= market.length:
+                return rows, False
+            rows.append(_row(market, decision, step, incoming, measured, measured + 1, (step + 1) / steps, rows))
+            earliest = measured + 1
+            continue
+        if last >= market.length:
+            return rows, False
+        return _close_stale(market, decision, rows, step, planned, last)
+    return rows, True
+
+
+def _row(
+    market: _Market, decision: Decision, step: int, incoming: int, measured: int, effective: int, weight: float,
+    earlier: list[RollStep], is_stale: bool = False,
+) -> RollStep:  # fmt: skip
+    settle = market.settle
+    planned = decision.planned - 1 + step
+    return RollStep(
+        decision, step + 1, measured, effective, incoming, earlier[-1].weight_after if earlier else 0.0, weight,
+        float(settle[measured, decision.outgoing]), float(settle[measured, incoming]), is_stale,
+        max(0, measured - planned) if not is_stale else max(0, effective - 1 - planned),
+    )  # fmt: skip
+
+
+def _close_stale(
+    market: _Market, decision: Decision, rows: list[RollStep], step: int, planned: int, last: int
+) -> tuple[list[RollStep], bool]:
+    """The outgoing's last trading session passed without two usable settles: measure on an earlier session."""
+    effective = max(planned + 1, last + 1)
+    if effective >= market.length:
+        return rows, False
+    until = min(last, planned - 1) + 1 if planned > last else last + 1
+    candidates = [decision.incoming]
+    if not rows:
+        candidates += [int(other) for other in market.later(decision.outgoing, last) if other > decision.incoming]
+    for incoming in candidates:
+        both = market.usable[:until, decision.outgoing] & market.usable[:until, incoming]
+        found = np.flatnonzero(both)
+        if len(found):
+            rows.append(_row(market, decision, step, incoming, int(found[-1]), effective, 1.0, rows, is_stale=True))
+            return rows, True
+    restart, contract = market.first_hold(last + 1, decision.outgoing)
+    if restart == NEVER:
+        return rows, False
+    before = rows[-1].weight_after if rows else 0.0
+    rows.append(RollStep(decision, step + 1, NEVER, restart, contract, before, 1.0, math.nan, math.nan))
+    return rows, True
+
+
+def lay_rolls(panel: Panel, usable: np.ndarray, settle: np.ndarray, plan: Plan) -> list[Held]:
+    """Carry a plan through a panel, for each of its nearbys.
+
+    `usable` (T, N) says where a settle may measure a roll or begin a hold; `settle` (T, N) are the clean
+    settles those rolls are measured with. Returns one Held for each of `plan.nearbys`, in that order.
+    """
+    market = _Market(panel, usable, settle, plan)
+    first = _lay_first(market, panel)
+    return [first if nearby == 1 else _lay_later(market, panel, first, nearby) for nearby in plan.nearbys]
+
+
+def _lay_first(market: _Market, panel: Panel) -> Held:
+    start, contract = market.first_hold(0, NEVER)
+    held = _empty(market.length, 1, start)
+    if start == NEVER:
+        return held
+    unused: list[int] = []
+    first, at = contract, start
+    while (decision := decide(market, contract, at, unused)) is not None:
+        held.decisions.append(decision)
+        rows, is_complete = carry_out(market, decision)
+        held.steps += rows
+        if not is_complete:
+            held.pending = decision
+            break
+        contract, at = rows[-1].incoming, rows[-1].effective
+    left = {step.decision.outgoing for step in held.steps if step.decision.trigger == FORCED}
+    left |= {decision.outgoing for decision in held.decisions if decision.trigger == FORCED}
+    waiting = {
+        outgoing for outgoing, effective in market.forces.items() if effective - market.plan.delay >= market.length
+    }
+    held.unused = [panel.contracts[c] for c in sorted(set(market.forces) - left - waiting)]
+    _fill(held, first)
+    return held
+
+
+def _lay_later(market: _Market, panel: Panel, first: Held, nearby: int) -> Held:
+    """Nearby n: the n-th eligible contract from the one held at nearby 1, rolled when that one is."""
+    events = [(first.start, int(first.contract[first.start]), "", first.start)] if first.start != NEVER else []
+    done = {step.decision: step.incoming for step in first.steps}
+    events += [(d.decided, done.get(d, d.incoming), d.trigger, d.planned) for d in first.decisions]
+    held = _empty(market.length, nearby, NEVER)
+    holding, free_from, begun = NEVER, 0, NEVER
+    for number, (decided, base, trigger, planned) in enumerate(events):
+        until = events[number + 1][0] if number + 1 < len(events) else market.length
+        known, target = _target(market, base, nearby, decided, until)
+        if known == NEVER or target == holding:
+            continue
+        if holding == NEVER:
+            held.start, holding, begun = max(known, first.start), target, target
+            free_from = held.start
+            continue
+        if target < holding:
+            continue
+        decided_on = max(known, decided)
+        on_time = planned if known == decided else known + 1
+        decision = Decision(
+            decided_on, holding, target, trigger or str(market.plan.trigger), max(on_time, free_from + 1)
+        )
+        held.decisions.append(decision)
+        rows, is_complete = carry_out(market, decision)
+        if rows and until < market.length and rows[0].effective - 1 >= until and number + 1 < len(events):
+            # Not one step measured before nearby 1 decides again: the later roll takes its place.
+            continue
+        if not rows and not is_complete and number + 1 < len(events):
+            continue
+        held.steps += rows
+        if not is_complete:
+            held.pending = decision
+            break
+        holding, free_from = rows[-1].incoming, rows[-1].effective
+    if begun != NEVER:
+        _fill(held, begun)
+    return held
+
+
+def _target(market: _Market, base: int, nearby: int, decided: int, until: int) -> tuple[int, int]:
+    """The n-th eligible contract from `base` and the first session from `decided`, before `until`, that knows it."""
+    after = market.eligible[market.eligible >= base]
+    listed = np.maximum(market.first_bar[after], decided)
+    listed[0] = decided
+    if len(after) < nearby:
+        return NEVER, NEVER
+    known = int(np.sort(listed)[nearby - 1])
+    if known >= until:
+        return NEVER, NEVER
+    return known, int(after[listed <= known][nearby - 1])
+
+
+def _empty(length: int, nearby: int, start: int) -> Held:
+    nothing = np.full(length, NEVER, dtype=np.int64)
+    return Held(nearby, start, nothing, nothing.copy(), np.zeros(length))
+
+
+def _fill(held: Held, first: int) -> None:
+    """Lay the ledger out over the sessions."""
+    held.contract[held.start :] = first
+    for step in held.steps:
+        at = slice(step.effective, None)
+        if step.weight_after >= 1.0:
+            held.contract[at], held.incoming[at], held.weight[at] = step.incoming, NEVER, 0.0
+        else:
+            held.contract[at], held.incoming[at] = step.decision.outgoing, step.incoming
+            held.weight[at] = step.weight_after

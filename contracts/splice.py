@@ -1,0 +1,185 @@
+"""Held weights + panel -> unadjusted, back-adjusted and ratio-adjusted series.
+
+Belongs here: the arithmetic of design section "Splice", and the two identities it must keep. Does not belong
+here: which contract is held (`rolls.py`), which settle is clean (`repairs.py`).
+"""
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+
+from contracts.errors import IdentityError
+from contracts.rolls import NEVER, Held
+
+LONGEST_CARRY = 3
+REPORTED, REPAIRED, CARRIED, MISSING = range(4)
+STATUS_NAMES = np.array(["reported", "repaired", "carried", "missing"])
+_TOLERANCE = 1e-9
+
+
+@dataclass(frozen=True, eq=False)
+class Series:
+    """One nearby of one plan, from its first held session on; every array is (T - start,).
+
+    `status` holds indices into STATUS_NAMES. NaN where a value does not exist.
+    """
+
+    start: int
+    settle: np.ndarray
+    shift: np.ndarray
+    scale: np.ndarray
+    back_adjusted: np.ndarray
+    ratio_adjusted: np.ndarray
+    change: np.ndarray
+    simple_return: np.ndarray
+    growth: np.ndarray
+    rolled: np.ndarray
+    status: np.ndarray
+
+
+def carry_forward(settle: np.ndarray, is_repaired: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Carry each contract's settle over at most three sessions without one.
+
+    Takes clean settles (T, N), NaN where absent or masked; returns the carried ones (T, N) and how each
+    stands (T, N), an index into STATUS_NAMES.
+    """
+    length = len(settle)
+    sessions = np.arange(length)[:, None]
+    last = np.maximum.accumulate(np.where(np.isnan(settle), -1, sessions), axis=0)
+    age = sessions - last
+    is_carried = (last >= 0) & (age > 0) & (age <= LONGEST_CARRY)
+    carried = np.where(is_carried, np.take_along_axis(settle, np.maximum(last, 0), axis=0), settle)
+    status = np.where(np.isnan(settle), MISSING, np.where(is_repaired, REPAIRED, REPORTED))
+    return carried, np.where(is_carried, CARRIED, status)
+
+
+def mix(held: Held, values: np.ndarray) -> np.ndarray:
+    """A field of the held contracts by their weights, (T - start,); NaN where a leg has none."""
+    rows = np.arange(held.start, len(values))
+    contract, incoming, weight = (part[held.start :] for part in (held.contract, held.incoming, held.weight))
+    outgoing_leg = values[rows, contract]
+    incoming_leg = np.where(incoming == NEVER, 0.0, values[rows, np.maximum(incoming, 0)])
+    return np.where(incoming == NEVER, outgoing_leg, (1 - weight) * outgoing_leg + weight * incoming_leg)
+
+
+def splice(held: Held, carried: np.ndarray, status: np.ndarray) -> Series:
+    """Lay the held contracts into one series.
+
+    `carried` and `status` (T, N) come from `carry_forward`. Raises ValueError where nothing was ever held.
+    """
+    if held.start == NEVER:
+        raise ValueError("nothing was held")
+    start, length = held.start, len(carried)
+    rows = np.arange(start, length)
+    settle = mix(held, carried)
+    row_status = status[rows, held.contract[start:]]
+    second = np.where(held.incoming[start:] == NEVER, REPORTED, status[rows, np.maximum(held.incoming[start:], 0)])
+    row_status = np.maximum(row_status, second)
+    shift, scale, is_cut = _later_rolls(held, start, length)
+    base = _held_before(held, carried, settle)
+    change = settle - base
+    with np.errstate(invalid="ignore", divide="ignore"):
+        simple_return = np.where((settle > 0) & (base > 0), settle / base - 1.0, np.nan)
+    growth = _growth(simple_return, settle, base, scale, is_cut)
+    rolled = np.zeros(length - start, dtype=bool)
+    for step in held.steps:
+        rolled[step.effective - start] = True
+    return Series(
+        start, settle, shift, scale, settle + shift, settle * scale, change, simple_return, growth, rolled, row_status
+    )
+
+
+def _later_rolls(held: Held, start: int, length: int) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Shift and scale of every session, and a mask of those from which the unbroken scale runs."""
+    shift, scale = np.zeros(length - start), np.ones(length - start)
+    gaps: list[float] = []
+    product, is_whole = 1.0, True
+    total = 0.0
+    first_whole = 0
+    until = length
+    for step in reversed(held.steps):
+        shift[step.effective - start : until - start] = total
+        scale[step.effective - start : until - start] = product if is_whole else math.nan
+        until = step.effective
+        gaps.append(step.gap)
+        # fsum is exact until its one rounding, so that the sum can be done again with a pencil.
+        total = math.fsum(gaps)
+        product *= step.ratio
+        if is_whole and math.isnan(product):
+            is_whole, first_whole = False, step.effective - start
+    shift[: until - start] = total
+    scale[: until - start] = product if is_whole else math.nan
+    return shift, scale, np.arange(length - start) >= first_whole
+
+
+def _held_before(held: Held, carried: np.ndarray, settle: np.ndarray) -> np.ndarray:
+    """Value of each session's holding on the last earlier session that has a price, (T - start,).
+
+    On the effective session of a roll measured too early, the incoming's settle of the session before is
+    taken as the outgoing's plus their difference on the measuring session.
+    """
+    start, length = held.start, len(carried)
+    count = length - start
+    priced = np.maximum.accumulate(np.where(np.isnan(settle), -1, np.arange(count)))
+    before = np.concatenate(([-1], priced[:-1]))
+    at = np.maximum(before, 0) + start
+    contract, incoming, weight = (part[start:] for part in (held.contract, held.incoming, held.weight))
+    outgoing_leg = carried[at, contract]
+    incoming_leg = np.where(incoming == NEVER, 0.0, carried[at, np.maximum(incoming, 0)])
+    base = np.where(incoming == NEVER, outgoing_leg, (1 - weight) * outgoing_leg + weight * incoming_leg)
+    base = np.where(before < 0, np.nan, base)
+    for step in held.steps:
+        place = step.effective - start
+        if before[place] < 0:
+            continue
+        if step.measured == NEVER:
+            base[place] = math.nan
+        elif step.is_stale or step.measured != before[place] + start:
+            base[place] = settle[before[place]] + step.gap
+    return base
+
+
+def _growth(
+    simple_return: np.ndarray, settle: np.ndarray, base: np.ndarray, scale: np.ndarray, is_whole: np.ndarray
+) -> np.ndarray:
+    """Compounded return, 100 on its first session; it begins after the last break."""
+    priced = ~np.isnan(settle)
+    breaks = np.flatnonzero(priced & (settle <= 0))
+    first = int(np.argmax(is_whole & ~np.isnan(scale))) if (is_whole & ~np.isnan(scale)).any() else len(settle)
+    if len(breaks):
+        first = max(first, int(breaks[-1]) + 1)
+    growth = np.full(len(settle), np.nan)
+    places = np.flatnonzero(priced[first:]) + first
+    if len(places):
+        returns = simple_return[places]
+        returns[0] = 0.0
+        growth[places] = 100.0 * np.cumprod(1.0 + returns)
+    return growth
+
+
+def check_identities(series: Series, label: str) -> None:
+    """Raise IdentityError unless the adjusted series move as the held position does.
+
+    On every pair of neighbouring priced sessions the back-adjusted change is the held position's change and
+    the ratio-adjusted return its return; both may differ by rounding only.
+    """
+    back = series.back_adjusted
+    places = np.flatnonzero(~np.isnan(back))
+    size = np.maximum(1.0, np.abs(back[places]))
+    off = np.abs(np.diff(back[places]) - series.change[places][1:])
+    _refuse(off > _TOLERANCE * size[1:], places, label, "back-adjusted change is not the held position's change")
+    places = np.flatnonzero(~np.isnan(series.ratio_adjusted) & ~np.isnan(series.simple_return))
+    follows = places[1:][np.diff(places) == 1] if len(places) else places
+    ratio = series.ratio_adjusted[follows] / series.ratio_adjusted[follows - 1] - 1.0
+    off = np.abs(ratio - series.simple_return[follows])
+    _refuse(
+        off > _TOLERANCE * np.maximum(1.0, np.abs(ratio)), follows, label, "ratio-adjusted return is not its return"
+    )
+
+
+def _refuse(wrong: np.ndarray, places: np.ndarray, label: str, text: str) -> None:
+    found = np.flatnonzero(wrong)
+    if len(found):
+        at = int(places[min(int(found[0]) + 1, len(places) - 1)])
+        raise IdentityError(f"{label}, session {at} of the series: {text}; nothing of this market is published")

@@ -1,0 +1,1 @@
+"""What holds for every market and every plan, tried on random ones."""

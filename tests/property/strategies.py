@@ -1,0 +1,182 @@
+"""Random markets and random plans, shared by every property.
+
+Belongs here: what can happen to a market, in all its mixtures. Does not belong here: what must hold of it.
+The shape of a market is drawn value by value, so that a failing example shrinks to few sessions and
+contracts; its cells are filled from one seed, so that drawing stays quick.
+"""
+
+import random
+from dataclasses import dataclass
+
+from hypothesis import strategies as st
+
+from tests.reference.plain_market import Cell, PlainMarket, PlainPlan
+from tests.reference.small import weekdays
+
+TRIGGERS = ("volume", "open interest", "both", "either", "calendar")
+_DELIVERIES = tuple((year, month) for year in (2024, 2025) for month in range(1, 13))
+
+
+@dataclass(frozen=True)
+class Listing:
+    """One contract: sessions from the one before, listed and dying early or late, and its notice day."""
+
+    after_previous: int
+    listed: int
+    dies_early: int
+    notice: int
+    first_delivery_gap: int
+
+
+@dataclass(frozen=True)
+class Noise:
+    """Shares of bars, settles and volumes that are absent, unusable, masked or repaired; how often values tie."""
+
+    no_bar: float
+    no_settle: float
+    no_activity: float
+    suspect: float
+    masked: float
+    declared: float
+    highest_activity: int
+    lowest_level: int
+
+
+listings = st.builds(
+    Listing,
+    after_previous=st.sampled_from([4, 5, 7, 9, 2, 1, 0]),
+    listed=st.sampled_from([0, 0, 0, 0, 3, 8, 15, 24]),
+    dies_early=st.sampled_from([0, 0, 0, 0, 1, 2, 5, 30]),
+    notice=st.integers(-6, 2),
+    first_delivery_gap=st.integers(1, 3),
+)
+shares = st.sampled_from([0.0, 0.0, 0.0, 0.05, 0.3, 0.7])
+noises = st.builds(
+    Noise,
+    no_bar=shares,
+    no_settle=shares,
+    no_activity=shares,
+    suspect=shares,
+    masked=st.sampled_from([0.0, 0.0, 0.0, 0.1, 0.4]),
+    declared=st.sampled_from([0.0, 0.1]),
+    highest_activity=st.sampled_from([0, 1, 3, 1000]),
+    lowest_level=st.sampled_from([-8, 100, 100, 100]),
+)
+
+
+@st.composite
+def markets(draw: st.DrawFn, longest: int = 32) -> PlainMarket:
+    """A market of 1 to 6 contracts, whose last trades do not fall, over 1 to `longest` sessions."""
+    count = draw(st.sampled_from([longest, longest, longest, longest, longest * 2 // 3, longest * 2 // 3, longest // 3, 1]))
+    size = draw(st.sampled_from([3, 4, 5, 6, 4, 5, 2, 1]))
+    drawn = [draw(listings) for _ in range(size)]
+    noise = draw(noises)
+    has_notice = draw(st.booleans())
+    lag = draw(st.integers(0, 2))
+    first_last_trade = draw(st.sampled_from([5, 8, 12, 4, 9, 7, 6, 2, -2]))
+    seed = draw(st.integers(0, 2**32 - 1))
+    return fill(count, drawn, noise, has_notice, lag, first_last_trade, random.Random(seed))
+
+
+def fill(
+    count: int,
+    drawn: list[Listing],
+    noise: Noise,
+    has_notice: bool,
+    lag: int,
+    first_last_trade: int,
+    chance: random.Random,
+) -> PlainMarket:
+    """Fill the cells of a market of a given shape."""
+    contracts: list[str] = []
+    last_trade: dict[str, int] = {}
+    notice: dict[str, int] = {}
+    delivery, last = 0, first_last_trade
+    for position, listing in enumerate(drawn):
+        delivery += listing.first_delivery_gap
+        last += listing.after_previous if position else 0
+        year, month = _DELIVERIES[delivery]
+        name = f"XX-{year}-{month:02d}"
+        contracts.append(name)
+        last_trade[name], notice[name] = last, last + listing.notice
+    market = PlainMarket(
+        weekdays(count), contracts, {}, {}, {}, set(), set(), last_trade, notice if has_notice else None, lag, {}
+    )
+    walk = float(noise.lowest_level)
+    levels = []
+    for _ in range(count):
+        walk += chance.randint(-6, 6) / 4
+        levels.append(walk)
+    for position, (name, listing) in enumerate(zip(contracts, drawn, strict=True)):
+        first = listing.listed
+        end = min(count - 1, last_trade[name] - listing.dies_early)
+        for t in range(first, end + 1):
+            if chance.random() < noise.no_bar:
+                continue
+            _fill_cell(market, (name, t), levels[t] + 2 * position + chance.randint(-2, 2) / 4, noise, chance)
+    return market
+
+
+def _fill_cell(market: PlainMarket, cell: Cell, price: float, noise: Noise, chance: random.Random) -> None:
+    market.bars.add(cell)
+    if chance.random() >= noise.no_activity:
+        market.volume[cell] = float(chance.randint(0, noise.highest_activity))
+    if chance.random() >= noise.no_activity:
+        market.open_interest[cell] = float(chance.randint(0, noise.highest_activity))
+    for values, distance in ((market.open, 0.0), (market.high, 1.0), (market.low, -1.0)):
+        if chance.random() >= noise.no_settle:
+            values[cell] = price + distance
+    if chance.random() < noise.no_settle:
+        return
+    market.settle[cell] = price
+    if chance.random() < noise.masked:
+        return
+    if chance.random() < noise.suspect:
+        market.prices[cell] = price + 0.5
+        market.repaired.add(cell)
+        return
+    market.usable.add(cell)
+    market.prices[cell] = price
+    if chance.random() < noise.declared:
+        market.prices[cell] = price - 0.75
+        market.repaired.add(cell)
+
+
+@st.composite
+def plans(draw: st.DrawFn, market: PlainMarket) -> PlainPlan:
+    """A plan that a desk would accept for the market."""
+    before = draw(st.sampled_from(["last trade", "first notice", "earlier"])) if market.first_notice else "last trade"
+    delay = draw(st.integers(1, 3))
+    deliveries = sorted({int(name[-2:]) for name in market.contracts})
+    chosen_months = st.sets(st.sampled_from(deliveries), min_size=1).map(lambda months: tuple(sorted(months)))
+    months = draw(st.one_of(st.none(), st.none(), chosen_months))
+    may_force = [
+        (name, min(last, len(market.sessions) - 1))
+        for name, last in market.last_trade.items()
+        if last >= 0 and (months is None or int(name[-2:]) in months)
+    ]
+    force: tuple[tuple[str, int], ...] = ()
+    if may_force:
+        most = draw(st.sampled_from([0, 0, 1, 2]))
+        chosen = draw(st.lists(st.sampled_from(may_force), max_size=most, unique_by=lambda pair: pair[0]))
+        force = tuple((name, draw(st.integers(0, latest))) for name, latest in chosen)
+    return PlainPlan(
+        name="drawn",
+        trigger=draw(st.sampled_from(TRIGGERS)),
+        confirm=draw(st.sampled_from([1, 2, 3])),
+        delay=delay,
+        steps=draw(st.sampled_from([1, 1, 2, 3, 5])),
+        backstop=draw(st.sampled_from([0, 0, 1, 2, 4, 6])),
+        before=before,
+        incoming=draw(st.sampled_from(["next", "most active"])),
+        months=months,
+        nearbys=(1, 2, 3),
+        force=force,
+    )
+
+
+@st.composite
+def markets_and_plans(draw: st.DrawFn, longest: int = 32) -> tuple[PlainMarket, PlainPlan]:
+    """A market and a plan for it."""
+    market = draw(markets(longest))
+    return market, draw(plans(market))

@@ -1,0 +1,81 @@
+"""What holds of the plain telling on every random market, whatever the real code does."""
+
+from hypothesis import given
+
+from tests.property.strategies import markets_and_plans
+from tests.reference.plain_market import PlainMarket, PlainPlan, truncate
+from tests.reference.plain_rolls import lay_plain
+from tests.reference.plain_splice import splice_plain
+
+TINY = 1e-9
+
+
+def is_near(one: float, other: float) -> bool:
+    """Equal to 1e-9, absolute near zero and relative beyond one."""
+    return abs(one - other) <= TINY * max(1.0, abs(one), abs(other))
+
+
+@given(markets_and_plans())
+def test_the_back_adjusted_change_is_the_held_positions_change(drawn: tuple[PlainMarket, PlainPlan]) -> None:
+    market, plan = drawn
+    for chain in lay_plain(market, plan).chains.values():
+        last = None
+        for row in splice_plain(market, chain):
+            if row["back_adjusted"] is None:
+                assert row["settle"] is None or row["shift"] is None
+                continue
+            if last is not None:
+                assert is_near(row["back_adjusted"] - last, row["change"])
+            last = row["back_adjusted"]
+
+
+@given(markets_and_plans())
+def test_the_ratio_adjusted_return_is_the_held_positions_return(drawn: tuple[PlainMarket, PlainPlan]) -> None:
+    market, plan = drawn
+    for chain in lay_plain(market, plan).chains.values():
+        last = None
+        for row in splice_plain(market, chain):
+            if row["ratio_adjusted"] is None:
+                continue
+            if last is not None and row["simple_return"] is not None:
+                assert is_near(row["ratio_adjusted"] / last - 1, row["simple_return"])
+            last = row["ratio_adjusted"]
+
+
+@given(markets_and_plans())
+def test_rolls_only_go_forward(drawn: tuple[PlainMarket, PlainPlan]) -> None:
+    market, plan = drawn
+    for chain in lay_plain(market, plan).chains.values():
+        held = chain.first
+        for row in chain.rows:
+            assert row["outgoing"] == held
+            assert market.contracts.index(row["incoming"]) > market.contracts.index(row["outgoing"])
+            assert row["decided_on"] < row["effective_on"] < len(market.sessions)
+            assert row["measured_on"] is None or row["measured_on"] < row["effective_on"]
+            held = row["incoming"] if row["weight_after"] == 1.0 else held
+
+
+@given(markets_and_plans())
+def test_a_market_cut_at_any_decision_decides_the_same_up_to_it(drawn: tuple[PlainMarket, PlainPlan]) -> None:
+    market, plan = drawn
+    whole = lay_plain(market, plan)
+    ends = {decision.decided for chain in whole.chains.values() for decision in chain.decisions}
+    for end in sorted(ends):
+        cut = lay_plain(truncate(market, end), plan)
+        for nearby, chain in whole.chains.items():
+            assert cut.chains[nearby].decisions == [d for d in chain.decisions if d.decided <= end]
+            assert cut.chains[nearby].rows == [row for row in chain.rows if row["effective_on"] <= end]
+
+
+@given(markets_and_plans())
+def test_every_nearby_holds_a_later_contract_than_the_one_before_it_at_its_start(
+    drawn: tuple[PlainMarket, PlainPlan],
+) -> None:
+    market, plan = drawn
+    chains = lay_plain(market, plan).chains
+    for nearby in (2, 3):
+        nearer, farther = chains[nearby - 1], chains[nearby]
+        if farther.start is None:
+            continue
+        assert nearer.start is not None
+        assert nearer.start <= farther.start

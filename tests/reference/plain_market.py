@@ -1,0 +1,78 @@
+"""One market and one plan as plain dictionaries, for the slow telling of the rules.
+
+Belongs here: data without behaviour of the craft. Does not belong here: any import from `contracts/`.
+"""
+
+import datetime
+from dataclasses import dataclass, field, replace
+
+Cell = tuple[str, int]
+
+
+@dataclass
+class PlainMarket:
+    """Bars of one market by (contract, session index); a cell that is not there has no value.
+
+    `contracts` stand in delivery order and end in their month, as in `NWHT-2025-03`. `settle` is as reported,
+    `prices` is clean before anything is carried, `usable` are the settles a gap may be measured on, `repaired`
+    the clean prices that are not the reported ones. `last_trade` and `first_notice` are session indices that
+    may lie before 0 or after the last session.
+    """
+
+    sessions: list[datetime.date]
+    contracts: list[str]
+    settle: dict[Cell, float]
+    volume: dict[Cell, float]
+    open_interest: dict[Cell, float]
+    bars: set[Cell]
+    usable: set[Cell]
+    last_trade: dict[str, int]
+    first_notice: dict[str, int] | None
+    open_interest_lag: int
+    prices: dict[Cell, float]
+    open: dict[Cell, float] = field(default_factory=dict)
+    high: dict[Cell, float] = field(default_factory=dict)
+    low: dict[Cell, float] = field(default_factory=dict)
+    repaired: set[Cell] = field(default_factory=set)
+
+
+@dataclass(frozen=True)
+class PlainPlan:
+    """A roll plan; `force` holds (outgoing contract, index of the effective session)."""
+
+    name: str
+    trigger: str
+    confirm: int = 1
+    delay: int = 1
+    steps: int = 1
+    backstop: int = 0
+    before: str = "last trade"
+    incoming: str = "next"
+    months: tuple[int, ...] | None = None
+    nearbys: tuple[int, ...] = (1,)
+    force: tuple[tuple[str, int], ...] = ()
+
+
+def truncate(market: PlainMarket, last: int) -> PlainMarket:
+    """The market as it was known at the close of session `last`."""
+
+    def cut(cells: dict[Cell, float]) -> dict[Cell, float]:
+        return {cell: value for cell, value in cells.items() if cell[1] <= last}
+
+    def cut_set(cells: set[Cell]) -> set[Cell]:
+        return {cell for cell in cells if cell[1] <= last}
+
+    return replace(
+        market,
+        sessions=market.sessions[: last + 1],
+        settle=cut(market.settle),
+        volume=cut(market.volume),
+        open_interest=cut(market.open_interest),
+        prices=cut(market.prices),
+        open=cut(market.open),
+        high=cut(market.high),
+        low=cut(market.low),
+        bars=cut_set(market.bars),
+        usable=cut_set(market.usable),
+        repaired=cut_set(market.repaired),
+    )

@@ -33,13 +33,17 @@ def contract_days(market: Market, first_year: int, last_year: int) -> list[dict[
         for month in market.delivery_months:
             delivery = Delivery(year, month)
             last, notice = last_trade_day(market, delivery), first_notice_day(market, delivery)
-            held_by = {name: plan for name, plan in market.plans.items() if month in (plan.months or market.delivery_months)}
+            held_by = {
+                name: plan for name, plan in market.plans.items() if month in (plan.months or market.delivery_months)
+            }
             rows.append(
                 {
                     "contract": contract_name(market.code, delivery),
                     "last_trade": last,
                     "first_notice": notice,
-                    "deadlines": {name: _deadline(market, plan, last, notice) for name, plan in sorted(held_by.items())},
+                    "deadlines": {
+                        name: _deadline(market, plan, last, notice) for name, plan in sorted(held_by.items())
+                    },
                 }
             )
     return rows

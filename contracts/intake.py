@@ -107,8 +107,8 @@ def split_file(raw: RawFile) -> FileRows:
         reason = _row_trouble(fields, width, line_text)
         if is_torn and line + line_text.count("\n") == last_line:
             reason = TORN
-        if reason:
-            rows.rejects.append(Reject(line, line_text, reason, raw.claim.contract))
+        if reason or fields is None:
+            rows.rejects.append(Reject(line, line_text, reason or "", raw.claim.contract))
             continue
         rows.lines.append(line)
         rows.texts.append(line_text)
@@ -330,6 +330,8 @@ def _numbers(reader: _Reader, name: str, market: Market) -> np.ndarray:
 def scale_prices(values: np.ndarray, factor: float) -> np.ndarray:
     """Prices times a factor; a factor such as 0.01 divides by 100, so that decimal prices stay the nearest doubles."""
     inverse = round(1.0 / factor)
-    if factor < 1.0 and abs(inverse * factor - 1.0) < 1e-12:
-        return values / inverse
-    return values * factor
+    is_inverse = factor < 1.0 and abs(inverse * factor - 1.0) < 1e-12
+    scaled = values / inverse if is_inverse else values * factor
+    # Ten decimals of a number below 100,000 are still exact, so that rounding gives the nearest double.
+    with np.errstate(invalid="ignore"):
+        return np.where(np.abs(scaled) < 1e5, np.round(scaled, 10), scaled)

@@ -11,7 +11,7 @@ from enum import StrEnum
 from functools import lru_cache
 from typing import Annotated, Any
 
-from dateutil.rrule import rrulestr
+from dateutil.rrule import rrule, rrulestr
 from pydantic import AfterValidator, BeforeValidator, Field, model_validator
 
 from contracts.declared import CODE, PLAIN_NAME, Declared, line_of, read_toml, validate
@@ -121,9 +121,7 @@ class Closed(StrEnum):
 class Step(Declared):
     """One step of a day rule; exactly one of its keys is given."""
 
-    if_closed: Annotated[
-        Closed | None, BeforeValidator(lambda v: None if v is None else _as_member(Closed).func(v))
-    ] = None  # type: ignore[call-arg]
+    if_closed: Annotated[Closed | None, _as_member(Closed)] = None
     business_days: int | None = None
     days: int | None = None
     not_eve_of: MonthDays | None = None
@@ -132,9 +130,8 @@ class Step(Declared):
     def _exactly_one(self) -> "Step":
         given = [name for name in type(self).model_fields if getattr(self, name) is not None]
         if len(given) != 1:
-            raise ValueError(
-                f"seen {', '.join(given) or 'nothing'}; expected exactly one of if_closed, business_days, days, not_eve_of"
-            )
+            expected = "exactly one of if_closed, business_days, days, not_eve_of"
+            raise ValueError(f"seen {', '.join(given) or 'nothing'}; expected {expected}")
         return self
 
 
@@ -153,8 +150,11 @@ def rule_day(rule: str, year: int, month: int) -> datetime.date:
     return days[0]
 
 
-def _recurrence(rule: str, first: datetime.datetime, end: datetime.datetime) -> Any:
-    return rrulestr(rule, dtstart=first).replace(until=end)
+def _recurrence(rule: str, first: datetime.datetime, end: datetime.datetime) -> rrule:
+    made = rrulestr(rule, dtstart=first)
+    if not isinstance(made, rrule):
+        raise ValueError("a set of rules")
+    return made.replace(until=end)
 
 
 def _readable_rule(rule: str) -> str:

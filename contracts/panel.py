@@ -120,7 +120,7 @@ def _disagreeing_days(
 def rescale(market: Market, bars: Bars) -> np.ndarray:
     """The bars' values with prices on the market's present scale, (n, 6)."""
     values = bars.values
-    prices = [BAR_FIELDS.index(name) for name in PRICE_FIELDS]
+    prices = np.array([BAR_FIELDS.index(name) for name in PRICE_FIELDS])
     for change in market.rescaled:
         earlier = bars.session < day_number(change.before)
         if earlier.any():

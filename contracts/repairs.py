@@ -83,8 +83,7 @@ def clean_panel(panel: Panel, bars: Bars, repairs: tuple[DeclaredRepair, ...], q
             continue
         at = (verdict.session, verdict.contract)
         if verdict.power:
-            for name in ("open", "high", "low"):
-                values[BAR_FIELDS.index(name)][at] /= 10.0**verdict.power
+            _shift_back(values, at, settle[at], verdict.power)
     for verdict in verdicts:
         if verdict.ruling is Ruling.REFUTED:
             at = (verdict.session, verdict.contract)
@@ -116,7 +115,8 @@ def _make_declared(
         what = f"{label}, {day}: {repair.field}"
         if seen != repair.reported or at is None:
             now = "no such bar" if bar < 0 else f"{seen:g}"
-            message = f"{what}: the repair by {repair.by} expects {repair.reported:g} as reported, seen {now}; remove or renew it"
+            expects = f"the repair by {repair.by} expects {repair.reported:g} as reported"
+            message = f"{what}: {expects}, seen {now}; remove or renew it"
             found.append(
                 Finding(
                     Kind.REPAIR_REFUSED, Severity.BLOCK, message, market.code, label, None, repair.field,
@@ -146,6 +146,14 @@ def _cell(panel: Panel, contract: str, day: int) -> tuple[int, int] | None:
     if contract not in panel.contracts or session >= len(panel.sessions) or panel.sessions[session] != day:
         return None
     return session, panel.contracts.index(contract)
+
+
+def _shift_back(values: np.ndarray, at: tuple[int, int], settle: float, power: int) -> None:
+    """Move the decimal point of those prices of a bar that were shifted with its settle."""
+    for name in ("open", "high", "low"):
+        price = float(values[BAR_FIELDS.index(name)][at])
+        if price * settle > 0 and abs(math.log10(price / settle)) < 0.5:
+            values[BAR_FIELDS.index(name)][at] = round(price / 10.0**power, 10)
 
 
 def _drop_misfits(prices: np.ndarray, may_be_negative: bool, tick: float) -> None:

@@ -42,9 +42,8 @@ class OpenDays:
 
     def _inside(self, number: int) -> int:
         if not self.first <= number <= self.last:
-            raise CalendarError(
-                f"calendar {self.name} was asked for {day_of(number)}; it knows {day_of(self.first)} to {day_of(self.last)}"
-            )
+            known = f"{day_of(self.first)} to {day_of(self.last)}"
+            raise CalendarError(f"calendar {self.name} was asked for {day_of(number)}; it knows {known}")
         return number
 
     def is_open(self, number: int) -> bool:
@@ -69,8 +68,7 @@ class OpenDays:
     def shift(self, number: int, count: int) -> int:
         """The open day `count` open days later (earlier where negative) than the day, which need not be open itself."""
         self._inside(number)
-        side = "left" if count <= 0 else "right"
-        at = int(np.searchsorted(self.days, number, side=side))
+        at = int(np.searchsorted(self.days, number, side="left" if count <= 0 else "right"))
         target = at + count if count <= 0 else at + count - 1
         if count == 0:
             return number

@@ -28,7 +28,8 @@ def check_files(market: str, files: list[FileRows], is_old: list[bool]) -> list[
                 Finding(Kind.TORN_FILE, Severity.REVIEW, message, market, contract, action=Action.REJECTED, detail=path)
             )
         if others:
-            message = f"{path}: {len(others)} of {rows.row_count} rows cannot be read; line {others[0].line}: {others[0].reason}"
+            count = f"{len(others)} of {rows.row_count} rows cannot be read"
+            message = f"{path}: {count}; line {others[0].line}: {others[0].reason}"
             found.append(
                 Finding(
                     Kind.UNREADABLE_ROWS,
@@ -117,10 +118,11 @@ def check_days(panel: Panel, sessions_of_bars: "list[tuple[int, str, int]]") -> 
             kind, severity = Kind.NOT_A_SESSION, Severity.REVIEW
         found.append(Finding(kind, severity, message, market, contract, day_of(day), action=Action.REJECTED))
     for session in panel.disagreeing:
-        day = day_of(panel.sessions[session])
+        date = day_of(panel.sessions[session])
         count = int((panel.bar[session] >= 0).sum())
-        message = f"{market}, {day}: the calendar says closed, but {count} contracts, more than half, have a bar; taken as a session"
-        found.append(Finding(Kind.CALENDAR_DISAGREES, Severity.NOTE, message, market, session=day, score=float(count)))
+        text = f"the calendar says closed, but {count} contracts, more than half, have a bar; taken as a session"
+        message = f"{market}, {date}: {text}"
+        found.append(Finding(Kind.CALENDAR_DISAGREES, Severity.NOTE, message, market, session=date, score=float(count)))
     return found
 
 

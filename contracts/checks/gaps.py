@@ -36,7 +36,8 @@ def check_gaps(panel: Panel) -> list[Finding]:
             days = f"{day_of(panel.sessions[first])}"
             if last > first:
                 days += f" to {day_of(panel.sessions[last])}"
-            message = f"{label}, {days}: {count} session{'s' if count > 1 else ''} without a bar, while other contracts have theirs"
+            lacks = f"{count} session{'s' if count > 1 else ''} without a bar"
+            message = f"{label}, {days}: {lacks}, while other contracts have theirs"
             found.append(
                 Finding(
                     Kind.CONTRACT_MISSING, severity, message, market, label, day_of(panel.sessions[first]), "settle",

@@ -6,7 +6,7 @@ own bar. Does not belong here: what is put in its place (`repairs.py`).
 The statistic. With p the contract's last clean session before t, and m the median change from p to t of the
 nearest contracts that have both, the settle's distance is r = P(t) - (P(p) + m). Its scale is the largest of:
 the scaled MAD of those contracts' changes, the scaled MAD of the contract's own past 40 distances, and half a
-tick. Contracts of one market move together, so a wrong price stands alone and a true shock does not: common
+tick. (A newly listed contract is given three times the curve's usual distance in place of its own.) Contracts of one market move together, so a wrong price stands alone and a true shock does not: common
 practice, no source.
 """
 
@@ -26,6 +26,7 @@ _LONGEST_LOOK_BACK = 5
 _LONGEST_LOOK_AHEAD = 3
 _HISTORY = 40
 _LEAST_HISTORY = 8
+_NEWLY_LISTED = 3.0
 # A distance that shrinks to this share of itself has come back.
 _CAME_BACK = 0.35
 # log10 distance from a whole power of ten that still counts as one (about 15%).
@@ -67,16 +68,19 @@ class _Curve:
         self.clean = self.reported.copy()
         change = np.full(self.reported.shape, np.nan)
         change[1:] = self.reported[1:] - self.reported[:-1]
-        self.common = row_medians(_compact(change))
-        self.distance = change - self.common[:, None]
+        # One or two contracts are no curve: there a change is measured against none at all.
+        is_curve = np.count_nonzero(~np.isnan(change), axis=1) >= 3
+        common = np.where(is_curve, row_medians(_compact(change)), 0.0)
+        self.distance = change - common[:, None]
+        self.is_curve = is_curve
+        self.spread = MAD_SCALE * row_medians(_compact(np.abs(self.distance)))
 
     def candidates(self) -> np.ndarray:
         """Cells far enough from the common change to be worth a closer look, in order of session."""
         least = 0.8 * self.quality.refuted_ticks * self.tick
         size = np.abs(self.distance)
-        spread = MAD_SCALE * row_medians(_compact(size))
         with np.errstate(invalid="ignore"):
-            far = (size > least) & (size > 2.5 * spread[:, None])
+            far = (size > least) & ((size > 2.5 * self.spread[:, None]) | ~self.is_curve[:, None])
         return np.argwhere(far)
 
     def last_clean(self, row: int, contract: int) -> int:
@@ -97,10 +101,18 @@ class _Curve:
         return self.clean[row, others] - self.clean[since, others]
 
     def own_noise(self, row: int, contract: int) -> float:
-        """Scaled MAD about zero of the contract's past distances; 0 where it has too few."""
+        """Scaled MAD about zero of the contract's past distances.
+
+        A newly listed contract has no past; it is given three times the curve's own, for its first settles are the
+        least certain.
+        """
         past = self.distance[max(0, row - _HISTORY) : row, contract]
         past = past[~np.isnan(past)]
-        return float(MAD_SCALE * np.median(np.abs(past))) if len(past) >= _LEAST_HISTORY else 0.0
+        if len(past) >= _LEAST_HISTORY:
+            return float(MAD_SCALE * np.median(np.abs(past)))
+        curve = self.spread[max(0, row - _HISTORY) : row + 1]
+        curve = curve[~np.isnan(curve)]
+        return float(_NEWLY_LISTED * np.median(curve)) if len(curve) else 0.0
 
 
 def _compact(values: np.ndarray) -> np.ndarray:
@@ -167,6 +179,9 @@ def _judge(curve: _Curve, row: int, contract: int, is_impossible: bool) -> Verdi
     if score < quality.refuted_score or abs(distance) < quality.refuted_ticks * curve.tick:
         return None
     power = _power_of_ten(price, level, curve.tick)
+    if power and _is_nearer(curve, row, contract, price, level):
+        # The contract's last settle was the wrong one: this one stands where its neighbours do.
+        return Verdict(session, contract, Kind.CURVE_BREAK, Ruling.KEPT, _tidy(level), score)
     if power and not _range_reaches(curve, session, contract, level):
         return Verdict(session, contract, Kind.DECIMAL_SHIFT, Ruling.REFUTED, _tidy(expected), score, power)
     if not is_known:
@@ -207,6 +222,18 @@ def _power_of_ten(price: float, level: float, tick: float) -> int:
     exponent = math.log10(price / level)
     power = round(exponent)
     return power if abs(exponent - power) <= _POWER_TOLERANCE else 0
+
+
+def _is_nearer(curve: _Curve, row: int, contract: int, price: float, level: float) -> bool:
+    """Whether the neighbours stand nearer, in decades, to the settle than to what its own past expects."""
+    others = curve.clean[row].copy()
+    others[contract] = np.nan
+    places = np.flatnonzero(others * price > 0)
+    if len(places) < 2:
+        return False
+    nearest = places[np.argsort(np.abs(places - contract), kind="stable")[: curve.quality.nearest_contracts]]
+    around = float(np.median(others[nearest]))
+    return abs(math.log10(price / around)) < abs(math.log10(level / around))
 
 
 def _bar_range(curve: _Curve, session: int, contract: int) -> tuple[float, float]:

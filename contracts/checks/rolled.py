@@ -3,12 +3,12 @@
 Belongs here: findings about the ledger. Does not belong here: deciding or measuring a roll (`rolls.py`).
 """
 
+import datetime
 import math
-
-import numpy as np
+from dataclasses import dataclass
 
 from contracts.findings import Finding, Kind, Severity
-from contracts.markets import Plan, Trigger
+from contracts.markets import Plan
 from contracts.panel import Panel
 from contracts.rolls import BACKSTOP, NEVER, Held, RollStep
 from contracts.sessions import day_of
@@ -16,110 +16,71 @@ from contracts.sessions import day_of
 
 def check_rolls(panel: Panel, name: str, plan: Plan, held: Held) -> list[Finding]:
     """Rolls by deadline, postponed, stale, unmeasured or pending; unused forces; ratios that do not exist."""
-    found: list[Finding] = []
-    label = f"plan {name}, nearby {held.nearby}"
-
-    def add(
-        kind: Kind,
-        severity: Severity,
-        step_or_none: RollStep | None,
-        outgoing: str,
-        day: object,
-        text: str,
-        score: float | None = None,
-    ) -> None:
-        found.append(
-            Finding(
-                kind, severity, f"{outgoing}, {day}: {label}: {text}", panel.market.code, outgoing,
-                day if day is not None else None, score=score, detail=f"{name} {held.nearby} {step_or_none.step if step_or_none else ''}",
-            )
-        )  # fmt: skip
-
-    for step in held.steps:
-        outgoing, incoming = panel.contracts[step.decision.outgoing], panel.contracts[step.incoming]
-        day = day_of(panel.sessions[step.effective])
-        if step.measured == NEVER:
-            add(
-                Kind.ROLL_UNMEASURED,
-                Severity.BLOCK,
-                step,
-                outgoing,
-                day,
-                f"no session has usable settles of it and a later contract; the series is cut and begins anew with {incoming}",
-            )
-            continue
-        measured = day_of(panel.sessions[step.measured])
-        if step.is_stale:
-            add(
-                Kind.ROLL_MEASURED_STALE,
-                Severity.REVIEW,
-                step,
-                outgoing,
-                day,
-                f"no two usable settles up to its last trading session; the gap to {incoming} is measured on {measured}",
-                float(step.postponed),
-            )
-        elif step.postponed:
-            add(
-                Kind.ROLL_POSTPONED,
-                Severity.NOTE,
-                step,
-                outgoing,
-                day,
-                f"the roll to {incoming} waited {step.postponed} sessions for two usable settles, until {measured}",
-                float(step.postponed),
-            )
-        if math.isnan(step.ratio):
-            add(
-                Kind.RATIO_UNDEFINED,
-                Severity.REVIEW,
-                step,
-                outgoing,
-                day,
-                f"settles {step.outgoing_settle:g} and {step.incoming_settle:g} on {measured} have no ratio; ratio_adjusted, scale and growth are null before this roll",
-            )
-        if step.step == 1 and step.decision.trigger == BACKSTOP and plan.trigger is not Trigger.CALENDAR:
-            add(
-                Kind.ROLL_BY_DEADLINE,
-                Severity.NOTE,
-                step,
-                outgoing,
-                day,
-                f"rolled to {incoming} by the deadline, before its {plan.trigger} trigger",
-            )
+    teller = _Teller(panel, name, held.nearby)
+    found = [finding for step in held.steps for finding in _about_step(teller, plan, step)]
     if held.pending is not None:
         decision = held.pending
-        decided = day_of(panel.sessions[decision.decided])
-        text = f"a roll to {panel.contracts[decision.incoming]} is decided ({decision.trigger}) and takes effect after the end of the data"
-        add(Kind.ROLL_PENDING, Severity.NOTE, None, panel.contracts[decision.outgoing], decided, text)
+        incoming = panel.contracts[decision.incoming]
+        text = f"a roll to {incoming} is decided ({decision.trigger}) and takes effect after the end of the data"
+        day = day_of(panel.sessions[decision.decided])
+        found.append(teller.tell(Kind.ROLL_PENDING, Severity.NOTE, panel.contracts[decision.outgoing], day, text))
     for contract in held.unused:
-        day = next((force.effective for force in plan.force if force.outgoing == contract), None)
-        add(
-            Kind.FORCE_UNUSED,
-            Severity.REVIEW,
-            None,
-            contract,
-            day,
-            "the declared roll found the contract not held, or a roll under way",
-        )
+        day = next(force.effective for force in plan.force if force.outgoing == contract)
+        text = "the declared roll found the contract not held, or a roll under way"
+        found.append(teller.tell(Kind.FORCE_UNUSED, Severity.REVIEW, contract, day, text))
     if held.start == NEVER:
-        last = day_of(panel.sessions[-1])
-        found.append(
-            Finding(
-                Kind.ROLL_UNMEASURED, Severity.BLOCK, f"{panel.market.code}, {last}: {label}: no contract can ever be held",
-                panel.market.code, detail=f"{name} {held.nearby} start",
-            )
-        )  # fmt: skip
+        text = "no contract can ever be held"
+        found.append(teller.tell(Kind.ROLL_UNMEASURED, Severity.BLOCK, None, None, text))
     return found
 
 
-def held_cells(panel: Panel, held: Held) -> np.ndarray:
-    """Weight of every contract on every session, (T, N)."""
-    weights = np.zeros(panel.shape)
-    if held.start == NEVER:
-        return weights
-    rows = np.arange(held.start, panel.shape[0])
-    weights[rows, held.contract[held.start :]] = 1.0 - held.weight[held.start :]
-    moving = rows[held.incoming[held.start :] != NEVER]
-    weights[moving, held.incoming[moving]] = held.weight[moving]
-    return weights
+@dataclass(frozen=True)
+class _Teller:
+    """Words a finding about one nearby of one plan."""
+
+    panel: Panel
+    plan: str
+    nearby: int
+
+    def tell(
+        self, kind: Kind, severity: Severity, contract: str | None, day: datetime.date | None, text: str,
+        score: float | None = None, step: int | None = None,
+    ) -> Finding:  # fmt: skip
+        """The finding, told with its place first."""
+        market = self.panel.market.code
+        place = ", ".join(str(part) for part in (contract or market, day) if part is not None)
+        message = f"{place}: plan {self.plan}, nearby {self.nearby}: {text}"
+        detail = f"{self.plan} {self.nearby} {step or ''}"
+        return Finding(kind, severity, message, market, contract, day, score=score, detail=detail)
+
+
+def _about_step(teller: _Teller, plan: Plan, step: RollStep) -> list[Finding]:
+    """What is worth knowing of one row of the ledger."""
+    panel = teller.panel
+    outgoing, incoming = panel.contracts[step.decision.outgoing], panel.contracts[step.incoming]
+    day = day_of(panel.sessions[step.effective])
+
+    def tell(kind: Kind, severity: Severity, text: str, score: float | None = None) -> Finding:
+        return teller.tell(kind, severity, outgoing, day, text, score, step.step)
+
+    if step.measured == NEVER:
+        text = f"no session has usable settles of it and a later contract; the series begins anew with {incoming}"
+        return [tell(Kind.ROLL_UNMEASURED, Severity.BLOCK, text)]
+    found = []
+    measured, waited = day_of(panel.sessions[step.measured]), float(step.postponed)
+    if step.is_stale:
+        text = f"no two usable settles up to its last trading session; the gap to {incoming} is measured on {measured}"
+        found.append(tell(Kind.ROLL_MEASURED_STALE, Severity.REVIEW, text, waited))
+    elif step.postponed:
+        text = f"the roll to {incoming} waited {step.postponed} sessions for two usable settles, until {measured}"
+        found.append(tell(Kind.ROLL_POSTPONED, Severity.NOTE, text, waited))
+    if math.isnan(step.ratio):
+        text = (
+            f"settles {step.outgoing_settle:g} and {step.incoming_settle:g} on {measured} have no ratio; "
+            "ratio_adjusted, scale and growth are null before this roll"
+        )
+        found.append(tell(Kind.RATIO_UNDEFINED, Severity.REVIEW, text))
+    if step.step == 1 and step.decision.trigger == BACKSTOP:
+        text = f"rolled to {incoming} by the deadline, before its {plan.trigger} trigger"
+        found.append(tell(Kind.ROLL_BY_DEADLINE, Severity.NOTE, text))
+    return found

@@ -86,7 +86,8 @@ def _outside_range(panel: Panel) -> list[Finding]:
         label, day = panel.contracts[contract], day_of(panel.sessions[session])
         price = float(settle[session, contract])
         nearest = float(np.clip(price, low[session, contract], high[session, contract]))
-        message = f"{label}, {day}: settle {price:g} lies outside the session's range {low[session, contract]:g} to {high[session, contract]:g}"
+        span = f"{low[session, contract]:g} to {high[session, contract]:g}"
+        message = f"{label}, {day}: settle {price:g} lies outside the session's range {span}"
         found.append(
             Finding(
                 Kind.SETTLE_OUTSIDE_RANGE,
@@ -129,7 +130,8 @@ def _limits(panel: Panel, settle: np.ndarray) -> list[Finding]:
     at_limit = locked.sum(axis=1)
     for session in np.flatnonzero((alive >= 2) & (2 * at_limit > alive)):
         day = day_of(panel.sessions[session])
-        message = f"{market}, {day}: {at_limit[session]} of {alive[session]} contracts settled at the daily limit of {limit:g}; a fact, kept"
+        count = f"{at_limit[session]} of {alive[session]} contracts"
+        message = f"{market}, {day}: {count} settled at the daily limit of {limit:g}; a fact, kept"
         found.append(
             Finding(Kind.LIMIT_LOCKED, Severity.NOTE, message, market, session=day, score=float(at_limit[session]))
         )

@@ -5,13 +5,26 @@ The shape of a market is drawn value by value, so that a failing example shrinks
 contracts; its cells are filled from one seed, so that drawing stays quick.
 """
 
+import os
 import random
 from dataclasses import dataclass
 
+from hypothesis import settings
 from hypothesis import strategies as st
 
 from tests.reference.plain_market import Cell, PlainMarket, PlainPlan
 from tests.reference.small import weekdays
+
+# Every day the same quick examples; with ROPEWALK_LONG=1 in the environment many new ones.
+IS_LONG = os.environ.get("ROPEWALK_LONG") == "1"
+EFFORT = settings(
+    max_examples=20_000 if IS_LONG else 150,
+    derandomize=not IS_LONG,
+    deadline=None,
+    database=None,
+    print_blob=True,
+)
+WIDE_CASES = 50_000 if IS_LONG else 1000
 
 TRIGGERS = ("volume", "open interest", "both", "either", "calendar")
 _DELIVERIES = tuple((year, month) for year in (2024, 2025) for month in range(1, 13))
@@ -30,7 +43,7 @@ class Listing:
 
 @dataclass(frozen=True)
 class Noise:
-    """Shares of bars, settles and volumes that are absent, unusable, masked or repaired; how often values tie."""
+    """Shares of bars, settles and volumes that are absent, unusable, masked, repaired; how often they tie."""
 
     no_bar: float
     no_settle: float
@@ -67,7 +80,8 @@ noises = st.builds(
 @st.composite
 def markets(draw: st.DrawFn, longest: int = 32) -> PlainMarket:
     """A market of 1 to 6 contracts, whose last trades do not fall, over 1 to `longest` sessions."""
-    count = draw(st.sampled_from([longest, longest, longest, longest, longest * 2 // 3, longest * 2 // 3, longest // 3, 1]))
+    thirds = draw(st.sampled_from([3, 3, 3, 3, 2, 2, 1, 0]))
+    count = max(1, longest * thirds // 3)
     size = draw(st.sampled_from([3, 4, 5, 6, 4, 5, 2, 1]))
     drawn = [draw(listings) for _ in range(size)]
     noise = draw(noises)
@@ -100,7 +114,17 @@ def fill(
         contracts.append(name)
         last_trade[name], notice[name] = last, last + listing.notice
     market = PlainMarket(
-        weekdays(count), contracts, {}, {}, {}, set(), set(), last_trade, notice if has_notice else None, lag, {}
+        weekdays(count),
+        contracts,
+        {},
+        {},
+        {},
+        set(),
+        set(),
+        last_trade,
+        notice if has_notice else None,
+        lag,
+        {},
     )
     walk = float(noise.lowest_level)
     levels = []
@@ -142,19 +166,28 @@ def _fill_cell(market: PlainMarket, cell: Cell, price: float, noise: Noise, chan
         market.repaired.add(cell)
 
 
-@st.composite
-def plans(draw: st.DrawFn, market: PlainMarket) -> PlainPlan:
-    """A plan that a desk would accept for the market."""
-    before = draw(st.sampled_from(["last trade", "first notice", "earlier"])) if market.first_notice else "last trade"
-    delay = draw(st.integers(1, 3))
-    deliveries = sorted({int(name[-2:]) for name in market.contracts})
-    chosen_months = st.sets(st.sampled_from(deliveries), min_size=1).map(lambda months: tuple(sorted(months)))
-    months = draw(st.one_of(st.none(), st.none(), chosen_months))
-    may_force = [
+def _forceable(market: PlainMarket, months: tuple[int, ...] | None) -> list[tuple[str, int]]:
+    """Contracts a person may decide on, each with the latest effective session a desk accepts."""
+    return [
         (name, min(last, len(market.sessions) - 1))
         for name, last in market.last_trade.items()
         if last >= 0 and (months is None or int(name[-2:]) in months)
     ]
+
+
+@st.composite
+def plans(draw: st.DrawFn, market: PlainMarket) -> PlainPlan:
+    """A plan that a desk would accept for the market."""
+    before = (
+        draw(st.sampled_from(["last trade", "first notice", "earlier"]))
+        if market.first_notice
+        else "last trade"
+    )
+    delay = draw(st.integers(1, 3))
+    deliveries = sorted({int(name[-2:]) for name in market.contracts})
+    chosen_months = st.sets(st.sampled_from(deliveries), min_size=1).map(lambda months: tuple(sorted(months)))
+    months = draw(st.one_of(st.none(), st.none(), chosen_months))
+    may_force = _forceable(market, months)
     force: tuple[tuple[str, int], ...] = ()
     if may_force:
         most = draw(st.sampled_from([0, 0, 1, 2]))
@@ -180,3 +213,58 @@ def markets_and_plans(draw: st.DrawFn, longest: int = 32) -> tuple[PlainMarket, 
     """A market and a plan for it."""
     market = draw(markets(longest))
     return market, draw(plans(market))
+
+
+def wide_case(seed: int) -> tuple[PlainMarket, PlainPlan]:
+    """A market and a plan, every choice made evenly from one seed: no shrinking, no leaning to small ones."""
+    chance = random.Random(seed)
+    count, size = chance.choice([1, 5, 12, 20, 30, 40]), chance.choice([1, 2, 3, 4, 5, 6, 6])
+
+    def share() -> float:
+        return chance.choice([0, 0, 0, 0.05, 0.2, 0.5, 0.8])
+
+    drawn = [
+        Listing(
+            after_previous=chance.choice([0, 1, 2, 3, 5, 6, 8, 9]),
+            listed=chance.choice([0, 0, 0, 2, 5, 10, 20, 30]),
+            dies_early=chance.choice([0, 0, 0, 0, 1, 3, 8, 30]),
+            notice=chance.randint(-6, 2),
+            first_delivery_gap=chance.randint(1, 3),
+        )
+        for _ in range(size)
+    ]
+    noise = Noise(
+        share(), share(), share(), share(), chance.choice([0, 0, 0.1, 0.4]), chance.choice([0, 0.1]),
+        chance.choice([0, 1, 3, 10, 1000]), chance.choice([-8, 100, 100]),
+    )  # fmt: skip
+    market = fill(
+        count,
+        drawn,
+        noise,
+        chance.random() < 0.5,
+        chance.randint(0, 2),
+        chance.choice([5, 8, 12, 2, 3, -1]),
+        chance,
+    )
+    deliveries = sorted({int(name[-2:]) for name in market.contracts})
+    months = None
+    if chance.random() < 0.3:
+        months = tuple(sorted(chance.sample(deliveries, chance.randint(1, len(deliveries)))))
+    may_force = _forceable(market, months)
+    forced = chance.sample(may_force, min(len(may_force), chance.choice([0, 0, 0, 1, 2])))
+    plan = PlainPlan(
+        name="drawn",
+        trigger=chance.choice(TRIGGERS),
+        confirm=chance.randint(1, 3),
+        delay=chance.randint(1, 3),
+        steps=chance.choice([1, 1, 2, 3, 5]),
+        backstop=chance.choice([0, 0, 1, 2, 4, 6]),
+        before=chance.choice(["last trade", "first notice", "earlier"])
+        if market.first_notice
+        else "last trade",
+        incoming=chance.choice(["next", "most active"]),
+        months=months,
+        nearbys=(1, 2, 3),
+        force=tuple((name, chance.randint(0, latest)) for name, latest in forced),
+    )
+    return market, plan

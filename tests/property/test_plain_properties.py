@@ -2,19 +2,14 @@
 
 from hypothesis import given
 
-from tests.property.strategies import markets_and_plans
+from tests.property.strategies import EFFORT, markets_and_plans
+from tests.reference.agree import is_near
 from tests.reference.plain_market import PlainMarket, PlainPlan, truncate
 from tests.reference.plain_rolls import lay_plain
 from tests.reference.plain_splice import splice_plain
 
-TINY = 1e-9
 
-
-def is_near(one: float, other: float) -> bool:
-    """Equal to 1e-9, absolute near zero and relative beyond one."""
-    return abs(one - other) <= TINY * max(1.0, abs(one), abs(other))
-
-
+@EFFORT
 @given(markets_and_plans())
 def test_the_back_adjusted_change_is_the_held_positions_change(drawn: tuple[PlainMarket, PlainPlan]) -> None:
     market, plan = drawn
@@ -29,6 +24,7 @@ def test_the_back_adjusted_change_is_the_held_positions_change(drawn: tuple[Plai
             last = row["back_adjusted"]
 
 
+@EFFORT
 @given(markets_and_plans())
 def test_the_ratio_adjusted_return_is_the_held_positions_return(drawn: tuple[PlainMarket, PlainPlan]) -> None:
     market, plan = drawn
@@ -42,6 +38,7 @@ def test_the_ratio_adjusted_return_is_the_held_positions_return(drawn: tuple[Pla
             last = row["ratio_adjusted"]
 
 
+@EFFORT
 @given(markets_and_plans())
 def test_rolls_only_go_forward(drawn: tuple[PlainMarket, PlainPlan]) -> None:
     market, plan = drawn
@@ -55,6 +52,7 @@ def test_rolls_only_go_forward(drawn: tuple[PlainMarket, PlainPlan]) -> None:
             held = row["incoming"] if row["weight_after"] == 1.0 else held
 
 
+@EFFORT
 @given(markets_and_plans())
 def test_a_market_cut_at_any_decision_decides_the_same_up_to_it(drawn: tuple[PlainMarket, PlainPlan]) -> None:
     market, plan = drawn
@@ -67,6 +65,7 @@ def test_a_market_cut_at_any_decision_decides_the_same_up_to_it(drawn: tuple[Pla
             assert cut.chains[nearby].rows == [row for row in chain.rows if row["effective_on"] <= end]
 
 
+@EFFORT
 @given(markets_and_plans())
 def test_every_nearby_holds_a_later_contract_than_the_one_before_it_at_its_start(
     drawn: tuple[PlainMarket, PlainPlan],

@@ -5,6 +5,7 @@ Belongs here: data without behaviour of the craft. Does not belong here: any imp
 
 import datetime
 from dataclasses import dataclass, field, replace
+from functools import cached_property
 
 Cell = tuple[str, int]
 
@@ -14,9 +15,9 @@ class PlainMarket:
     """Bars of one market by (contract, session index); a cell that is not there has no value.
 
     `contracts` stand in delivery order and end in their month, as in `NWHT-2025-03`. `settle` is as reported,
-    `prices` is clean before anything is carried, `usable` are the settles a gap may be measured on, `repaired`
-    the clean prices that are not the reported ones. `last_trade` and `first_notice` are session indices that
-    may lie before 0 or after the last session.
+    `prices` is clean before anything is carried, `usable` are the settles a gap may be measured on,
+    `repaired` the clean prices that are not the reported ones. `last_trade` and `first_notice` are session
+    indices that may lie before 0 or after the last session.
     """
 
     sessions: list[datetime.date]
@@ -34,6 +35,19 @@ class PlainMarket:
     high: dict[Cell, float] = field(default_factory=dict)
     low: dict[Cell, float] = field(default_factory=dict)
     repaired: set[Cell] = field(default_factory=set)
+
+    @cached_property
+    def first_bar(self) -> dict[str, int]:
+        """Session of each contract's first bar; a contract without one is not in it."""
+        first: dict[str, int] = {}
+        for contract, t in self.bars:
+            first[contract] = min(t, first.get(contract, t))
+        return first
+
+    @cached_property
+    def place(self) -> dict[str, int]:
+        """Each contract's place in delivery order."""
+        return {contract: number for number, contract in enumerate(self.contracts)}
 
 
 @dataclass(frozen=True)

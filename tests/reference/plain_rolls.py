@@ -24,7 +24,7 @@ class Decision:
 
 @dataclass
 class Chain:
-    """What one nearby held: from `start` on `first`, then by `rows` in order; `waiting` is decided and not done."""
+    """What one nearby held: from `start` on `first`, then by `rows`; `waiting` is decided and not done."""
 
     nearby: int
     start: int | None = None
@@ -64,11 +64,8 @@ def eligible(market: PlainMarket, plan: PlainPlan, t: int) -> list[str]:
     """Contracts known at the close of t that the plan may hold, in delivery order."""
     known = []
     for contract in market.contracts:
-        if is_allowed(plan, contract):
-            for s in range(t + 1):
-                if (contract, s) in market.bars:
-                    known.append(contract)
-                    break
+        if is_allowed(plan, contract) and contract in market.first_bar and market.first_bar[contract] <= t:
+            known.append(contract)
     return known
 
 
@@ -89,7 +86,7 @@ def deadline(market: PlainMarket, plan: PlainPlan, contract: str) -> int:
 
 def is_later(market: PlainMarket, contract: str, other: str) -> bool:
     """Whether the contract is delivered after the other."""
-    return market.contracts.index(contract) > market.contracts.index(other)
+    return market.place[contract] > market.place[other]
 
 
 def count_from(market: PlainMarket, plan: PlainPlan, contract: str, n: int, t: int) -> str | None:
@@ -203,7 +200,7 @@ class _Strand:
         self.roll = _Roll(decision, planned, decision.outgoing, decision.incoming)
 
     def drop_waiting(self, t: int) -> None:
-        """Drop the roll of which nothing is effective by t; one that has moved a step is kept and ends first."""
+        """Drop the roll of which nothing is effective by t; one that has moved a step ends first."""
         self.queued = None
         roll = self.roll
         if roll is not None and not any(row["effective_on"] <= t for row in roll.rows):
@@ -211,7 +208,7 @@ class _Strand:
             self.roll = None
 
     def retarget(self, target: str, t: int, planned: int, trigger: str) -> None:
-        """Nearby 1 rolls: leave what is held here, or will be once a roll under way has ended, for the target."""
+        """Nearby 1 rolls: leave what is held here, or will be once a roll under way has ended."""
         leaving = self.held if self.roll is None else self.roll.incoming
         if leaving is None:
             raise ValueError("a nearby that holds nothing cannot roll")

@@ -37,7 +37,11 @@ def weights_at(chain: Chain, t: int) -> dict[str, float]:
     for row in chain.rows:
         if row["effective_on"] <= t:
             weight = row["weight_after"]
-            held = {row["incoming"]: 1.0} if weight == 1.0 else {row["outgoing"]: 1.0 - weight, row["incoming"]: weight}
+            held = (
+                {row["incoming"]: 1.0}
+                if weight == 1.0
+                else {row["outgoing"]: 1.0 - weight, row["incoming"]: weight}
+            )
     return held
 
 
@@ -66,7 +70,12 @@ def _shift_and_scale(rows: list[Row], t: int) -> tuple[float | None, float | Non
 
 
 def _position(
-    market: PlainMarket, weights: dict[str, float], before: dict[str, float], between: list[Row], last: int, t: int
+    market: PlainMarket,
+    weights: dict[str, float],
+    before: dict[str, float],
+    between: list[Row],
+    last: int,
+    t: int,
 ) -> tuple[float | None, float | None]:
     """Change and simple return of the position held on t since session `last`, the last one with a price.
 

@@ -53,7 +53,12 @@ def impact_of_gap(
 
 
 def impact_of_price(
-    market: PlainMarket, chain: Chain, contract: str, session: int, reported: float, look_backs: tuple[int, ...] = LOOK_BACKS
+    market: PlainMarket,
+    chain: Chain,
+    contract: str,
+    session: int,
+    reported: float,
+    look_backs: tuple[int, ...] = LOOK_BACKS,
 ) -> int:
     """Sessions whose score would differ had `reported` stood as the contract's settle, all rolls as they are.
 
@@ -69,5 +74,8 @@ def impact_of_price(
             row["gap"] = (row["weight_after"] - row["weight_before"]) * (right - left)
         rows.append(row)
     before = [row["back_adjusted"] for row in splice_plain(market, chain)]
-    after = [row["back_adjusted"] for row in splice_plain(replace(market, prices=prices), replace(chain, rows=rows))]
+    after = [
+        row["back_adjusted"]
+        for row in splice_plain(replace(market, prices=prices), replace(chain, rows=rows))
+    ]
     return count_different(before, after, look_backs)

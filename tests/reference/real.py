@@ -3,20 +3,21 @@
 Belongs here: translation both ways. Does not belong here: any rule.
 """
 
-import datetime
 import math
 from dataclasses import dataclass, field
 from typing import Any
 
 import numpy as np
 
+from contracts.errors import IdentityError
 from contracts.layouts import BAR_FIELDS
 from contracts.markets import Market, parse_market
 from contracts.panel import Panel
 from contracts.rolls import NEVER, Held, lay_rolls
 from contracts.sessions import day_number, market_days
-from contracts.splice import STATUS_NAMES, carry_forward, check_identities, mix, splice
+from contracts.splice import STATUS_NAMES, carry_forward, check_identities, splice
 from tests.reference.plain_market import Cell, PlainMarket, PlainPlan
+from tests.reference.small import weekdays
 
 Row = dict[str, Any]
 
@@ -70,7 +71,7 @@ nearbys = {list(plan.nearbys)}
         text += f"""
 [[plans.{plan.name}.force]]
 outgoing = "{outgoing}"
-effective = {market.sessions[effective].isoformat()}
+effective = {weekdays(effective + 1, market.sessions[0])[effective].isoformat()}
 reason = "drawn"
 by = "test"
 """
@@ -96,7 +97,11 @@ def lay_panel_of(market: PlainMarket, plan: PlainPlan) -> Panel:
     for number, (contract, t) in enumerate(sorted(market.bars)):
         bar[t, market.contracts.index(contract)] = number
     last = np.array([market.last_trade[name] for name in market.contracts], dtype=np.int64)
-    notice = last if market.first_notice is None else np.array([market.first_notice[name] for name in market.contracts])
+    notice = (
+        last
+        if market.first_notice is None
+        else np.array([market.first_notice[name] for name in market.contracts])
+    )
     nothing = np.empty(0, dtype=np.int64)
     return Panel(
         market=declared,
@@ -133,7 +138,9 @@ def lay_real(market: PlainMarket, plan: PlainPlan) -> dict[int, RealChain]:
     for held in lay_rolls(panel, usable, settle, declared):
         chain = RealChain(None if held.start == NEVER else held.start)
         names = market.contracts
-        chain.decisions = [(d.decided, names[d.outgoing], names[d.incoming], d.trigger) for d in held.decisions]
+        chain.decisions = [
+            (d.decided, names[d.outgoing], names[d.incoming], d.trigger) for d in held.decisions
+        ]
         chain.rows = [
             {
                 "step": s.step,
@@ -166,7 +173,16 @@ def _splice(
 ) -> None:
     series = splice(held, carried, status)
     names = market.contracts
-    numbers = ("settle", "shift", "scale", "back_adjusted", "ratio_adjusted", "change", "simple_return", "growth")
+    numbers = (
+        "settle",
+        "shift",
+        "scale",
+        "back_adjusted",
+        "ratio_adjusted",
+        "change",
+        "simple_return",
+        "growth",
+    )
     for place in range(len(series.settle)):
         t = held.start + place
         incoming = int(held.incoming[t])
@@ -180,5 +196,5 @@ def _splice(
         chain.series.append(row)
     try:
         check_identities(series, "XX")
-    except Exception as error:
+    except IdentityError as error:
         chain.identity_error = str(error)

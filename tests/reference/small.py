@@ -4,10 +4,11 @@ Belongs here: lists to a PlainMarket. Does not belong here: randomness (`tests/p
 """
 
 import datetime
+from collections.abc import Mapping, Sequence
 
 from tests.reference.plain_market import Cell, PlainMarket
 
-Values = dict[str, list[float | None]]
+Values = Mapping[str, Sequence[float | None]]
 
 
 def weekdays(count: int, first: datetime.date = datetime.date(2024, 1, 1)) -> list[datetime.date]:
@@ -58,7 +59,9 @@ def small_market(
         volume=cells(volume),
         open_interest=cells(open_interest),
         bars=set(reported) | set(fixed) | set(bars),
-        usable={cell for cell in reported if cell not in unusable and cell not in fixed and cell not in masked},
+        usable={
+            cell for cell in reported if cell not in unusable and cell not in fixed and cell not in masked
+        },
         last_trade=last_trade,
         first_notice=first_notice,
         open_interest_lag=lag,

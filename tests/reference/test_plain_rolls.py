@@ -6,13 +6,13 @@ import pytest
 
 from tests.reference.plain_market import PlainMarket, PlainPlan, truncate
 from tests.reference.plain_rolls import Decision, count_from, lay_plain
-from tests.reference.small import small_market
+from tests.reference.small import Values, small_market
 
 A, B, C, D = "XX-2024-03", "XX-2024-06", "XX-2024-09", "XX-2024-12"
 FAR = {A: 90, B: 190, C: 290, D: 390}
 
 
-def flat(count: int, *levels: float) -> dict[str, list[float | None]]:
+def flat(count: int, *levels: float) -> Values:
     """Contracts A, B, .. that settle at a level each on every session."""
     return {contract: [level] * count for contract, level in zip((A, B, C, D), levels, strict=False)}
 
@@ -83,7 +83,9 @@ def test_the_backstop_counts_from_the_named_day(before: str, effective: int) -> 
 
 def test_most_active_skips_and_a_tie_goes_to_the_nearest() -> None:
     settle = flat(6, 100, 105, 110, 115)
-    tied = small_market(settle, FAR, volume={A: [5] * 6, B: [6, 1, 1, 1, 1, 1], C: [7] + [1] * 5, D: [7] + [1] * 5})
+    tied = small_market(
+        settle, FAR, volume={A: [5] * 6, B: [6, 1, 1, 1, 1, 1], C: [7] + [1] * 5, D: [7] + [1] * 5}
+    )
     assert rolls(tied, PlainPlan("p", "volume", incoming="most active")) == [(0, 0, 1, A, C, "volume")]
     nothing = small_market(settle, {**FAR, A: 3})
     assert rolls(nothing, PlainPlan("p", "volume", incoming="most active")) == [(2, 2, 3, A, B, "backstop")]
@@ -95,21 +97,29 @@ def test_only_the_plans_months_are_held() -> None:
 
 
 def test_the_first_held_is_the_nearest_before_its_deadline_with_a_usable_settle() -> None:
-    settle = {A: [100] * 4, B: [None, None, 105, 105], C: [110] * 4}
-    chain = lay_plain(small_market(settle, {**FAR, A: 0}, unusable=((C, 0),)), PlainPlan("p", "calendar")).chains[1]
+    settle: Values = {A: [100] * 4, B: [None, None, 105, 105], C: [110] * 4}
+    chain = lay_plain(
+        small_market(settle, {**FAR, A: 0}, unusable=((C, 0),)), PlainPlan("p", "calendar")
+    ).chains[1]
     assert (chain.start, chain.first) == (1, C)
 
 
 def test_two_steps_move_half_each_and_end_on_the_deadline() -> None:
     market = small_market(flat(12, 100, 110), {**FAR, A: 8})
     rows = lay_plain(market, PlainPlan("p", "calendar", steps=2)).chains[1].rows
-    assert [(r["decided_on"], r["measured_on"], r["effective_on"], r["step"]) for r in rows] == [(6, 6, 7, 1), (6, 7, 8, 2)]
-    assert [(r["weight_before"], r["weight_after"], r["gap"]) for r in rows] == [(0.0, 0.5, 5.0), (0.5, 1.0, 5.0)]
+    assert [(r["decided_on"], r["measured_on"], r["effective_on"], r["step"]) for r in rows] == [
+        (6, 6, 7, 1),
+        (6, 7, 8, 2),
+    ]
+    assert [(r["weight_before"], r["weight_after"], r["gap"]) for r in rows] == [
+        (0.0, 0.5, 5.0),
+        (0.5, 1.0, 5.0),
+    ]
     assert [r["ratio"] for r in rows] == [pytest.approx(105 / 100), pytest.approx(110 / 105)]
 
 
 def test_a_forced_roll_silences_trigger_and_deadline_of_its_contract() -> None:
-    volume: dict[str, list[float | None]] = {A: [1] * 12, B: [9] * 12, C: [1] * 12}
+    volume: Values = {A: [1] * 12, B: [9] * 12, C: [1] * 12}
     market = small_market(flat(12, 100, 105, 110), {**FAR, A: 9, B: 11}, volume=volume)
     assert rolls(market, PlainPlan("p", "volume", backstop=5, delay=2, force=((A, 8),))) == [
         (6, 7, 8, A, B, "forced"),
@@ -121,7 +131,10 @@ def test_a_forced_roll_of_a_contract_not_held_is_reported_and_the_rule_counts_ag
     market = small_market(flat(12, 100, 105, 110), {**FAR, A: 4, B: 8})
     laid = lay_plain(market, PlainPlan("p", "calendar", force=((B, 3),)))
     assert laid.unused_force == [(B, 3)]
-    assert [(r["effective_on"], r["trigger"]) for r in laid.chains[1].rows] == [(4, "calendar"), (8, "calendar")]
+    assert [(r["effective_on"], r["trigger"]) for r in laid.chains[1].rows] == [
+        (4, "calendar"),
+        (8, "calendar"),
+    ]
 
 
 def test_a_roll_waits_until_both_settles_are_usable() -> None:
@@ -143,7 +156,9 @@ def test_without_a_later_session_the_latest_earlier_one_measures() -> None:
 def test_a_stale_step_moves_all_that_is_left() -> None:
     market = small_market(flat(14, 100, 112), {**FAR, A: 8}, unusable=((A, 7), (A, 8)))
     rows = lay_plain(market, PlainPlan("p", "calendar", steps=4, backstop=1)).chains[1].rows
-    assert [(r["measured_on"], r["effective_on"], r["weight_before"], r["weight_after"], r["gap"]) for r in rows] == [
+    assert [
+        (r["measured_on"], r["effective_on"], r["weight_before"], r["weight_after"], r["gap"]) for r in rows
+    ] == [
         (3, 4, 0.0, 0.25, 3.0),
         (4, 5, 0.25, 0.5, 3.0),
         (5, 6, 0.5, 0.75, 3.0),
@@ -169,21 +184,26 @@ def test_two_steps_left_at_the_last_trading_session_are_effective_together() -> 
 
 
 def test_a_later_contract_takes_the_place_of_one_that_never_stood_beside_the_outgoing() -> None:
-    settle = {A: [100.0] * 9 + [None] * 3, B: [None] * 9 + [105.0] * 3, C: [110.0] * 12}
+    settle: Values = {A: [100.0] * 9 + [None] * 3, B: [None] * 9 + [105.0] * 3, C: [110.0] * 12}
     market = small_market(settle, {**FAR, A: 8}, bars=((B, 3),), unusable=((C, 8), (C, 7), (C, 6)))
     assert rolls(market, PlainPlan("p", "calendar", backstop=2)) == [(5, 5, 9, A, C, "calendar")]
 
 
 def test_a_chain_is_broken_where_nothing_ever_stood_beside_the_outgoing() -> None:
-    settle = {A: [100.0] * 9 + [None] * 3, B: [None] * 10 + [105.0] * 2}
+    settle: Values = {A: [100.0] * 9 + [None] * 3, B: [None] * 10 + [105.0] * 2}
     market = small_market(settle, {**FAR, A: 8}, bars=((B, 3),))
     row = lay_plain(market, PlainPlan("p", "calendar", backstop=2)).chains[1].rows[0]
     assert (row["decided_on"], row["measured_on"], row["effective_on"], row["incoming"]) == (5, None, 10, B)
-    assert (row["gap"], row["ratio"], row["outgoing_settle"], row["incoming_settle"]) == (None, None, None, None)
+    assert (row["gap"], row["ratio"], row["outgoing_settle"], row["incoming_settle"]) == (
+        None,
+        None,
+        None,
+        None,
+    )
 
 
 def test_without_a_known_incoming_nothing_is_decided_and_a_late_one_comes_too_late_to_measure() -> None:
-    settle = {A: [100.0] * 12, B: [None] * 10 + [105.0] * 2}
+    settle: Values = {A: [100.0] * 12, B: [None] * 10 + [105.0] * 2}
     assert rolls(small_market(settle, {**FAR, A: 8}), PlainPlan("p", "calendar", delay=1)) == [
         (10, None, 11, A, B, "calendar")
     ]
@@ -218,7 +238,9 @@ def test_the_second_nearby_keeps_its_plan_where_the_first_waits() -> None:
 
 def test_a_second_nearby_that_still_waits_goes_straight_to_the_next_target() -> None:
     plan = PlainPlan("p", "calendar", nearbys=(2,))
-    market = small_market(flat(14, 100, 105, 110, 115), {**FAR, A: 4, B: 9}, unusable=tuple((C, s) for s in range(3, 14)))
+    market = small_market(
+        flat(14, 100, 105, 110, 115), {**FAR, A: 4, B: 9}, unusable=tuple((C, s) for s in range(3, 14))
+    )
     chain = lay_plain(market, plan).chains[2]
     assert chain.decisions == [Decision(3, B, C, "calendar"), Decision(8, B, D, "calendar")]
     assert rolls(market, plan, 2) == [(8, 8, 9, B, D, "calendar")]
@@ -226,9 +248,13 @@ def test_a_second_nearby_that_still_waits_goes_straight_to_the_next_target() -> 
 
 def test_a_second_nearby_that_has_moved_a_step_finishes_before_it_goes_on() -> None:
     plan = PlainPlan("p", "calendar", steps=2, nearbys=(1, 2))
-    market = small_market(flat(16, 100, 105, 110, 115), {**FAR, A: 4, B: 9}, unusable=tuple((C, s) for s in (3, 4, 5, 6, 7, 8)))
+    market = small_market(
+        flat(16, 100, 105, 110, 115), {**FAR, A: 4, B: 9}, unusable=tuple((C, s) for s in (3, 4, 5, 6, 7, 8))
+    )
     rows = lay_plain(market, plan).chains[2].rows
-    assert [(r["decided_on"], r["measured_on"], r["effective_on"], r["outgoing"], r["incoming"]) for r in rows] == [
+    assert [
+        (r["decided_on"], r["measured_on"], r["effective_on"], r["outgoing"], r["incoming"]) for r in rows
+    ] == [
         (2, 2, 3, B, C),
         (2, 9, 10, B, C),
         (7, 10, 11, C, D),
@@ -238,14 +264,14 @@ def test_a_second_nearby_that_has_moved_a_step_finishes_before_it_goes_on() -> N
 
 def test_a_second_nearby_unknown_on_the_decision_is_decided_when_it_is_listed() -> None:
     plan = PlainPlan("p", "calendar", delay=2, nearbys=(1, 2))
-    settle = {A: [100.0] * 12, B: [105.0] * 12, C: [None] * 6 + [110.0] * 6}
+    settle: Values = {A: [100.0] * 12, B: [105.0] * 12, C: [None] * 6 + [110.0] * 6}
     market = small_market(settle, {**FAR, A: 5})
     assert rolls(market, plan, 1) == [(3, 4, 5, A, B, "calendar")]
     assert rolls(market, plan, 2) == [(6, 6, 7, B, C, "calendar")]
 
 
 def test_a_second_nearby_starts_when_there_is_one() -> None:
-    settle = {A: [100.0] * 6, B: [None, None, 105.0, 105.0, 105.0, 105.0]}
+    settle: Values = {A: [100.0] * 6, B: [None, None, 105.0, 105.0, 105.0, 105.0]}
     chain = lay_plain(small_market(settle, FAR), PlainPlan("p", "calendar", nearbys=(2,))).chains[2]
     assert (chain.start, chain.first, chain.rows) == (2, B, [])
 
@@ -257,7 +283,10 @@ def test_counting_from_the_incoming_counts_it_as_the_first() -> None:
 
 
 def test_a_shorter_market_decides_the_same_up_to_its_end() -> None:
-    volume: dict[str, list[float | None]] = {A: [9, 9, 1, 1, 1, 1], B: [1, 1, 5, 5, 1, 1], C: [0, 0, 0, 0, 4, 4]}
+    volume: Values = {A: [9, 9, 1, 1, 1, 1], B: [1, 1, 5, 5, 1, 1], C: [0, 0, 0, 0, 4, 4]}
     market, plan = small_market(flat(6, 100, 105, 110), FAR, volume=volume), PlainPlan("p", "volume")
-    assert lay_plain(market, plan).chains[1].decisions == [Decision(2, A, B, "volume"), Decision(4, B, C, "volume")]
+    assert lay_plain(market, plan).chains[1].decisions == [
+        Decision(2, A, B, "volume"),
+        Decision(4, B, C, "volume"),
+    ]
     assert lay_plain(truncate(market, 3), plan).chains[1].decisions == [Decision(2, A, B, "volume")]

@@ -13,7 +13,7 @@ from contracts.sessions import first_notice_day, last_trade_day
 
 DATA = pathlib.Path(__file__).parent / "data"
 
-# Open on days on which the stock exchange of the city is closed (published calendar reports; see last_trade_rules.csv).
+# Open on days on which the city's stock exchange is closed (published reports; see last_trade_rules.csv).
 COMMODITY_DAYS = """business_days = "XNYS"
 also_business_days = [2012-10-29, 2012-10-30, 2018-12-05, 2025-01-09]"""
 
@@ -153,7 +153,11 @@ def test_declared_rules_give_every_published_date(product: str) -> None:
 
 def test_a_schedule_that_counts_a_holiday_more_says_so_with_no_business_days() -> None:
     """GC 2010-12: the schedule published in 2008 counts 2010-12-31 as a holiday."""
-    marked = [(row["product"], row["delivery"], row["date"]) for row in published() if "no_business_days" in row["note"]]
+    marked = [
+        (row["product"], row["delivery"], row["date"])
+        for row in published()
+        if "no_business_days" in row["note"]
+    ]
     assert marked == [("GC", "2010-12", "2010-12-28")]
     plain = f"[last_trade]\n{RULES['third_last_bd']}"
     december = parse_delivery("2010-12")
@@ -164,15 +168,15 @@ def test_a_schedule_that_counts_a_holiday_more_says_so_with_no_business_days() -
 
 
 def test_the_newer_rule_begins_with_the_delivery_month_it_names() -> None:
-    """Brent: February 2016 by the rule of fifteen days, March 2016 by the last business day two months before."""
+    """Brent: February 2016 by the rule of fifteen days, March 2016 by the last business day of January."""
     market = product_market("B")
     assert last_trade_day(market, parse_delivery("2016-02")) == datetime.date(2016, 1, 14)
-    # 2016-01-29 was the last Friday of January 2016; the rule's words are those of the specification, the day is computed.
+    # The last Friday of January 2016: computed by the specification's words.
     assert last_trade_day(market, parse_delivery("2016-03")) == datetime.date(2016, 1, 29)
 
 
 def test_a_last_business_day_before_the_new_year_is_moved_one_earlier() -> None:
-    """The last business day of 2019 in London was the 31st, the eve of New Year's Day (computed by the rule's words)."""
+    """The last business day of 2019 in London was the 31st (computed by the rule's words)."""
     assert last_trade_day(product_market("B"), parse_delivery("2020-02")) == datetime.date(2019, 12, 30)
 
 

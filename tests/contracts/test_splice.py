@@ -1,0 +1,116 @@
+"""The arithmetic of rolls and splices, worked by hand."""
+
+import numpy as np
+import pytest
+
+from contracts.errors import IdentityError
+from contracts.markets import parse_market
+from contracts.rolls import Held, lay_rolls
+from contracts.splice import Series, carry_forward, check_identities, splice
+from contracts.trend import impact_of_gap, impact_of_price, sign_score
+from tests.contracts.small import MARKET, make_panel, weekdays
+
+CONTRACTS = ("NWHT-2024-03", "NWHT-2024-05")
+DAYS = weekdays("2024-01-02", 8)
+SETTLE = np.array([[100, 104], [101, 105], [99, 104], [102, 107], [103, 109], [101, 108], [104, 110], [106, 111.0]])
+VOLUME = np.array([[90, 10], [90, 20], [80, 40], [70, 60], [50, 80], [30, 90], [10, 95], [5, 99.0]])
+
+
+def lay(plan: str, settle: np.ndarray = SETTLE, usable: np.ndarray | None = None) -> tuple[Held, Series]:
+    market = parse_market(MARKET.format(extra="") + plan, "markets/nwht.toml")
+    panel = make_panel(market, CONTRACTS, DAYS, SETTLE, volume=VOLUME)
+    standing = ~np.isnan(settle) if usable is None else usable
+    (held,) = lay_rolls(panel, standing, settle, market.plans["tested"])
+    carried, status = carry_forward(settle, np.zeros(settle.shape, dtype=bool))
+    series = splice(held, carried, status)
+    check_identities(series, "test")
+    return held, series
+
+
+def test_roll_is_measured_on_the_close_that_decides_it_and_held_from_the_next_session() -> None:
+    """Volume crosses on session 4; the gap is 109 - 103 = 6, and earlier prices rise by it."""
+    held, series = lay('[plans.tested]\ntrigger = "volume"\n')
+    (step,) = held.steps
+    assert (step.decision.decided, step.measured, step.effective, step.gap) == (4, 4, 5, 6.0)
+    assert series.settle.tolist() == [100, 101, 99, 102, 103, 108, 110, 111]
+    assert series.shift.tolist() == [6, 6, 6, 6, 6, 0, 0, 0]
+    assert series.back_adjusted.tolist() == [106, 107, 105, 108, 109, 108, 110, 111]
+    assert series.change.tolist()[1:] == [1, -2, 3, 1, -1, 2, 1]
+    assert series.scale[0] == pytest.approx(109 / 103)
+    assert series.simple_return[5] == pytest.approx(108 / 109 - 1)
+    assert series.growth[0] == 100.0
+    assert series.growth[-1] == pytest.approx(100 * series.ratio_adjusted[-1] / series.ratio_adjusted[0])
+    assert series.rolled.tolist() == [False] * 5 + [True, False, False]
+
+
+def test_confirm_asks_for_consecutive_sessions_and_delay_moves_the_measuring() -> None:
+    held, _ = lay('[plans.tested]\ntrigger = "volume"\nconfirm = 2\ndelay = 2\n')
+    (step,) = held.steps
+    assert (step.decision.decided, step.measured, step.effective) == (5, 6, 7)
+
+
+def test_steps_move_the_weight_in_equal_parts_with_a_ledger_row_each() -> None:
+    held, series = lay('[plans.tested]\ntrigger = "volume"\nsteps = 2\n')
+    assert [(s.step, s.measured, s.effective, s.weight_before, s.weight_after, s.gap) for s in held.steps] == [
+        (1, 4, 5, 0.0, 0.5, 3.0),
+        (2, 5, 6, 0.5, 1.0, 3.5),
+    ]
+    assert series.settle.tolist() == [100, 101, 99, 102, 103, 0.5 * 101 + 0.5 * 108, 110, 111]
+
+
+def test_roll_waits_for_two_usable_settles() -> None:
+    usable = np.ones(SETTLE.shape, dtype=bool)
+    usable[4, 1] = usable[5, 0] = False
+    held, _ = lay('[plans.tested]\ntrigger = "volume"\n', usable=usable)
+    (step,) = held.steps
+    assert (step.decision.decided, step.measured, step.effective, step.postponed, step.gap) == (4, 6, 7, 2, 6.0)
+
+
+def test_leg_at_or_below_zero_leaves_no_ratio_before_the_roll_but_a_gap() -> None:
+    settle = SETTLE.copy()
+    settle[4, 0] = -3.0
+    held, series = lay('[plans.tested]\ntrigger = "volume"\n', settle)
+    assert held.steps[0].gap == 112.0
+    assert np.isnan(held.steps[0].ratio)
+    assert np.isnan(series.ratio_adjusted[:5]).all()
+    assert np.isnan(series.scale[:5]).all()
+    assert np.isnan(series.growth[:5]).all()
+    assert series.growth[5] == 100.0
+    assert series.back_adjusted[4] == 109.0
+
+
+def test_settle_is_carried_for_three_sessions_and_then_missing() -> None:
+    settle = np.array([[1.0], [np.nan], [np.nan], [np.nan], [np.nan], [2.0]])
+    carried, status = carry_forward(settle, np.zeros((6, 1), dtype=bool))
+    assert carried[:4, 0].tolist() == [1.0, 1.0, 1.0, 1.0]
+    assert np.isnan(carried[4, 0])
+    assert status[:, 0].tolist() == [0, 2, 2, 2, 3, 0]
+
+
+def test_identities_are_checked_for_real() -> None:
+    _, series = lay('[plans.tested]\ntrigger = "volume"\n')
+    series.back_adjusted[3] += 0.25
+    with pytest.raises(IdentityError, match="back-adjusted change is not the held position's change"):
+        check_identities(series, "test")
+
+
+def test_ratio_identity_is_checked_for_real() -> None:
+    _, series = lay('[plans.tested]\ntrigger = "volume"\n')
+    series.ratio_adjusted[3] *= 1.001
+    with pytest.raises(IdentityError, match="ratio-adjusted return is not its return"):
+        check_identities(series, "test")
+
+
+def test_sign_score_adds_the_signs_of_the_look_backs() -> None:
+    prices = np.array([10.0, 11, 12, 11, 10, 12])
+    assert sign_score(prices, (1, 2))[2:].tolist() == [2.0, -1.0, -2.0, 2.0]
+    assert np.isnan(sign_score(prices, (1, 2))[:2]).all()
+
+
+def test_impact_counts_the_sessions_whose_score_would_differ() -> None:
+    """A steady rise; one price ten too high turns its own down-look-backs and the ones that start from it."""
+    prices = np.arange(20.0)
+    assert impact_of_price(prices, 10, 10.0, (1, 2)) == 2
+    assert impact_of_price(prices, 10, 0.1, (1, 2)) == 0
+    assert impact_of_gap(prices, 10, 5.0, (1, 2)) == 0
+    assert impact_of_gap(prices, 10, -5.0, (1, 2)) == 2

@@ -1,0 +1,84 @@
+"""The real roll and splice code tells random markets as the plain telling does, and keeps its promises."""
+
+from hypothesis import given
+
+from tests.property.strategies import EFFORT, WIDE_CASES, markets_and_plans, wide_case
+from tests.reference.agree import differences, is_near
+from tests.reference.plain_market import PlainMarket, PlainPlan, truncate
+from tests.reference.real import lay_real
+
+
+@EFFORT
+@given(markets_and_plans())
+def test_real_and_plain_agree_on_days_exactly_and_on_numbers_to_a_billionth(
+    drawn: tuple[PlainMarket, PlainPlan],
+) -> None:
+    assert differences(*drawn) == []
+
+
+def test_real_and_plain_agree_on_cases_drawn_evenly() -> None:
+    failed = {}
+    for seed in range(WIDE_CASES):
+        market, plan = wide_case(seed)
+        found = differences(market, plan)
+        if found:
+            failed[seed] = (len(market.sessions) * len(market.contracts), found[0])
+    smallest = min(failed.items(), key=lambda item: item[1][0], default=None)
+    assert not failed, f"{len(failed)} of {WIDE_CASES} seeds, the smallest: {smallest}"
+
+
+@EFFORT
+@given(markets_and_plans())
+def test_real_back_adjusted_change_is_the_held_positions_change(drawn: tuple[PlainMarket, PlainPlan]) -> None:
+    for chain in lay_real(*drawn).values():
+        assert chain.identity_error is None
+        last = None
+        for row in chain.series:
+            if row["back_adjusted"] is None:
+                continue
+            if last is not None:
+                assert is_near(row["back_adjusted"] - last, row["change"])
+            last = row["back_adjusted"]
+
+
+@EFFORT
+@given(markets_and_plans())
+def test_real_ratio_adjusted_return_is_the_held_positions_return(
+    drawn: tuple[PlainMarket, PlainPlan],
+) -> None:
+    for chain in lay_real(*drawn).values():
+        last = None
+        for row in chain.series:
+            if row["ratio_adjusted"] is None:
+                continue
+            if last is not None and last > 0 and row["ratio_adjusted"] > 0:
+                assert is_near(row["ratio_adjusted"] / last - 1, row["simple_return"])
+            last = row["ratio_adjusted"]
+
+
+@EFFORT
+@given(markets_and_plans())
+def test_real_rolls_only_go_forward_and_take_effect_after_they_are_decided(
+    drawn: tuple[PlainMarket, PlainPlan],
+) -> None:
+    market, _ = drawn
+    for chain in lay_real(*drawn).values():
+        for row in chain.rows:
+            assert market.contracts.index(row["incoming"]) > market.contracts.index(row["outgoing"])
+            assert row["decided_on"] < row["effective_on"] < len(market.sessions)
+            assert row["measured_on"] is None or row["measured_on"] < row["effective_on"]
+
+
+@EFFORT
+@given(markets_and_plans())
+def test_real_decisions_use_nothing_that_was_not_known_at_their_close(
+    drawn: tuple[PlainMarket, PlainPlan],
+) -> None:
+    market, plan = drawn
+    whole = lay_real(market, plan)
+    ends = {decided for chain in whole.values() for decided, *_ in chain.decisions}
+    for end in sorted(ends):
+        cut = lay_real(truncate(market, end), plan)
+        for nearby, chain in whole.items():
+            assert cut[nearby].decisions == [decision for decision in chain.decisions if decision[0] <= end]
+            assert cut[nearby].rows == [row for row in chain.rows if row["effective_on"] <= end]

@@ -1,0 +1,75 @@
+"""Every published ledger and series of the sample is told again by plain loops from its bars alone."""
+
+import pathlib
+
+import duckdb
+import pytest
+
+from catalog.declarations import SAMPLE_DESK, load_desk
+from tests.reference.agree import row_differences
+from tests.reference.plain_rolls import lay_plain
+from tests.reference.sample_markets import (
+    NOT_COMPARED,
+    Row,
+    expected_ledger,
+    expected_series,
+    newest_snapshot,
+    published_markets,
+    read_market,
+    read_plan,
+    read_rows,
+)
+
+MARKETS = ("NBND", "NCOC", "NCOP", "NEQX", "NGAS", "NKRN", "NOIL", "NVOL", "NWHT")
+LEDGER = (
+    "market", "plan", "nearby", "step", "decided_on", "measured_on", "effective_on", "outgoing", "incoming", "gap",
+)  # fmt: skip
+
+
+def of(rows: list[Row], plan: str, nearby: int) -> list[Row]:
+    """The compared columns of one chain's rows."""
+    chosen = [row for row in rows if row["plan"] == plan and row["nearby"] == nearby]
+    return [{name: value for name, value in row.items() if name not in NOT_COMPARED} for row in chosen]
+
+
+def test_all_nine_markets_are_published(sample_store: pathlib.Path) -> None:
+    assert tuple(load_desk(SAMPLE_DESK).markets) == MARKETS
+    assert tuple(published_markets(newest_snapshot(sample_store))) == MARKETS
+
+
+@pytest.mark.parametrize("code", MARKETS)
+def test_published_rolls_and_series_are_those_of_the_plain_telling(
+    sample_store: pathlib.Path, code: str
+) -> None:
+    snapshot = newest_snapshot(sample_store)
+    desk = load_desk(SAMPLE_DESK)
+    declared = desk.markets[code]
+    market, days = read_market(snapshot, declared)
+    terms = read_rows(snapshot, "terms", code)
+    rolls, series = read_rows(snapshot, "rolls", code), read_rows(snapshot, "series", code)
+    chains = {(row["plan"], row["nearby"]) for row in series}
+    assert chains == {(name, nearby) for name, plan in declared.plans.items() for nearby in plan.nearbys}
+    found: list[str] = []
+    checked = 0
+    for name in declared.plans:
+        for nearby, chain in lay_plain(market, read_plan(declared, name, days)).chains.items():
+            label = f"{code}, plan {name}, nearby {nearby}"
+            expected = expected_series(market, chain)
+            ledger = expected_ledger(market, chain, terms, expected, desk.look_backs)
+            found += row_differences(ledger, of(rolls, name, nearby), f"{label}, ledger")
+            found += row_differences(expected, of(series, name, nearby), f"{label}, series")
+            checked += len(ledger)
+    assert found == []
+    assert checked == len(rolls) > 0
+
+
+def test_the_catalog_shows_the_rolls_that_were_told_again(sample_store: pathlib.Path) -> None:
+    """The ledger read through DuckDB's view is the one in the files."""
+    snapshot = newest_snapshot(sample_store)
+    with duckdb.connect(str(sample_store / "catalog.duckdb"), read_only=True) as connection:
+        shown = connection.execute(f"select {', '.join(LEDGER)} from rolls").fetchall()
+    in_files = [
+        tuple(row[name] for name in LEDGER) for code in MARKETS for row in read_rows(snapshot, "rolls", code)
+    ]
+    assert sorted(shown, key=str) == sorted(in_files, key=str)
+    assert len(shown) > 500

@@ -52,7 +52,9 @@ def _timezone(value: str) -> str:
 def _cron(value: str) -> str:
     parts = value.split()
     if len(parts) != 5 or not all(set(part) <= set("0123456789*/,-") for part in parts):
-        raise ValueError(f"seen {value!r}; expected five fields of minute, hour, day, month, weekday, such as '30 19 * * 1-5'")
+        raise ValueError(
+            f"seen {value!r}; expected five fields of minute, hour, day, month, weekday, such as '30 19 * * 1-5'"
+        )
     return value
 
 
@@ -93,7 +95,9 @@ class DeskFile(Declared):
 class RepairsFile(Declared):
     """A file under `repairs/`."""
 
-    repair: Annotated[tuple[DeclaredRepair, ...], BeforeValidator(lambda v: tuple(v) if isinstance(v, list) else v)] = ()
+    repair: Annotated[
+        tuple[DeclaredRepair, ...], BeforeValidator(lambda v: tuple(v) if isinstance(v, list) else v)
+    ] = ()
 
 
 class WaiversFile(Declared):
@@ -162,7 +166,11 @@ def _read_texts(path: Path) -> tuple[dict[str, str], list[Mistake], str]:
     mistakes: list[Mistake] = []
     digest = hashlib.sha256()
     if not path.is_dir():
-        return {}, [Mistake(str(path), "(desk)", "no such folder", "a folder with desk.toml, markets/ and layouts/")], ""
+        return (
+            {},
+            [Mistake(str(path), "(desk)", "no such folder", "a folder with desk.toml, markets/ and layouts/")],
+            "",
+        )
     files = [path / "desk.toml", path / "waivers.toml"]
     for folder in ("markets", "layouts", "repairs"):
         files += sorted((path / folder).glob("*.toml"))
@@ -243,7 +251,12 @@ def _load_repairs(reading: _Reading, markets: dict[str, Market]) -> tuple[Declar
                 reading.mistakes.append(_unknown_market(name, f"repair[{index}].contract", repair.contract, markets))
             if key in seen:
                 reading.mistakes.append(
-                    Mistake(name, f"repair[{index}]", f"a second repair of {key[0]} {key[1]} {key[2]}, as in {seen[key]}", "one")
+                    Mistake(
+                        name,
+                        f"repair[{index}]",
+                        f"a second repair of {key[0]} {key[1]} {key[2]}, as in {seen[key]}",
+                        "one",
+                    )
                 )
             seen[key] = name
             repairs.append(repair)

@@ -114,8 +114,8 @@ def _make_declared(
         seen = float(bars.values[bar, place]) if bar >= 0 else math.nan
         what = f"{label}, {day}: {repair.field}"
         if seen != repair.reported or at is None:
-            now = "no such bar" if bar < 0 else f"{seen:g}"
-            expects = f"the repair by {repair.by} expects {repair.reported:g} as reported"
+            now = "no such bar" if bar < 0 else f"{seen:.10g}"
+            expects = f"the repair by {repair.by} expects {repair.reported:.10g} as reported"
             message = f"{what}: {expects}, seen {now}; remove or renew it"
             found.append(
                 Finding(
@@ -131,7 +131,7 @@ def _make_declared(
                     corrected = float(scale_prices(np.array([corrected]), change.multiply)[0])
         values[place][at] = corrected
         spoken[at] |= repair.field == "settle"
-        message = f"{what} {seen:g} corrected to {repair.corrected:g} by {repair.by} on {repair.on}: {repair.reason}"
+        message = f"{what} {seen:.10g} corrected to {repair.corrected:.10g} by {repair.by} on {repair.on}: {repair.reason}"
         found.append(
             Finding(
                 Kind.DECLARED_REPAIR, Severity.NOTE, message, market.code, label, day, repair.field, seen,
@@ -176,9 +176,9 @@ def _drop_misfits(prices: np.ndarray, may_be_negative: bool, tick: float) -> Non
 
 
 _SAYS = {
-    Kind.REVERTING_SPIKE: "stands {distance:+g} from where the curve puts it and comes back",
-    Kind.CURVE_BREAK: "stands {distance:+g} from where the curve puts it",
-    Kind.LONE_MOVE: "moved {distance:+g} against the curve, borne out by its own range and volume",
+    Kind.REVERTING_SPIKE: "stands {distance:+.10g} from where the curve puts it and comes back",
+    Kind.CURVE_BREAK: "stands {distance:+.10g} from where the curve puts it",
+    Kind.LONE_MOVE: "moved {distance:+.10g} against the curve, borne out by its own range and volume",
     Kind.NOT_POSITIVE: "is not above zero, which this market's price cannot be",
 }
 
@@ -198,11 +198,11 @@ def _tell(panel: Panel, settle: np.ndarray, verdict: Verdict) -> Finding:
         action, done = Action.KEPT, "kept"
         severity = Severity.NOTE if verdict.kind is Kind.LONE_MOVE else Severity.REVIEW
     elif is_known:
-        action, done, severity = Action.REPAIRED, f"repaired to {verdict.expected:g}", Severity.REVIEW
+        action, done, severity = Action.REPAIRED, f"repaired to {verdict.expected:.10g}", Severity.REVIEW
     else:
         action, done, severity = Action.MASKED, "masked, for the curve cannot say", Severity.REVIEW
     return Finding(
-        verdict.kind, severity, f"{label}, {day}: settle {price:g} {says}; {done}", panel.market.code, label, day,
+        verdict.kind, severity, f"{label}, {day}: settle {price:.10g} {says}; {done}", panel.market.code, label, day,
         "settle", price, verdict.expected if is_known else None,
         None if math.isnan(verdict.score) else verdict.score, None, action,
         verdict.expected if action is Action.REPAIRED else None,

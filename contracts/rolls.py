@@ -164,7 +164,7 @@ class _Market:
         return made
 
 
-def decide(market: _Market, outgoing: int, start: int, unused: list[int]) -> Decision | None:
+def decide(market: _Market, outgoing: int, start: int) -> Decision | None:
     """The next decision to leave a contract, from the close of `start` on; None where the data hold none."""
     plan = market.plan
     if start >= market.length:
@@ -178,7 +178,6 @@ def decide(market: _Market, outgoing: int, start: int, unused: list[int]) -> Dec
             incoming = int(market.incoming_from(outgoing, np.array([decided]))[0])
             if incoming != NEVER:
                 return Decision(decided, outgoing, incoming, FORCED, forced)
-        unused.append(outgoing)
         start = max(start, decided + 1)
         if start >= market.length:
             return None
@@ -218,7 +217,7 @@ def carry_out(market: _Market, decision: Decision) -> tuple[list[RollStep], bool
             continue
         if last >= market.length:
             return rows, False
-        return _close_stale(market, decision, rows, step, planned, last)
+        return _close_stale(market, decision, rows, step, last)
     return rows, True
 
 
@@ -236,13 +235,13 @@ def _row(
 
 
 def _close_stale(
-    market: _Market, decision: Decision, rows: list[RollStep], step: int, planned: int, last: int
+    market: _Market, decision: Decision, rows: list[RollStep], step: int, last: int
 ) -> tuple[list[RollStep], bool]:
     """The outgoing's last trading session passed without two usable settles: measure on an earlier session."""
-    effective = max(planned + 1, last + 1)
+    effective = max(decision.planned + step, last + 1)
     if effective >= market.length:
         return rows, False
-    until = min(last, planned - 1) + 1 if planned > last else last + 1
+    until = last + 1
     candidates = [decision.incoming]
     if not rows:
         candidates += [int(other) for other in market.later(decision.outgoing, last) if other > decision.incoming]
@@ -252,7 +251,7 @@ def _close_stale(
         if len(found):
             rows.append(_row(market, decision, step, incoming, int(found[-1]), effective, 1.0, rows, is_stale=True))
             return rows, True
-    restart, contract = market.first_hold(last + 1, decision.outgoing)
+    restart, contract = market.first_hold(max(last + 1, decision.planned), decision.outgoing)
     if restart == NEVER:
         return rows, False
     before = rows[-1].weight_after if rows else 0.0
@@ -268,17 +267,14 @@ def lay_rolls(panel: Panel, usable: np.ndarray, settle: np.ndarray, plan: Plan) 
     """
     market = _Market(panel, usable, settle, plan)
     first = _lay_first(market, panel)
-    return [first if nearby == 1 else _lay_later(market, panel, first, nearby) for nearby in plan.nearbys]
+    return [first if nearby == 1 else _lay_later(market, first, nearby) for nearby in plan.nearbys]
 
 
 def _lay_first(market: _Market, panel: Panel) -> Held:
     start, contract = market.first_hold(0, NEVER)
     held = _empty(market.length, 1, start)
-    if start == NEVER:
-        return held
-    unused: list[int] = []
     first, at = contract, start
-    while (decision := decide(market, contract, at, unused)) is not None:
+    while start != NEVER and (decision := decide(market, contract, at)) is not None:
         held.decisions.append(decision)
         rows, is_complete = carry_out(market, decision)
         held.steps += rows
@@ -286,67 +282,141 @@ def _lay_first(market: _Market, panel: Panel) -> Held:
             held.pending = decision
             break
         contract, at = rows[-1].incoming, rows[-1].effective
-    left = {step.decision.outgoing for step in held.steps if step.decision.trigger == FORCED}
-    left |= {decision.outgoing for decision in held.decisions if decision.trigger == FORCED}
-    waiting = {
-        outgoing for outgoing, effective in market.forces.items() if effective - market.plan.delay >= market.length
-    }
-    held.unused = [panel.contracts[c] for c in sorted(set(market.forces) - left - waiting)]
-    _fill(held, first)
+    done = {decision.outgoing for decision in held.decisions if decision.trigger == FORCED}
+    due = {outgoing for outgoing, effective in market.forces.items() if effective - market.plan.delay < market.length}
+    held.unused = [panel.contracts[c] for c in sorted(due - done)]
+    if start != NEVER:
+        _fill(held, first)
     return held
 
 
-def _lay_later(market: _Market, panel: Panel, first: Held, nearby: int) -> Held:
-    """Nearby n: the n-th eligible contract from the one held at nearby 1, rolled when that one is."""
-    events = [(first.start, int(first.contract[first.start]), "", first.start)] if first.start != NEVER else []
-    done = {step.decision: step.incoming for step in first.steps}
-    events += [(d.decided, done.get(d, d.incoming), d.trigger, d.planned) for d in first.decisions]
-    held = _empty(market.length, nearby, NEVER)
-    holding, free_from, begun = NEVER, 0, NEVER
-    for number, (decided, base, trigger, planned) in enumerate(events):
-        until = events[number + 1][0] if number + 1 < len(events) else market.length
-        known, target = _target(market, base, nearby, decided, until)
-        if known == NEVER or target == holding:
+@dataclass
+class _Roll:
+    """A roll of a farther nearby: its decision, its rows as measured, and whether they complete it."""
+
+    decision: Decision
+    rows: list[RollStep]
+    is_complete: bool
+
+    @property
+    def ends(self) -> float:
+        """Session from which the new contract alone is held."""
+        return self.rows[-1].effective if self.is_complete else math.inf
+
+    @property
+    def into(self) -> int:
+        """The contract it ends in."""
+        return self.rows[-1].incoming if self.is_complete else self.decision.incoming
+
+    def has_moved_by(self, session: int) -> bool:
+        """Whether any of its steps is effective by a session."""
+        return any(row.effective <= session for row in self.rows)
+
+
+class _Strand:
+    """A farther nearby as it is laid: what it holds, the roll under way, and the one that begins behind it."""
+
+    def __init__(self, market: _Market, held: Held, holding: int) -> None:
+        self.market, self.held, self.holding = market, held, holding
+        self.roll: _Roll | None = None
+        self.queued: _Roll | None = None
+
+    def complete_until(self, session: int) -> None:
+        """Take over what is complete by a session."""
+        while self.roll is not None and self.roll.ends <= session:
+            self.held.steps += self.roll.rows
+            self.holding = self.roll.into
+            self.roll, self.queued = self.queued, None
+
+    def drop_waiting(self, session: int) -> None:
+        """Drop what has not moved by a session; a roll that has moved is completed."""
+        self.queued = None
+        if self.roll is not None and not self.roll.has_moved_by(session):
+            self.roll = None
+
+    def turn_to(self, target: int, session: int, planned: int, trigger: str) -> None:
+        """Decide on a session to roll into a later contract."""
+        leaving = self.holding if self.roll is None else self.roll.into
+        if target <= leaving:
+            return
+        if self.roll is None:
+            self.roll = self._decide(Decision(session, leaving, target, trigger, planned))
+        elif math.isinf(self.roll.ends):
+            decision = Decision(session, leaving, target, trigger, planned)
+            self.held.decisions.append(decision)
+            self.queued = _Roll(decision, [], False)
+        else:
+            behind = max(planned, int(self.roll.ends) + 1)
+            self.queued = self._decide(Decision(session, leaving, target, trigger, behind))
+
+    def _decide(self, decision: Decision) -> _Roll:
+        self.held.decisions.append(decision)
+        return _Roll(decision, *carry_out(self.market, decision))
+
+    def close(self) -> None:
+        """Take what is effective within the data; the rest is pending."""
+        self.complete_until(self.market.length - 1)
+        if self.roll is not None:
+            self.held.steps += self.roll.rows
+            self.held.pending = self.roll.decision
+
+
+def _lay_later(market: _Market, first: Held, nearby: int) -> Held:
+    """Nearby n: the n-th eligible contract from the one held at nearby 1, rolled when that one is.
+
+    It waits for its own two settles. A roll of which nothing is effective when nearby 1 decides again gives
+    way to the next; one that has moved is completed first, and the next begins behind it.
+    """
+    start, holding = _start_later(market, first, nearby)
+    held = _empty(market.length, nearby, start)
+    if start == NEVER:
+        return held
+    strand = _Strand(market, held, holding)
+    ends = [*(event.decided for event in first.decisions), market.length][1:]
+    for event, following in zip(first.decisions, ends, strict=True):
+        if event.decided >= start:
+            strand.complete_until(event.decided)
+            strand.drop_waiting(event.decided)
+        known, target = _target(market, event.incoming, nearby)
+        session = max(event.decided, known, start)
+        if target == NEVER or session >= following:
             continue
-        if holding == NEVER:
-            held.start, holding, begun = max(known, first.start), target, target
-            free_from = held.start
-            continue
-        if target < holding:
-            continue
-        decided_on = max(known, decided)
-        on_time = planned if known == decided else known + 1
-        decision = Decision(
-            decided_on, holding, target, trigger or str(market.plan.trigger), max(on_time, free_from + 1)
-        )
-        held.decisions.append(decision)
-        rows, is_complete = carry_out(market, decision)
-        if rows and until < market.length and rows[0].effective - 1 >= until and number + 1 < len(events):
-            # Not one step measured before nearby 1 decides again: the later roll takes its place.
-            continue
-        if not rows and not is_complete and number + 1 < len(events):
-            continue
-        held.steps += rows
-        if not is_complete:
-            held.pending = decision
-            break
-        holding, free_from = rows[-1].incoming, rows[-1].effective
-    if begun != NEVER:
-        _fill(held, begun)
+        strand.complete_until(session)
+        planned = event.planned if session == event.decided else session + 1
+        strand.turn_to(target, session, planned, event.trigger)
+    strand.close()
+    _fill(held, holding)
     return held
 
 
-def _target(market: _Market, base: int, nearby: int, decided: int, until: int) -> tuple[int, int]:
-    """The n-th eligible contract from `base` and the first session from `decided`, before `until`, that knows it."""
-    after = market.eligible[market.eligible >= base]
-    listed = np.maximum(market.first_bar[after], decided)
-    listed[0] = decided
-    if len(after) < nearby:
+def _start_later(market: _Market, first: Held, nearby: int) -> tuple[int, int]:
+    """The first session on which the n-th contract from the one held at nearby 1 is known, and that contract."""
+    if first.start == NEVER:
         return NEVER, NEVER
-    known = int(np.sort(listed)[nearby - 1])
-    if known >= until:
+    changes = np.flatnonzero(np.diff(first.contract[first.start :])) + first.start + 1
+    begins = [first.start, *(int(change) for change in changes)]
+    for begin, end in zip(begins, [*begins[1:], market.length], strict=True):
+        known, _ = _target(market, int(first.contract[begin]), nearby)
+        session = max(begin, known)
+        if known != NEVER and session < end:
+            return session, int(_counted(market, int(first.contract[begin]), session)[nearby - 1])
+    return NEVER, NEVER
+
+
+def _counted(market: _Market, base: int, session: int) -> np.ndarray:
+    """The contract and the eligible ones after it that are known at the close of a session."""
+    return np.concatenate(([base], market.later(base, session)))
+
+
+def _target(market: _Market, base: int, nearby: int) -> tuple[int, int]:
+    """The first session that knows n contracts counted from `base`, and the n-th of them on it."""
+    after = market.eligible[market.eligible > base]
+    if len(after) < nearby - 1:
         return NEVER, NEVER
-    return known, int(after[listed <= known][nearby - 1])
+    if nearby == 1:
+        return 0, base
+    known = int(np.sort(market.first_bar[after])[nearby - 2])
+    return known, int(_counted(market, base, known)[nearby - 1])
 
 
 def _empty(length: int, nearby: int, start: int) -> Held:

@@ -10,7 +10,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from contracts.errors import IdentityError
-from contracts.rolls import NEVER, Held
+from contracts.rolls import NEVER, Held, RollStep
 
 LONGEST_CARRY = 3
 REPORTED, REPAIRED, CARRIED, MISSING = range(4)
@@ -77,11 +77,12 @@ def splice(held: Held, carried: np.ndarray, status: np.ndarray) -> Series:
     second = np.where(held.incoming[start:] == NEVER, REPORTED, status[rows, np.maximum(held.incoming[start:], 0)])
     row_status = np.maximum(row_status, second)
     shift, scale, is_cut = _later_rolls(held, start, length)
-    base = _held_before(held, carried, settle)
+    base, base_of_return = _held_before(held, carried, settle)
     change = settle - base
     with np.errstate(invalid="ignore", divide="ignore"):
-        simple_return = np.where((settle > 0) & (base > 0), settle / base - 1.0, np.nan)
-    growth = _growth(simple_return, settle, base, scale, is_cut)
+        is_positive = (settle > 0) & (base_of_return > 0)
+        simple_return = np.where(is_positive, settle / base_of_return - 1.0, np.nan)
+    growth = _growth(simple_return, settle, scale, is_cut)
     rolled = np.zeros(length - start, dtype=bool)
     for step in held.steps:
         rolled[step.effective - start] = True
@@ -113,11 +114,13 @@ def _later_rolls(held: Held, start: int, length: int) -> tuple[np.ndarray, np.nd
     return shift, scale, np.arange(length - start) >= first_whole
 
 
-def _held_before(held: Held, carried: np.ndarray, settle: np.ndarray) -> np.ndarray:
-    """Value of each session's holding on the last earlier session that has a price, (T - start,).
+def _held_before(held: Held, carried: np.ndarray, settle: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Value of each session's holding on the last earlier session that has a price, twice (T - start,).
 
-    On the effective session of a roll measured too early, the incoming's settle of the session before is
-    taken as the outgoing's plus their difference on the measuring session.
+    On the effective session of a roll measured too early the incoming has no settle of the session before.
+    It is taken as the outgoing's plus their difference on the measuring session for the first, which changes
+    are counted from, and as the outgoing's times their ratio, where there is one, for the second, which
+    returns are.
     """
     start, length = held.start, len(carried)
     count = length - start
@@ -129,20 +132,21 @@ def _held_before(held: Held, carried: np.ndarray, settle: np.ndarray) -> np.ndar
     incoming_leg = np.where(incoming == NEVER, 0.0, carried[at, np.maximum(incoming, 0)])
     base = np.where(incoming == NEVER, outgoing_leg, (1 - weight) * outgoing_leg + weight * incoming_leg)
     base = np.where(before < 0, np.nan, base)
+    base_of_return = base.copy()
+    by_effective: dict[int, list[RollStep]] = {}
     for step in held.steps:
-        place = step.effective - start
-        if before[place] < 0:
-            continue
-        if step.measured == NEVER:
-            base[place] = math.nan
-        elif step.is_stale or step.measured != before[place] + start:
-            base[place] = settle[before[place]] + step.gap
-    return base
+        by_effective.setdefault(step.effective - start, []).append(step)
+    for place, steps in by_effective.items():
+        if before[place] >= 0 and any(step.is_stale or step.measured != before[place] + start for step in steps):
+            # A step that was never measured has no gap and no ratio, and leaves neither base.
+            value = settle[before[place]]
+            base[place] = value + math.fsum(step.gap for step in steps)
+            ratio = math.prod(step.ratio for step in steps)
+            base_of_return[place] = base[place] if math.isnan(ratio) else value * ratio
+    return base, base_of_return
 
 
-def _growth(
-    simple_return: np.ndarray, settle: np.ndarray, base: np.ndarray, scale: np.ndarray, is_whole: np.ndarray
-) -> np.ndarray:
+def _growth(simple_return: np.ndarray, settle: np.ndarray, scale: np.ndarray, is_whole: np.ndarray) -> np.ndarray:
     """Compounded return, 100 on its first session; it begins after the last break."""
     priced = ~np.isnan(settle)
     breaks = np.flatnonzero(priced & (settle <= 0))

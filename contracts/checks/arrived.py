@@ -66,7 +66,7 @@ def check_meetings(
         for place in differs:
             before, after = (float(parsed.values[which, place]) for which in (row, by))
             message = (
-                f"{contract}, {day}: {BAR_FIELDS[place]} {before:g} ({old_place}) gave way to {after:g} ({new_place})"
+                f"{contract}, {day}: {BAR_FIELDS[place]} {before:.10g} ({old_place}) gave way to {after:.10g} ({new_place})"
             )
             found.append(
                 Finding(

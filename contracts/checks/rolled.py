@@ -76,7 +76,7 @@ def _about_step(teller: _Teller, plan: Plan, step: RollStep) -> list[Finding]:
         found.append(tell(Kind.ROLL_POSTPONED, Severity.NOTE, text, waited))
     if math.isnan(step.ratio):
         text = (
-            f"settles {step.outgoing_settle:g} and {step.incoming_settle:g} on {measured} have no ratio; "
+            f"settles {step.outgoing_settle:.10g} and {step.incoming_settle:.10g} on {measured} have no ratio; "
             "ratio_adjusted, scale and growth are null before this roll"
         )
         found.append(tell(Kind.RATIO_UNDEFINED, Severity.REVIEW, text))

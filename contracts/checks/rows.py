@@ -42,7 +42,7 @@ def _off_tick(panel: Panel) -> list[Finding]:
                 nearest = round(float(np.round(price / tick)) * tick, 10)
                 day = day_of(panel.sessions[session])
                 more = "" if len(told) == len(sessions) else f" (and {len(sessions) - 1} more of this contract)"
-                message = f"{label}, {day}: {name} {price:g} lies between ticks of {tick:g}{more}"
+                message = f"{label}, {day}: {name} {price:.10g} lies between ticks of {tick:.10g}{more}"
                 found.append(
                     Finding(
                         Kind.OFF_TICK, Severity.NOTE, message, market.code, label, day, name, price, nearest,
@@ -62,8 +62,8 @@ def _broken_ranges(panel: Panel, clean_prices: np.ndarray) -> list[Finding]:
         for session, contract in np.argwhere(dropped):
             label, day = panel.contracts[contract], day_of(panel.sessions[session])
             price = float(reported[session, contract])
-            span = f"low {low[session, contract]:g}, high {high[session, contract]:g}"
-            message = f"{label}, {day}: {name} {price:g} does not fit its bar ({span}); left out of the clean bar"
+            span = f"low {low[session, contract]:.10g}, high {high[session, contract]:.10g}"
+            message = f"{label}, {day}: {name} {price:.10g} does not fit its bar ({span}); left out of the clean bar"
             kind = Kind.NOT_POSITIVE if price <= 0 and not panel.market.may_be_negative else Kind.RANGE_BROKEN
             found.append(
                 Finding(
@@ -86,8 +86,8 @@ def _outside_range(panel: Panel) -> list[Finding]:
         label, day = panel.contracts[contract], day_of(panel.sessions[session])
         price = float(settle[session, contract])
         nearest = float(np.clip(price, low[session, contract], high[session, contract]))
-        span = f"{low[session, contract]:g} to {high[session, contract]:g}"
-        message = f"{label}, {day}: settle {price:g} lies outside the session's range {span}"
+        span = f"{low[session, contract]:.10g} to {high[session, contract]:.10g}"
+        message = f"{label}, {day}: settle {price:.10g} lies outside the session's range {span}"
         found.append(
             Finding(
                 Kind.SETTLE_OUTSIDE_RANGE,
@@ -119,7 +119,7 @@ def _limits(panel: Panel, settle: np.ndarray) -> list[Finding]:
     for session, contract in np.argwhere(beyond):
         label, day = panel.contracts[contract], day_of(panel.sessions[session])
         moved = float(change[session, contract])
-        message = f"{label}, {day}: settle moved {moved:+g}, more than the daily limit of {limit:g}"
+        message = f"{label}, {day}: settle moved {moved:+.10g}, more than the daily limit of {limit:.10g}"
         found.append(
             Finding(
                 Kind.LIMIT_EXCEEDED, Severity.REVIEW, message, market, label, day, "settle",
@@ -131,7 +131,7 @@ def _limits(panel: Panel, settle: np.ndarray) -> list[Finding]:
     for session in np.flatnonzero((alive >= 2) & (2 * at_limit > alive)):
         day = day_of(panel.sessions[session])
         count = f"{at_limit[session]} of {alive[session]} contracts"
-        message = f"{market}, {day}: {count} settled at the daily limit of {limit:g}; a fact, kept"
+        message = f"{market}, {day}: {count} settled at the daily limit of {limit:.10g}; a fact, kept"
         found.append(
             Finding(Kind.LIMIT_LOCKED, Severity.NOTE, message, market, session=day, score=float(at_limit[session]))
         )

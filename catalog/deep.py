@@ -1,0 +1,72 @@
+"""Every published number of a snapshot, derived again from archive, desk and code.
+
+Belongs here: building each market anew in memory and comparing bytes. Does not belong here: hashing what is
+there (`verify.py`).
+"""
+
+import tempfile
+from pathlib import Path
+
+import pyarrow.parquet as pq
+
+from catalog.archive import Intake, read_register
+from catalog.assignment import assign_files, code_digest, gather_inputs
+from catalog.declarations import Desk
+from catalog.places import Places, table_path
+from catalog.store import current_snapshot, read_manifest, write_table
+from contracts.build import build_market
+from contracts.errors import RopewalkError
+from contracts.tables import MARKET_TABLES
+
+
+def rederive(places: Places, desk: Desk, snapshot: str | None = None) -> tuple[str, ...]:
+    """Build every published market of a snapshot again and compare; returns what differs, in words.
+
+    Only the desk and code that made a snapshot can make it again; where either is another, that is the
+    answer. Markets held back are passed over: their tables are those of an older snapshot.
+    """
+    name = snapshot if snapshot is not None else current_snapshot(places)
+    manifest = read_manifest(places, name)
+    if manifest.desk != desk.digest:
+        return (f"snapshot {manifest.name} was made with desk {manifest.desk[:12]}, this one is {desk.digest[:12]}",)
+    if manifest.code != code_digest():
+        return (f"snapshot {manifest.name} was made with code {manifest.code[:12]}, this one is {code_digest()[:12]}",)
+    arrivals = tuple(arrival for arrival in read_register(places) if arrival.taken_in <= manifest.intake)
+    assignment = assign_files(desk, Intake(manifest.intake, 0, arrivals, ()), places)
+    problems: list[str] = []
+    metadata = {"desk": desk.digest, "code": code_digest()}
+    with tempfile.TemporaryDirectory(dir=places.store) as folder:
+        for market, verdict in manifest.markets.items():
+            if verdict.state != "published":
+                continue
+            try:
+                built = build_market(gather_inputs(desk, market, assignment.files[market], places))
+            except (RopewalkError, ValueError) as error:
+                problems.append(f"{market}: cannot be built again: {error}")
+                continue
+            for table in MARKET_TABLES:
+                path = table_path(table.name, market)
+                stored = write_table(Path(folder), table, market, built.tables[table.name], metadata)
+                if stored.sha256 != manifest.files[path].sha256:
+                    problems.append(_difference(places.snapshot(manifest.name) / path, Path(folder) / path, path))
+    return tuple(problems)
+
+
+def _difference(published: Path, derived: Path, path: str) -> str:
+    """The first row in which a published table differs from the one derived again."""
+    try:
+        first, second = pq.read_table(published).to_pylist(), pq.read_table(derived).to_pylist()
+    except (OSError, ValueError) as error:
+        return f"{path}: cannot be read: {error}"
+    if len(first) != len(second):
+        return f"{path}: {len(first)} rows published, {len(second)} derived"
+    for number, (one, other) in enumerate(zip(first, second, strict=True)):
+        for column, value in one.items():
+            if value != other[column]:
+                return f"{path}, row {number}: {column} {value!r} published, {other[column]!r} derived ({_key(one)})"
+    return f"{path}: the same rows in other bytes"
+
+
+def _key(row: dict[str, object]) -> str:
+    names = ("market", "plan", "nearby", "contract", "session")
+    return ", ".join(str(row[name]) for name in names if row.get(name) is not None)

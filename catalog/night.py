@@ -1,0 +1,361 @@
+"""The night without a scheduler, in three steps: begin, build one market, finish.
+
+Belongs here: the order of a night's work on a store, and what it tells. Does not belong here: who calls the
+steps (`flows/`), how a table is computed (`contracts/`) or written (`store.py`).
+"""
+
+import datetime
+import json
+import shutil
+import time
+from dataclasses import dataclass, replace
+from pathlib import Path
+from typing import Any
+
+import pyarrow as pa
+
+from catalog.archive import take_in
+from catalog.assignment import (
+    Assignment,
+    FileOfMarket,
+    assign_files,
+    code_digest,
+    gather_inputs,
+    inputs_digest,
+    package_versions,
+)
+from catalog.declarations import Desk, load_desk
+from catalog.gates import judge_market
+from catalog.places import Places, table_path
+from catalog.runs import Run, next_run, record_run, runs_table
+from catalog.store import (
+    Manifest,
+    StoredFile,
+    Verdict,
+    clean_leftovers,
+    current_snapshot,
+    link_table,
+    open_staging,
+    publish,
+    read_manifest,
+    write_table,
+)
+from catalog.summary import Summary, summarise
+from contracts.build import build_market
+from contracts.errors import RopewalkError, StoreError, UsageError
+from contracts.findings import Finding, Kind, Severity, findings_table
+from contracts.tables import COVERAGE, MARKET_TABLES, RUNS, TABLES, make_table
+
+PUBLISHED, HELD_BACK = "published", "held back"
+# Tables that tell of tonight even where a market's prices are held back.
+_TOLD_TONIGHT = ("findings", "rejects", "files")
+_NO_MARKET = "_desk"
+
+
+@dataclass(frozen=True)
+class Night:
+    """One night, small enough to hand to any worker."""
+
+    desk_path: str
+    raw: str
+    store: str
+    staging: str
+    command: str
+    started_at: str
+    markets: tuple[str, ...]
+    unchanged: tuple[str, ...]
+    nothing_new: bool
+    workers: str
+    dask_address: str
+    files_taken_in: int
+    intake: int
+    data_date: str | None = None
+
+
+def begin(desk_path: Path, raw: Path | None, store: Path | None, command: str) -> Night:
+    """Load the desk, take in what arrived, and say which markets have to be built.
+
+    The caller holds the store's write lock. Raises DeskError before anything is touched, UsageError for a
+    raw folder that is not there while the archive is empty.
+    """
+    started = datetime.datetime.now(datetime.UTC).isoformat()
+    desk = load_desk(desk_path)
+    raw_path, places = (raw or desk.raw).resolve(), Places((store or desk.store).resolve())
+    clean_leftovers(places)
+    intake = take_in(raw_path, places)
+    if not intake.arrivals:
+        raise UsageError(
+            f"{raw_path}: no raw file there, and none in the archive of {places.store}; name another with --raw"
+        )
+    assignment = assign_files(desk, intake, places)
+    digests = {code: inputs_digest(desk, code, files) for code, files in assignment.files.items()}
+    last = _last_manifest(places)
+    unchanged = tuple(code for code in desk.markets if _is_unchanged(last, code, digests[code]))
+    told = _desk_digest(assignment)
+    nothing_new = (
+        last is not None
+        and all(code in last.markets and last.markets[code].inputs == digests[code] for code in desk.markets)
+        and set(last.markets) == set(desk.markets)
+        and last.desk == desk.digest
+        and last.code == code_digest()
+        and last.summary.get("files_of_no_market") == told
+    )
+    staging = ""
+    if not nothing_new:
+        staging = str(open_staging(places))
+        _remember(places, assignment, digests, told)
+    building = () if nothing_new else tuple(code for code in desk.markets if code not in unchanged)
+    return Night(
+        str(desk.path), str(raw_path), str(places.store), staging, command, started, building,
+        unchanged if not nothing_new else tuple(desk.markets), nothing_new, str(desk.run.workers),
+        desk.run.dask_address, intake.new, intake.number,
+    )  # fmt: skip
+
+
+def _last_manifest(places: Places) -> Manifest | None:
+    name = current_snapshot(places)
+    return read_manifest(places, name) if name is not None else None
+
+
+def _is_unchanged(last: Manifest | None, market: str, digest: str) -> bool:
+    """Whether the market's tables in the last snapshot are what a build would give again."""
+    verdict = last.markets.get(market) if last is not None else None
+    return verdict is not None and verdict.state == PUBLISHED and verdict.inputs == digest
+
+
+def _desk_digest(assignment: Assignment) -> list[str]:
+    """What is told of files that belong to no market."""
+    return sorted(finding.identity for finding in assignment.findings)
+
+
+def _memory(places: Places) -> Path:
+    return places.intake / "night.json"
+
+
+def _remember(places: Places, assignment: Assignment, digests: dict[str, str], told: list[str]) -> None:
+    """Leave the assignment where every worker can read it; the lock's holder alone writes it."""
+    content = {
+        "files": {code: [list(vars(entry).values()) for entry in files] for code, files in assignment.files.items()},
+        "findings": [[f.kind, f.severity, f.message, f.detail] for f in assignment.findings],
+        "unclaimed": assignment.unclaimed,
+        "digests": digests,
+        "told": told,
+    }
+    places.intake.mkdir(parents=True, exist_ok=True)
+    draft = _memory(places).with_suffix(".draft")
+    draft.write_text(json.dumps(content), encoding="utf-8")
+    draft.replace(_memory(places))
+
+
+def _recall(places: Places) -> dict[str, Any]:
+    content: dict[str, Any] = json.loads(_memory(places).read_text(encoding="utf-8"))
+    return content
+
+
+def build_one(night: Night, market: str) -> dict[str, Any]:
+    """Build one market into the staging folder.
+
+    Returns plain values: market, files (path below the snapshot -> sha256, rows, bytes), facts, worst
+    (findings with the largest impact), error (None, or why the market cannot be built), rows, seconds. A
+    market that cannot be built is an answer, not an exception; a store that cannot be written raises
+    StoreError.
+    """
+    started = time.monotonic()
+    places = Places(Path(night.store))
+    desk = load_desk(Path(night.desk_path))
+    entries = tuple(FileOfMarket(*entry) for entry in _recall(places)["files"][market])
+    result: dict[str, Any] = {"market": market, "files": {}, "facts": {}, "worst": [], "error": None, "rows": 0}
+    try:
+        if not entries:
+            raise ValueError(f"{market}: no raw file is of this market")
+        built = build_market(gather_inputs(desk, market, entries, places))
+    except StoreError:
+        raise
+    except (RopewalkError, ValueError) as error:
+        result["error"] = str(error)
+        result["seconds"] = time.monotonic() - started
+        return result
+    metadata = _stamp(desk)
+    for table in MARKET_TABLES:
+        stored = write_table(Path(night.staging), table, market, built.tables[table.name], metadata)
+        result["files"][stored.path] = stored.model_dump(exclude={"path"})
+        result["rows"] += stored.rows
+    result["facts"] = built.facts
+    result["worst"] = _worst(built.tables["findings"])
+    result["seconds"] = time.monotonic() - started
+    return result
+
+
+def _stamp(desk: Desk) -> dict[str, str]:
+    """What every file says of where it came from; nothing in it depends on the clock or the night."""
+    return {"desk": desk.digest, "code": code_digest()}
+
+
+def _worst(findings: pa.Table, count: int = 10) -> list[dict[str, Any]]:
+    """The findings that would have turned the most scores, then the graver ones."""
+    rank = {Severity.BLOCK: 0, Severity.REVIEW: 1, Severity.NOTE: 2}
+    columns = ["market", "contract", "session", "kind", "severity", "action", "impact_sessions", "message"]
+    rows: list[dict[str, Any]] = findings.select(columns).to_pylist()
+    rows.sort(key=lambda row: (-row["impact_sessions"], rank[Severity(row["severity"])], str(row["session"])))
+    return [{**row, "session": row["session"].isoformat() if row["session"] else None} for row in rows[:count]]
+
+
+def abandon(night: Night) -> None:
+    """Remove what a night has staged; what is published stays as it is."""
+    if night.staging:
+        shutil.rmtree(night.staging, ignore_errors=True)
+
+
+def finish(night: Night, results: list[dict[str, Any]]) -> Summary:
+    """Judge every market, link what did not change, publish, and say what happened.
+
+    Raises StoreError where nothing can be published; the last snapshot then stands.
+    """
+    places = Places(Path(night.store))
+    desk = load_desk(Path(night.desk_path))
+    last = _last_manifest(places)
+    if night.nothing_new:
+        if last is None:
+            raise StoreError(f"{places.store}: the snapshot this night was compared with is gone")
+        run = Run(next_run(places), night.command, night.started_at, _now(), "nothing new", len(desk.markets), 0, 0)
+        record_run(places, run)
+        return summarise(last, published_now=False, results=[])
+    memory = _recall(places)
+    facts = {code: last.markets[code].facts for code in night.unchanged} if last is not None else {}
+    facts |= {result["market"]: result["facts"] for result in results if result["error"] is None}
+    verdicts = _judge(desk, facts, results, memory["digests"], last)
+    staging = Path(night.staging)
+    files = _lay_files(places, staging, verdicts, results, last)
+    if not any(path.startswith("series/") for path in files):
+        reasons = "; ".join(f"{code}: {verdict.reason}" for code, verdict in verdicts.items())
+        raise StoreError(f"no market can be published, and none was before: {reasons}")
+    metadata = _stamp(desk)
+    run = Run(
+        next_run(places), night.command, night.started_at, _now(), "published", len(desk.markets),
+        sum(verdict.state == PUBLISHED for verdict in verdicts.values()),
+        sum(verdict.state == HELD_BACK for verdict in verdicts.values()),
+    )  # fmt: skip
+    desk_findings = _desk_findings(memory, desk, staging, files)
+    for table, market, data in (
+        (_table("findings"), _NO_MARKET, findings_table(desk_findings)),
+        (COVERAGE, _NO_MARKET, coverage_table(desk, verdicts)),
+        (RUNS, _NO_MARKET, runs_table(places, run)),
+    ):
+        stored = write_table(staging, table, market, data, metadata)
+        files[stored.path] = stored
+    worst = sorted((row for result in results for row in result["worst"]), key=lambda row: -row["impact_sessions"])
+    draft = Manifest(
+        sequence=0, name="", parent=current_snapshot(places), files=files, desk=desk.digest, code=code_digest(),
+        packages=package_versions(), intake=night.intake, markets=verdicts,
+        summary={
+            "files_of_no_market": memory["told"],
+            "unclaimed": memory["unclaimed"],
+            "files_taken_in": night.files_taken_in,
+            "desk_findings": len(desk_findings),
+        },
+    )  # fmt: skip
+    manifest = publish(places, staging, draft)
+    record_run(places, replace(run, snapshot=manifest.name))
+    return summarise(manifest, published_now=True, results=results, worst=worst)
+
+
+def _now() -> str:
+    return datetime.datetime.now(datetime.UTC).isoformat()
+
+
+def _table(name: str) -> Any:
+    return next(table for table in TABLES if table.name == name)
+
+
+def _judge(
+    desk: Desk, facts: dict[str, dict[str, Any]], results: list[dict[str, Any]], digests: dict[str, str],
+    last: Manifest | None,
+) -> dict[str, Verdict]:  # fmt: skip
+    """The verdict on every market of the desk."""
+    errors = {result["market"]: result["error"] for result in results if result["error"] is not None}
+    dates = [datetime.date.fromisoformat(fact["last_session"]) for fact in facts.values()]
+    data_date = max(dates, default=datetime.date.min)
+    verdicts = {}
+    for code, market in desk.markets.items():
+        reasons = (errors[code],) if code in errors else judge_market(market, facts[code], desk.gates, data_date)
+        before = last.markets.get(code) if last is not None else None
+        good = before.last_good_snapshot if before is not None else None
+        if before is not None and before.state == PUBLISHED and last is not None:
+            good = last.name
+        state = HELD_BACK if reasons else PUBLISHED
+        verdicts[code] = Verdict(
+            state=state, reason="; ".join(reasons), inputs=digests[code], facts=facts.get(code, {}),
+            last_good_snapshot=good if reasons else None,
+        )  # fmt: skip
+    return verdicts
+
+
+def _lay_files(
+    places: Places, staging: Path, verdicts: dict[str, Verdict], results: list[dict[str, Any]], last: Manifest | None
+) -> dict[str, StoredFile]:
+    """Keep, link or drop each market's files; returns what the snapshot holds of them."""
+    built = {result["market"]: result["files"] for result in results}
+    files: dict[str, StoredFile] = {}
+    for code, verdict in verdicts.items():
+        fresh = {path: StoredFile(path=path, **entry) for path, entry in built.get(code, {}).items()}
+        for table in MARKET_TABLES:
+            path = table_path(table.name, code)
+            is_ours = path in fresh and (verdict.state == PUBLISHED or table.name in _TOLD_TONIGHT)
+            if is_ours:
+                files[path] = fresh[path]
+                continue
+            (staging / path).unlink(missing_ok=True)
+            if last is not None and path in last.files:
+                link_table(staging, places.snapshot(last.name), path)
+                files[path] = last.files[path]
+    return files
+
+
+def _desk_findings(memory: dict[str, Any], desk: Desk, staging: Path, files: dict[str, StoredFile]) -> list[Finding]:
+    """Findings that belong to no market: files nobody claims, and waivers by identifier that cover nothing."""
+    found = [
+        Finding(Kind(kind), Severity(severity), text, detail=detail)
+        for kind, severity, text, detail in memory["findings"]
+    ]
+    by_identifier = [waiver for waiver in desk.waivers if waiver.finding is not None]
+    if by_identifier:
+        import pyarrow.parquet as pq
+
+        known = {finding.identity for finding in found}
+        for path in files:
+            if path.startswith("findings/"):
+                known |= set(pq.read_table(staging / path, columns=["finding"])["finding"].to_pylist())
+        for waiver in by_identifier:
+            if waiver.finding not in known:
+                text = f"the waiver of {waiver.describe()} by {waiver.by} covers no finding; remove it"
+                found.append(Finding(Kind.WAIVER_UNMATCHED, Severity.REVIEW, text, detail=waiver.describe()))
+    return found
+
+
+def coverage_table(desk: Desk, verdicts: dict[str, Verdict]) -> pa.Table:
+    """What is published of each market and plan, and what is not."""
+    rows: list[dict[str, Any]] = []
+    for code, verdict in verdicts.items():
+        for plan in sorted(desk.markets[code].plans):
+            fact = verdict.facts.get("plans", {}).get(plan, {}) if verdict.facts else {}
+            rows.append(
+                {
+                    "market": code,
+                    "plan": plan,
+                    "first_session": _day(fact.get("first_session")),
+                    "last_session": _day(fact.get("last_session")),
+                    "sessions": fact.get("sessions"),
+                    "expected": verdict.facts.get("expected") if verdict.facts else None,
+                    "repaired": fact.get("repaired"),
+                    "carried": fact.get("carried"),
+                    "missing": fact.get("missing"),
+                    "last_good_snapshot": verdict.last_good_snapshot,
+                    "state": verdict.state,
+                    "reason": verdict.reason or None,
+                }
+            )
+    return make_table(COVERAGE, {column: [row[column] for row in rows] for column in COVERAGE.columns})
+
+
+def _day(text: str | None) -> datetime.date | None:
+    return datetime.date.fromisoformat(text) if text else None

@@ -1,0 +1,99 @@
+"""What a night has to say, for a person and for a machine.
+
+Belongs here: gathering and wording the outcome. Does not belong here: deciding it (`night.py`, `gates.py`).
+"""
+
+from dataclasses import asdict, dataclass
+from typing import Any
+
+from catalog.store import Manifest
+
+_TOLD = 10
+
+
+@dataclass(frozen=True)
+class FindingLine:
+    """One finding as the night tells it."""
+
+    market: str | None
+    contract: str | None
+    session: str | None
+    kind: str
+    severity: str
+    action: str
+    impact_sessions: int
+    message: str
+
+
+@dataclass(frozen=True)
+class Summary:
+    """The outcome of a night. `snapshot` is None where nothing was published; `current` always stands."""
+
+    snapshot: str | None
+    current: str
+    nothing_new: bool
+    published: tuple[str, ...]
+    held_back: tuple[tuple[str, str], ...]
+    findings: tuple[FindingLine, ...]
+    finding_counts: dict[str, int]
+    rows: int
+    unclaimed: int
+    late: tuple[str, ...] = ()
+
+    @property
+    def exit_code(self) -> int:
+        """0 published or nothing to do; 3 published, some markets held back."""
+        return 3 if self.held_back and not self.nothing_new else 0
+
+    def as_json(self) -> dict[str, Any]:
+        """The summary as plain values."""
+        values = asdict(self)
+        values["held_back"] = {market: reason for market, reason in self.held_back}
+        values["exit_code"] = self.exit_code
+        return values
+
+    def lines(self) -> list[str]:
+        """The summary as lines of text."""
+        if self.nothing_new:
+            told = [f"nothing new: snapshot {self.current} stands"]
+        else:
+            told = [f"published snapshot {self.snapshot}: {len(self.published)} markets, {self.rows:,} rows built"]
+            told.append(f"  published: {', '.join(self.published) or 'none'}")
+        told += [f"  held back: {market}: {reason}" for market, reason in self.held_back]
+        if self.unclaimed:
+            plural = "file belongs" if self.unclaimed == 1 else "files belong"
+            told.append(
+                f"  {self.unclaimed} {plural} to no market of the desk (ropewalk findings --kind unclaimed_file)"
+            )
+        if self.nothing_new:
+            return told
+        counts = ", ".join(f"{count} {severity}" for severity, count in sorted(self.finding_counts.items()))
+        told.append(f"  found: {counts or 'nothing'}")
+        turned = [finding for finding in self.findings if finding.impact_sessions]
+        if turned:
+            told.append("  worst by the sessions whose trend-sign score it would have turned:")
+        told += [f"    {finding.impact_sessions:4d}  {finding.message}" for finding in turned]
+        return told
+
+
+def summarise(
+    manifest: Manifest, published_now: bool, results: list[dict[str, Any]], worst: list[dict[str, Any]] | None = None
+) -> Summary:
+    """The summary of the snapshot that stands after a night."""
+    counts: dict[str, int] = {}
+    for verdict in manifest.markets.values():
+        for severity, count in verdict.facts.get("findings", {}).items():
+            counts[severity] = counts.get(severity, 0) + count
+    if manifest.summary.get("desk_findings"):
+        counts["review"] = counts.get("review", 0) + int(manifest.summary["desk_findings"])
+    return Summary(
+        snapshot=manifest.name if published_now else None,
+        current=manifest.name,
+        nothing_new=not published_now,
+        published=tuple(code for code, verdict in manifest.markets.items() if verdict.state == "published"),
+        held_back=tuple((c, v.reason) for c, v in manifest.markets.items() if v.state != "published"),
+        findings=tuple(FindingLine(**row) for row in (worst or [])[:_TOLD]),
+        finding_counts=counts,
+        rows=sum(int(result["rows"]) for result in results),
+        unclaimed=int(manifest.summary.get("unclaimed", 0)),
+    )

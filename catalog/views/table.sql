@@ -1,0 +1,4 @@
+-- One published table, all markets together.
+create view $database.$name as
+select $columns
+from $source;

@@ -15,6 +15,7 @@ from contracts.checks.arrived import check_days, check_files, check_meetings
 from contracts.checks.gaps import check_gaps
 from contracts.checks.rolled import check_rolls
 from contracts.checks.rows import check_rows
+from contracts.checks.shocks import check_shocks
 from contracts.checks.stale import find_stale_runs
 from contracts.errors import IntakeError
 from contracts.findings import Finding, Kind, Severity, Waiver, findings_table, waive
@@ -95,6 +96,7 @@ def build_market(inputs: Inputs) -> Built:
     findings += check_rows(panel, clean.prices)
     findings += clean.findings
     findings += _tell_stale(panel, clean, inputs.quality)
+    findings += check_shocks(panel, clean.settle)
     findings += check_gaps(panel)
     laid = lay_plans(panel, clean)
     for one in laid:
@@ -189,8 +191,6 @@ def _weigh(
             finding = replace(
                 finding, impact_sessions=_price_impact(panel, clean, first_nearbys, session, contract, look_backs)
             )
-        elif finding.kind is Kind.STALE_PRICE:
-            finding = replace(finding, impact_sessions=0)
         weighed.append(finding)
     return weighed
 

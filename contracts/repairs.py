@@ -131,7 +131,9 @@ def _make_declared(
                     corrected = float(scale_prices(np.array([corrected]), change.multiply)[0])
         values[place][at] = corrected
         spoken[at] |= repair.field == "settle"
-        message = f"{what} {seen:.10g} corrected to {repair.corrected:.10g} by {repair.by} on {repair.on}: {repair.reason}"
+        message = (
+            f"{what} {seen:.10g} corrected to {repair.corrected:.10g} by {repair.by} on {repair.on}: {repair.reason}"
+        )
         found.append(
             Finding(
                 Kind.DECLARED_REPAIR, Severity.NOTE, message, market.code, label, day, repair.field, seen,

@@ -25,7 +25,7 @@ from contracts.quality import Quality
 _LONGEST_LOOK_BACK = 5
 _LONGEST_LOOK_AHEAD = 3
 _HISTORY = 40
-_LEAST_HISTORY = 8
+_LEAST_HISTORY = 20
 _NEWLY_LISTED = 3.0
 # A distance that shrinks to this share of itself has come back.
 _CAME_BACK = 0.35

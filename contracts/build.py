@@ -153,8 +153,8 @@ def _tell_stale(panel: Panel, clean: Clean, quality: Quality) -> list[Finding]:
         price = float(panel.field("settle")[run.first, run.contract])
         count = run.last - run.first + 1
         message = (
-            f"{label}, {first} to {day_of(panel.sessions[run.last])}: settle stands at {price:.10g} for {count} sessions "
-            f"while the curve moves {run.moved:+.10g}"
+            f"{label}, {first} to {day_of(panel.sessions[run.last])}: settle stands at {price:.10g} "
+            f"for {count} sessions while the curve moves {run.moved:+.10g}"
         )
         found.append(
             Finding(

@@ -65,7 +65,8 @@ def check_meetings(
         new_place = f"{files[parsed.source[by]].raw.path}:{parsed.line[by]}"
         for place in differs:
             before, after = (float(parsed.values[which, place]) for which in (row, by))
-            message = f"{contract}, {day}: {BAR_FIELDS[place]} {before:.10g} ({old_place}) gave way to {after:.10g} ({new_place})"
+            values = f"{before:.10g} ({old_place}) gave way to {after:.10g} ({new_place})"
+            message = f"{contract}, {day}: {BAR_FIELDS[place]} {values}"
             found.append(
                 Finding(
                     kind, severity, message, market, contract, day, BAR_FIELDS[place], _real(before), _real(after),

@@ -6,8 +6,8 @@ own bar. Does not belong here: what is put in its place (`repairs.py`).
 The statistic. With p the contract's last clean session before t, and m the median change from p to t of the
 nearest contracts that have both, the settle's distance is r = P(t) - (P(p) + m). Its scale is the largest of:
 the scaled MAD of those contracts' changes, the scaled MAD of the contract's own past 40 distances, and half a
-tick. (A newly listed contract is given three times the curve's usual distance in place of its own.) Contracts of one market move together, so a wrong price stands alone and a true shock does not: common
-practice, no source.
+tick. A newly listed contract is given three times the curve's usual distance in place of its own. Contracts of
+one market move together, so a wrong price stands alone and a true shock does not: common practice, no source.
 """
 
 import heapq

@@ -12,7 +12,7 @@ from contracts.panel import Panel
 from contracts.sessions import day_of
 
 # Scaled MADs of the past year's common changes; a fact however large, so the score only chooses what to tell.
-_TOLD_FROM = 8.0
+_TOLD_FROM = 6.0
 _YEAR = 250
 _LEAST_HISTORY = 40
 _LEAST_CONTRACTS = 3

@@ -73,7 +73,7 @@ noises = st.builds(
     masked=st.sampled_from([0.0, 0.0, 0.0, 0.1, 0.4]),
     declared=st.sampled_from([0.0, 0.1]),
     highest_activity=st.sampled_from([0, 1, 3, 1000]),
-    lowest_level=st.sampled_from([-8, 100, 100, 100]),
+    lowest_level=st.sampled_from([-8, 3, 100, 100]),
 )
 
 
@@ -131,13 +131,16 @@ def fill(
     for _ in range(count):
         walk += chance.randint(-6, 6) / 4
         levels.append(walk)
+    slope = chance.choice([-2, 0, 2, 2])
     for position, (name, listing) in enumerate(zip(contracts, drawn, strict=True)):
         first = listing.listed
         end = min(count - 1, last_trade[name] - listing.dies_early)
         for t in range(first, end + 1):
             if chance.random() < noise.no_bar:
                 continue
-            _fill_cell(market, (name, t), levels[t] + 2 * position + chance.randint(-2, 2) / 4, noise, chance)
+            _fill_cell(
+                market, (name, t), levels[t] + slope * position + chance.randint(-2, 2) / 4, noise, chance
+            )
     return market
 
 
@@ -235,7 +238,7 @@ def wide_case(seed: int) -> tuple[PlainMarket, PlainPlan]:
     ]
     noise = Noise(
         share(), share(), share(), share(), chance.choice([0, 0, 0.1, 0.4]), chance.choice([0, 0.1]),
-        chance.choice([0, 1, 3, 10, 1000]), chance.choice([-8, 100, 100]),
+        chance.choice([0, 1, 3, 10, 1000]), chance.choice([-8, 3, 100, 100]),
     )  # fmt: skip
     market = fill(
         count,

@@ -101,6 +101,8 @@ def _position(
         if cost is None:
             return None, None
         change = now - cost
+        # Where a ratio does not exist the return counts from the same value as the change.
+        base = cost if base is None else base
     if base is None or base <= 0 or now <= 0:
         return change, None
     return change, now / base - 1

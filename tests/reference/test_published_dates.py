@@ -131,6 +131,16 @@ def test_there_are_141_published_dates_of_14_products_and_each_names_its_source(
         assert row["rule"] in ((notice,) if row["event"] == "first_notice" else last_rules)
 
 
+def test_every_declared_rule_stands_in_words_with_its_source() -> None:
+    with (DATA / "last_trade_rules.csv").open(encoding="utf-8", newline="") as file:
+        described = {row["rule"]: row for row in csv.DictReader(file)}
+    for name, text in RULES.items():
+        assert described[name]["words"]
+        assert described[name]["source"]
+        calendar = described[name]["business_days"]
+        assert ("XNYS" if calendar == "as cl25" else calendar[:4]) in text
+
+
 @pytest.mark.parametrize("product", PRODUCTS)
 def test_declared_rules_give_every_published_date(product: str) -> None:
     market = product_market(product)

@@ -8,6 +8,7 @@ import pytest
 from catalog.declarations import SAMPLE_DESK, load_desk
 from tests.reference.agree import row_differences
 from tests.reference.plain_rolls import lay_plain
+from tests.reference.plain_trend import impact_of_price
 from tests.reference.sample_markets import (
     NOT_COMPARED,
     Row,
@@ -22,7 +23,8 @@ from tests.reference.sample_markets import (
 
 MARKETS = ("NBND", "NCOC", "NCOP", "NEQX", "NGAS", "NKRN", "NOIL", "NVOL", "NWHT")
 LEDGER = (
-    "market", "plan", "nearby", "step", "decided_on", "measured_on", "effective_on", "outgoing", "incoming", "gap",
+    "market", "plan", "nearby", "step", "decided_on", "measured_on", "effective_on", "outgoing", "incoming",
+    "gap",
 )  # fmt: skip
 
 
@@ -61,6 +63,36 @@ def test_published_rolls_and_series_are_those_of_the_plain_telling(
             checked += len(ledger)
     assert found == []
     assert checked == len(rolls) > 0
+
+
+@pytest.mark.parametrize("code", MARKETS)
+def test_a_repaired_settle_counts_the_sessions_whose_score_it_would_have_turned(
+    sample_store: pathlib.Path, code: str
+) -> None:
+    """The worst of the market's plans, told again with the reported price (on the present scale) in place."""
+    snapshot, desk = newest_snapshot(sample_store), load_desk(SAMPLE_DESK)
+    declared = desk.markets[code]
+    market, days = read_market(snapshot, declared)
+    laid = [lay_plain(market, read_plan(declared, name, days)).chains[1] for name in declared.plans]
+    found = {}
+    for row in read_rows(snapshot, "findings", code):
+        if row["field"] != "settle" or row["action"] not in ("repaired", "masked") or row["session"] is None:
+            continue
+        place = days.index(row["session"])
+        reported = market.settle[(row["contract"], place)]
+        for change in declared.rescaled:
+            if row["session"] < change.before:
+                reported *= change.multiply
+        worst = max(
+            impact_of_price(market, chain, row["contract"], place, reported, desk.look_backs)
+            for chain in laid
+        )
+        found[(row["contract"], row["session"], row["kind"])] = (worst, row["impact_sessions"])
+    assert found, f"{code}: the sample has no repaired or masked settle"
+    assert {key: told for key, (_, told) in found.items()} == {
+        key: worst for key, (worst, _) in found.items()
+    }
+    assert sum(worst for worst, _ in found.values()) > 0
 
 
 def test_the_catalog_shows_the_rolls_that_were_told_again(sample_store: pathlib.Path) -> None:

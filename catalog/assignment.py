@@ -223,6 +223,7 @@ def inputs_digest(desk: Desk, market: str, files: tuple[FileOfMarket, ...]) -> s
             "code": code_digest(),
             "packages": package_versions(),
             "market": desk.markets[market].model_dump(mode="json", by_alias=True),
+            "plans": list(desk.markets[market].plans),
             "layouts": {name: desk.layouts[name].model_dump(mode="json") for name in used},
             "repairs": [repair.model_dump(mode="json") for repair in desk.repairs_of(market)],
             "waivers": [waiver.model_dump(mode="json", by_alias=True) for waiver in desk.waivers_for(market)],

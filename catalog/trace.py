@@ -177,7 +177,7 @@ def trace_price(
 ) -> Trace:  # fmt: skip
     """Tell where the price of a market on a session comes from.
 
-    Without a plan the first of the market's plans by name is taken. Raises UsageError for a market, plan,
+    Without a plan the first that the market declares is taken. Raises UsageError for a market, plan,
     nearby, session or snapshot that is not there, naming what is.
     """
     manifest = _open(places, snapshot)
@@ -188,7 +188,7 @@ def trace_price(
         )
     series = pq.read_table(folder / table_path("series", market))
     plans = sorted(set(series["plan"].to_pylist()))
-    name = plan if plan is not None else plans[0]
+    name = plan if plan is not None else manifest.markets[market].facts.get("first_plan", plans[0])
     if name not in plans:
         raise UsageError(f"{market} has no plan {name!r}; {_nearest(name, plans)}")
     ours = series.filter((pc.field("plan") == name) & (pc.field("nearby") == nearby))

@@ -272,6 +272,7 @@ def _facts(
         "last_session": day_of(panel.sessions[-1]).isoformat(),
         "findings": severities,
         "blocking": _blocking(findings, panel, laid),
+        "first_plan": next(iter(panel.market.plans)),
         "plans": plans,
     }
 

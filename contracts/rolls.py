@@ -377,10 +377,11 @@ def _lay_later(market: _Market, first: Held, nearby: int) -> Held:
         if event.decided >= start:
             strand.complete_until(event.decided)
             strand.drop_waiting(event.decided)
-        known, target = _target(market, event.incoming, nearby)
+        known = _known_from(market, event.incoming, nearby)
         session = max(event.decided, known, start)
-        if target == NEVER or session >= following:
+        if known == NEVER or session >= following:
             continue
+        target = _counted(market, event.incoming, session, nearby)
         strand.complete_until(session)
         planned = event.planned if session == event.decided else session + 1
         strand.turn_to(target, session, planned, event.trigger)
@@ -396,27 +397,24 @@ def _start_later(market: _Market, first: Held, nearby: int) -> tuple[int, int]:
     changes = np.flatnonzero(np.diff(first.contract[first.start :])) + first.start + 1
     begins = [first.start, *(int(change) for change in changes)]
     for begin, end in zip(begins, [*begins[1:], market.length], strict=True):
-        known, _ = _target(market, int(first.contract[begin]), nearby)
+        known = _known_from(market, int(first.contract[begin]), nearby)
         session = max(begin, known)
         if known != NEVER and session < end:
-            return session, int(_counted(market, int(first.contract[begin]), session)[nearby - 1])
+            return session, _counted(market, int(first.contract[begin]), session, nearby)
     return NEVER, NEVER
 
 
-def _counted(market: _Market, base: int, session: int) -> np.ndarray:
-    """The contract and the eligible ones after it that are known at the close of a session."""
-    return np.concatenate(([base], market.later(base, session)))
+def _counted(market: _Market, base: int, session: int, nearby: int) -> int:
+    """The n-th contract counted from `base` among those known at the close of a session."""
+    return base if nearby == 1 else int(market.later(base, session)[nearby - 2])
 
 
-def _target(market: _Market, base: int, nearby: int) -> tuple[int, int]:
-    """The first session that knows n contracts counted from `base`, and the n-th of them on it."""
+def _known_from(market: _Market, base: int, nearby: int) -> int:
+    """The first session that knows n contracts counted from `base`; NEVER where there are fewer."""
     after = market.eligible[market.eligible > base]
     if len(after) < nearby - 1:
-        return NEVER, NEVER
-    if nearby == 1:
-        return 0, base
-    known = int(np.sort(market.first_bar[after])[nearby - 2])
-    return known, int(_counted(market, base, known)[nearby - 1])
+        return NEVER
+    return 0 if nearby == 1 else int(np.sort(market.first_bar[after])[nearby - 2])
 
 
 def _empty(length: int, nearby: int, start: int) -> Held:

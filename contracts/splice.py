@@ -133,16 +133,20 @@ def _held_before(held: Held, carried: np.ndarray, settle: np.ndarray) -> tuple[n
     base = np.where(incoming == NEVER, outgoing_leg, (1 - weight) * outgoing_leg + weight * incoming_leg)
     base = np.where(before < 0, np.nan, base)
     base_of_return = base.copy()
-    by_effective: dict[int, list[RollStep]] = {}
+    places = np.flatnonzero(~np.isnan(settle))
+    since_last: dict[int, list[RollStep]] = {}
     for step in held.steps:
-        by_effective.setdefault(step.effective - start, []).append(step)
-    for place, steps in by_effective.items():
-        if before[place] >= 0 and any(step.is_stale or step.measured != before[place] + start for step in steps):
+        # A roll takes effect in the series on the first session from it on that has a price.
+        at_or_after = np.searchsorted(places, step.effective - start)
+        if at_or_after < len(places):
+            since_last.setdefault(int(places[at_or_after]), []).append(step)
+    for place, steps in since_last.items():
+        last = int(before[place])
+        if last >= 0 and any(step.measured != last + start for step in steps):
             # A step that was never measured has no gap and no ratio, and leaves neither base.
-            value = settle[before[place]]
-            base[place] = value + math.fsum(step.gap for step in steps)
+            base[place] = settle[last] + math.fsum(step.gap for step in steps)
             ratio = math.prod(step.ratio for step in steps)
-            base_of_return[place] = base[place] if math.isnan(ratio) else value * ratio
+            base_of_return[place] = base[place] if math.isnan(ratio) else settle[last] * ratio
     return base, base_of_return
 
 

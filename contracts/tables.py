@@ -82,8 +82,8 @@ REJECTS = Table(
 
 FILES = Table(
     "files",
-    "every raw file the snapshot was made from",
-    ("path", "file"),
+    "every version of every raw file the snapshot was made from",
+    ("path", "file", "taken_in"),
     ("path", "file", "bytes", "layout", "market", "contract", "rows", "rejects", "first_session",
      "last_session", "taken_in"),
 )  # fmt: skip

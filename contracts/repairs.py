@@ -194,6 +194,8 @@ def _tell(panel: Panel, settle: np.ndarray, verdict: Verdict) -> Finding:
     if verdict.kind is Kind.DECIMAL_SHIFT:
         size = f"{10 ** abs(verdict.power)}"
         says = f"is {size} times too large" if verdict.power > 0 else f"is 1/{size} of what it should be"
+    elif verdict.kind is Kind.LONE_MOVE and price <= 0:
+        says = "lies at or below zero, as this market's price may"
     else:
         says = _SAYS[verdict.kind].format(distance=round(price - verdict.expected, 10))
     if verdict.ruling is Ruling.KEPT:

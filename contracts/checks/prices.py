@@ -66,6 +66,8 @@ class _Curve:
         self.rows = np.flatnonzero(~np.isnan(settle).all(axis=1))
         self.reported = settle[self.rows]
         self.clean = self.reported.copy()
+        # Cells that stand alone and were kept: what follows them may be their return.
+        self.kept: set[tuple[int, int]] = set()
         change = np.full(self.reported.shape, np.nan)
         change[1:] = self.reported[1:] - self.reported[:-1]
         # One or two contracts are no curve: there a change is measured against none at all.
@@ -153,7 +155,9 @@ def judge_settles(panel: Panel, settle: np.ndarray, exempt: np.ndarray, quality:
         if verdict is None:
             continue
         verdicts.append(verdict)
-        if verdict.ruling is Ruling.REFUTED:
+        if verdict.ruling is Ruling.KEPT:
+            curve.kept.add(cell)
+        else:
             curve.clean[row, contract] = verdict.expected
             following = np.flatnonzero(~np.isnan(curve.reported[row + 1 : row + 1 + _LONGEST_LOOK_BACK, contract]))
             if len(following):
@@ -178,6 +182,11 @@ def _judge(curve: _Curve, row: int, contract: int, is_impossible: bool) -> Verdi
     score = abs(distance) / scale
     if score < quality.refuted_score or abs(distance) < quality.refuted_ticks * curve.tick:
         return None
+    if _is_return(curve, row, contract, since, distance):
+        return None
+    if price <= 0 < level:
+        # Only a market that may be negative comes here, and there it is a fact however strange.
+        return Verdict(session, contract, Kind.LONE_MOVE, Ruling.KEPT, _tidy(expected), score)
     power = _power_of_ten(price, level, curve.tick)
     if power and _is_nearer(curve, row, contract, price, level):
         # The contract's last settle was the wrong one: this one stands where its neighbours do.
@@ -186,7 +195,7 @@ def _judge(curve: _Curve, row: int, contract: int, is_impossible: bool) -> Verdi
         return Verdict(session, contract, Kind.DECIMAL_SHIFT, Ruling.REFUTED, _tidy(expected), score, power)
     if not is_known:
         return None
-    if _is_borne_out(curve, session, contract, price):
+    if _is_borne_out(curve, session, contract, price, distance):
         return Verdict(session, contract, Kind.LONE_MOVE, Ruling.KEPT, _tidy(expected), score)
     came_back = _comes_back(curve, row, contract, since, distance)
     if came_back:
@@ -248,11 +257,30 @@ def _range_reaches(curve: _Curve, session: int, contract: int, level: float) -> 
     return low <= min(level, price) * 1.05 and high >= max(level, price) * 0.95 and low <= high
 
 
-def _is_borne_out(curve: _Curve, session: int, contract: int, price: float) -> bool:
-    """Whether the bar's own range and volume agree with the settle."""
+def _is_borne_out(curve: _Curve, session: int, contract: int, price: float, distance: float) -> bool:
+    """Whether the bar's own range and volume agree with the settle.
+
+    The side it moved to has to be known and to reach it; the other side only must not contradict it.
+    """
     low, high = _bar_range(curve, session, contract)
     half = 0.5 * curve.tick
-    return bool(curve.panel.field("volume")[session, contract] > 0 and low - half <= price <= high + half)
+    reaches = low - half <= price if distance < 0 else price <= high + half
+    contradicts = price > high + half or price < low - half
+    return bool(curve.panel.field("volume")[session, contract] > 0 and reaches and not contradicts)
+
+
+def _is_return(curve: _Curve, row: int, contract: int, since: int, distance: float) -> bool:
+    """Whether the settle only comes back from a lone move that was kept: the curve, from before it, expects it."""
+    before = since
+    while (before, contract) in curve.kept:
+        before = curve.last_clean(before, contract)
+    if before in (since, -1):
+        return False
+    moves = curve.moves(contract, before, row)
+    if len(moves) < 2:
+        return False
+    off = curve.reported[row, contract] - (curve.clean[before, contract] + np.median(moves))
+    return bool(abs(off) <= _CAME_BACK * abs(distance))
 
 
 def _comes_back(curve: _Curve, row: int, contract: int, since: int, distance: float) -> bool | None:

@@ -149,7 +149,7 @@ def test_wrong_price_that_passed_does_not_condemn_the_right_ones_after_it() -> N
     settle[60, 0] /= 10
     fields["low"][60, 0] = settle[60, 0] - 1
     clean = judge(settle, **fields)
-    assert [(v.session, v.kind) for v in clean.verdicts] == [(60, Kind.LONE_MOVE), (61, Kind.CURVE_BREAK)]
+    assert [(v.session, v.kind) for v in clean.verdicts] == [(60, Kind.LONE_MOVE)]
     assert np.array_equal(clean.settle, settle)
 
 
@@ -161,3 +161,21 @@ def test_price_alone_in_its_market_is_masked_where_the_curve_cannot_say() -> Non
     assert [(v.session, v.kind) for v in clean.verdicts] == [(40, Kind.DECIMAL_SHIFT)]
     assert clean.is_masked[40, 0]
     assert np.isnan(clean.settle[40, 0])
+
+
+def test_settle_below_zero_is_kept_without_any_range_and_so_is_its_return() -> None:
+    """Settles alone, no volume, no range: a fall through zero and back the next day, in a market that may."""
+    settle = curve() - 195.0
+    settle[70, 0] = -37.5
+    clean = judge(settle, extra="may_be_negative = true")
+    assert [(v.session, v.kind, v.ruling.value) for v in clean.verdicts] == [(70, Kind.LONE_MOVE, "kept")]
+    assert np.array_equal(clean.settle, settle)
+
+
+def test_low_alone_bears_out_a_fall() -> None:
+    settle = curve()
+    settle[60:, 0] -= 15.0
+    low = np.full(settle.shape, np.nan)
+    low[60, 0] = settle[60, 0] - 1
+    clean = judge(settle, low=low, volume=np.full(settle.shape, 500.0))
+    assert [(v.session, v.kind) for v in clean.verdicts] == [(60, Kind.LONE_MOVE)]

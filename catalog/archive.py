@@ -114,7 +114,7 @@ def take_in(raw: Path, places: Places, rehash: bool = False) -> Intake:
                 else:
                     changed.append((path, status.st_size))
             if not memory and not changed:
-                reason = f"the raw folder {raw} holds no file; the archive alone is used"
+                reason = f"the raw folder {raw} holds no file to take in; the archive alone is used"
                 problems.append(Problem(".", reason))
             if changed:
                 kept = _keep_files(places, root, rehash, changed)

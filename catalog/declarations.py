@@ -15,7 +15,7 @@ from typing import Annotated, Any
 from pydantic import AfterValidator, BeforeValidator, Field
 
 from contracts.calendar_table import calendar_mistakes
-from contracts.declared import Declared, line_of, read_toml, validate
+from contracts.declared import Declared, Model, line_of, read_declaration
 from contracts.errors import CalendarError, DeskError, Mistake
 from contracts.findings import Waiver
 from contracts.layouts import Layout, read_layout
@@ -143,13 +143,10 @@ class _Reading:
     def names(self, folder: str) -> list[str]:
         return [name for name in self.texts if name.startswith(f"{folder}/")]
 
-    def model(self, kind: type[Any], name: str) -> Any:
-        data, mistakes = read_toml(self.texts[name], name)
+    def model(self, kind: type[Model], name: str) -> Model | None:
+        """One file read against a model; its mistakes are kept."""
+        made, _, mistakes = read_declaration(kind, self.texts[name], name)
         self.mistakes += mistakes
-        if mistakes and not data:
-            return None
-        made, more = validate(kind, data, self.texts[name], name)
-        self.mistakes += more
         return made
 
 
@@ -193,7 +190,7 @@ def _read_texts(path: Path) -> tuple[dict[str, str], list[Mistake], str]:
 @lru_cache(maxsize=4)
 def _load(path: Path, digest: str, items: tuple[tuple[str, str], ...]) -> Desk:
     reading = _Reading(dict(items))
-    head: DeskFile | None = reading.model(DeskFile, "desk.toml")
+    head = reading.model(DeskFile, "desk.toml")
     markets = _load_markets(reading)
     layouts: dict[str, Layout] = {}
     for name in reading.names("layouts"):
@@ -244,7 +241,7 @@ def _load_repairs(reading: _Reading, markets: dict[str, Market]) -> tuple[Declar
     repairs: list[DeclaredRepair] = []
     seen: dict[tuple[object, ...], str] = {}
     for name in reading.names("repairs"):
-        file: RepairsFile | None = reading.model(RepairsFile, name)
+        file = reading.model(RepairsFile, name)
         for index, repair in enumerate(file.repair if file else ()):
             key = (repair.contract, repair.session, repair.field)
             if repair.contract[:-8] not in markets:
@@ -266,7 +263,7 @@ def _load_repairs(reading: _Reading, markets: dict[str, Market]) -> tuple[Declar
 def _load_waivers(reading: _Reading, markets: dict[str, Market]) -> tuple[Waiver, ...]:
     if "waivers.toml" not in reading.texts:
         return ()
-    file: WaiversFile | None = reading.model(WaiversFile, "waivers.toml")
+    file = reading.model(WaiversFile, "waivers.toml")
     waivers = file.waiver if file else ()
     for index, waiver in enumerate(waivers):
         if waiver.market is not None and waiver.market not in markets:

@@ -10,7 +10,7 @@ import shutil
 import time
 from dataclasses import dataclass, replace
 from pathlib import Path
-from typing import Any
+from typing import Any, Final
 
 import pyarrow as pa
 
@@ -46,7 +46,8 @@ from contracts.errors import RopewalkError, StoreError, UsageError
 from contracts.findings import Finding, Kind, Severity, findings_table
 from contracts.tables import COVERAGE, MARKET_TABLES, RUNS, TABLES, make_table
 
-PUBLISHED, HELD_BACK = "published", "held back"
+PUBLISHED: Final = "published"
+HELD_BACK: Final = "held back"
 # Tables that tell of tonight even where a market's prices are held back.
 _TOLD_TONIGHT = ("findings", "rejects", "files")
 _NO_MARKET = "_desk"
@@ -282,9 +283,8 @@ def _judge(
         good = before.last_good_snapshot if before is not None else None
         if before is not None and before.state == PUBLISHED and last is not None:
             good = last.name
-        state = HELD_BACK if reasons else PUBLISHED
         verdicts[code] = Verdict(
-            state=state, reason="; ".join(reasons), inputs=digests[code], facts=facts.get(code, {}),
+            state=HELD_BACK if reasons else PUBLISHED, reason="; ".join(reasons), inputs=digests[code], facts=facts.get(code, {}),
             last_good_snapshot=good if reasons else None,
         )  # fmt: skip
     return verdicts

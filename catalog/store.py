@@ -208,7 +208,7 @@ def write_table(
     sink = pa.BufferOutputStream()
     try:
         pq.write_table(
-            stamped, sink, compression="zstd", compression_level=3, row_group_size=_ROWS_A_GROUP,
+            stamped, sink, compression="zstd", row_group_size=_ROWS_A_GROUP,
             write_statistics=True, write_page_index=True, write_page_checksum=True, store_schema=True,
             sorting_columns=pq.SortingColumn.from_ordering(stamped.schema, order),
         )  # fmt: skip
@@ -253,20 +253,18 @@ def _check_table(table: Table, market: str | None, data: pa.Table, path: str) ->
     for field in table.schema:
         column = data[field.name]
         if not field.nullable and column.null_count:
-            raise StoreError(
-                f"{path}: {field.name} is null in {column.null_count} rows; it is part of the key"
-            )
+            raise StoreError(f"{path}: {field.name} is null in {column.null_count} rows; it is part of the key")
         if pa.types.is_floating(field.type) and pc.all(pc.is_finite(column)).as_py() is False:
             raise StoreError(f"{path}: {field.name} holds a number that is not finite; expected null instead")
-    if market not in (None, DESK_WIDE) and pc.all(pc.equal(data["market"], market)).as_py() is False:
+    # A raw file of several markets is told in the table of one of them, without a market.
+    owned = pc.fill_null(pc.equal(data["market"], market), True) if market not in (None, DESK_WIDE) else None
+    if owned is not None and pc.all(owned).as_py() is False:
         raise StoreError(f"{path}: holds rows of another market")
     repeated = _tied_rows(data, table.order or table.key, path)
     if table.order:
         repeated = data.num_rows - data.group_by(list(table.key)).aggregate([]).num_rows
     if repeated:
-        raise StoreError(
-            f"{path}: {repeated} rows repeat a key; expected {', '.join(table.key)} to be unique"
-        )
+        raise StoreError(f"{path}: {repeated} rows repeat a key; expected {', '.join(table.key)} to be unique")
 
 
 def _show(schema: pa.Schema) -> str:
@@ -283,17 +281,11 @@ def _tied_rows(data: pa.Table, order: tuple[str, ...], path: str) -> int:
         column = data[name]
         upper, lower = column.slice(0, count), column.slice(1)
         # A null sorts last, as Arrow sorts it.
-        rises = pc.or_(
-            pc.fill_null(pc.less(upper, lower), False), pc.and_(pc.is_valid(upper), pc.is_null(lower))
-        )
-        falls = pc.or_(
-            pc.fill_null(pc.greater(upper, lower), False), pc.and_(pc.is_null(upper), pc.is_valid(lower))
-        )
+        rises = pc.or_(pc.fill_null(pc.less(upper, lower), False), pc.and_(pc.is_valid(upper), pc.is_null(lower)))
+        falls = pc.or_(pc.fill_null(pc.greater(upper, lower), False), pc.and_(pc.is_null(upper), pc.is_valid(lower)))
         if pc.any(pc.and_(tied, falls)).as_py():
             row = pc.index(pc.and_(tied, falls), True).as_py() + 1
-            raise StoreError(
-                f"{path}: row {row + 1} sorts before row {row} by {name}; expected {', '.join(order)}"
-            )
+            raise StoreError(f"{path}: row {row + 1} sorts before row {row} by {name}; expected {', '.join(order)}")
         tied = pc.and_(tied, pc.invert(rises))
     return int(pc.sum(tied).as_py() or 0)
 
@@ -347,9 +339,7 @@ def check_files(folder: Path, manifest: Manifest) -> list[str]:
     seen = set()
     for above, _, names in os.walk(folder):
         seen |= {os.path.relpath(os.path.join(above, name), folder) for name in names}
-    problems += [
-        f"{path}: is not listed in the manifest" for path in sorted(seen - {*manifest.files, MANIFEST})
-    ]
+    problems += [f"{path}: is not listed in the manifest" for path in sorted(seen - {*manifest.files, MANIFEST})]
     with ThreadPoolExecutor(_READERS) as pool:
         found = pool.map(lambda file: _check_file(folder, file), manifest.files.values())
         problems += [problem for problem in found if problem]
@@ -380,12 +370,15 @@ def facts_of(places: Places, manifest: Manifest) -> SnapshotFacts:
 
 
 def _prepare_switch(places: Places, manifest: Manifest) -> tuple[Path, Path]:
-    """Write the new catalog and the new CURRENT beside the old ones; raises StoreError."""
+    """Write the new catalog and the new CURRENT beside the old ones; raises StoreError, leaving neither."""
     with store_errors("the new catalog could not be written"):
-        catalog = prepare_part(places.catalog)
-        build_catalog(catalog, facts_of(places, manifest))
-        current = prepare_part(places.current)
-        write_new(current, f"{manifest.name}\n".encode(), 0o644)
+        catalog, current = prepare_part(places.catalog), prepare_part(places.current)
+        try:
+            build_catalog(catalog, facts_of(places, manifest))
+            write_new(current, f"{manifest.name}\n".encode(), 0o644)
+        except BaseException:
+            catalog.unlink(missing_ok=True)
+            raise
     return catalog, current
 
 
@@ -397,6 +390,11 @@ def _switch(places: Places, catalog: Path, current: Path) -> None:
         os.replace(catalog, places.catalog)
         os.replace(current, places.current)
         sync_folder(places.store)
+
+
+def rebuild_catalog(places: Places, manifest: Manifest) -> None:
+    """Make catalog and CURRENT those of a snapshot that is in place; the caller holds the lock."""
+    _switch(places, *_prepare_switch(places, manifest))
 
 
 def clean_leftovers(places: Places) -> list[str]:
@@ -417,11 +415,11 @@ def clean_leftovers(places: Places) -> list[str]:
             done.append(f"removed {staging.name}")
     current = current_snapshot(places)
     while (manifest := _unfinished(places, current, done)) is not None:
-        _switch(places, *_prepare_switch(places, manifest))
+        rebuild_catalog(places, manifest)
         done.append(f"switched to {manifest.name}, which a stopped run had completed")
         current = manifest.name
     if current is not None and not places.catalog.exists():
-        _switch(places, *_prepare_switch(places, read_manifest(places, current)))
+        rebuild_catalog(places, read_manifest(places, current))
         done.append("built the catalog again")
     return done
 

@@ -30,19 +30,8 @@ class Superseded:
 
 
 @dataclass(frozen=True)
-class Bars:
-    """One bar a contract and session, sorted by both.
-
-    contracts: names in delivery order, (N,); contract: indices into them, (n,); session: day numbers, (n,);
-    values: (n, 6) in the order of BAR_FIELDS, as reported; source: index of the file, (n,); line: (n,).
-    """
-
-    contracts: tuple[str, ...]
-    contract: np.ndarray
-    session: np.ndarray
-    values: np.ndarray
-    source: np.ndarray
-    line: np.ndarray
+class Bars(ParsedRows):
+    """One bar a contract and session, sorted by both: parsed rows of which each pair has one left."""
 
 
 @dataclass(frozen=True)

@@ -10,7 +10,7 @@ from typing import Any, TypeVar, get_origin
 
 from pydantic import BaseModel, ConfigDict, ValidationError
 
-from contracts.errors import Mistake
+from contracts.errors import DeskError, Mistake
 
 Model = TypeVar("Model", bound=BaseModel)
 
@@ -88,6 +88,22 @@ def validate(model: type[Model], data: dict[str, Any], text: str, file: str) -> 
         return model.model_validate(data), []
     except ValidationError as error:
         return None, [_mistake(detail, data, text, file, model) for detail in error.errors()]
+
+
+def read_declaration(model: type[Model], text: str, file: str) -> tuple[Model | None, dict[str, Any], list[Mistake]]:
+    """Read one file against a model; returns the declaration or None, the data, and every mistake so far."""
+    data, mistakes = read_toml(text, file)
+    if mistakes and not data:
+        return None, {}, mistakes
+    made, more = validate(model, data, text, file)
+    return made, data, mistakes + more
+
+
+def insist(made: Model | None, mistakes: list[Mistake]) -> Model:
+    """The declaration; raises DeskError where it could not be made or has mistakes."""
+    if made is None or mistakes:
+        raise DeskError(mistakes)
+    return made
 
 
 def _mistake(detail: Any, data: dict[str, Any], text: str, file: str, model: type[BaseModel]) -> Mistake:

@@ -10,9 +10,9 @@ from typing import Annotated, Any
 
 from pydantic import AfterValidator, BeforeValidator, Field
 
-from contracts.declared import CODE, Declared, line_of, read_toml, validate
+from contracts.declared import CODE, Declared, insist, line_of, read_declaration
 from contracts.deliveries import Delivery, contract_name, parse_month, parse_year
-from contracts.errors import DeskError, Mistake
+from contracts.errors import Mistake
 
 _GROUPS = frozenset({"market", "year", "month", "month_code"})
 PRICE_FIELDS = ("open", "high", "low", "settle")
@@ -134,22 +134,13 @@ def claim_file(layout: Layout, path: str) -> Claim | None:
 
 def parse_layout(text: str, file: str) -> Layout:
     """Read one layout file; raises DeskError with every mistake it has."""
-    layout, mistakes = read_layout(text, file)
-    if layout is None or mistakes:
-        raise DeskError(mistakes)
-    return layout
+    return insist(*read_layout(text, file))
 
 
 def read_layout(text: str, file: str) -> tuple[Layout | None, list[Mistake]]:
     """Read one layout file; returns what could be read and every mistake it has."""
-    data, mistakes = read_toml(text, file)
-    if not data:
-        return None, mistakes or [Mistake(file, "(file)", "nothing", "a layout declaration")]
-    layout, more = validate(Layout, data, text, file)
-    mistakes += more
-    if layout is not None:
-        mistakes += _inconsistencies(layout, text, file)
-    return layout, mistakes
+    layout, _, mistakes = read_declaration(Layout, text, file)
+    return layout, mistakes + (_inconsistencies(layout, text, file) if layout is not None else [])
 
 
 def _inconsistencies(layout: Layout, text: str, file: str) -> list[Mistake]:

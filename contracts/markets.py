@@ -14,9 +14,9 @@ from typing import Annotated, Any
 from dateutil.rrule import rrule, rrulestr
 from pydantic import AfterValidator, BeforeValidator, Field, model_validator
 
-from contracts.declared import CODE, PLAIN_NAME, Declared, line_of, read_toml, validate
+from contracts.declared import CODE, PLAIN_NAME, Declared, insist, line_of, read_declaration, validate
 from contracts.deliveries import Delivery, delivery_of, parse_delivery
-from contracts.errors import CalendarError, DeskError, Mistake
+from contracts.errors import CalendarError, Mistake
 
 
 class Trigger(StrEnum):
@@ -252,23 +252,15 @@ def rule_for(rules: tuple[DayRule, ...], delivery: Delivery) -> DayRule | None:
 
 def parse_market(text: str, file: str) -> Market:
     """Read one market file; raises DeskError with every mistake it has."""
-    market, mistakes = read_market(text, file)
-    if market is None or mistakes:
-        raise DeskError(mistakes)
-    return market
+    return insist(*read_market(text, file))
 
 
 def read_market(text: str, file: str) -> tuple[Market | None, list[Mistake]]:
     """Read one market file; returns what could be read and every mistake it has."""
-    data, mistakes = read_toml(text, file)
-    if not data:
-        return None, mistakes or [Mistake(file, "(file)", "nothing", "a market declaration")]
-    market, more = validate(Market, data, text, file)
-    mistakes += more
+    market, data, mistakes = read_declaration(Market, text, file)
     if market is not None:
         mistakes += _inconsistencies(market, text, file)
-    mistakes += _rule_mistakes(data, text, file)
-    return market, mistakes
+    return market, mistakes + _rule_mistakes(data, text, file)
 
 
 def _inconsistencies(market: Market, text: str, file: str) -> list[Mistake]:

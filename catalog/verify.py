@@ -1,0 +1,154 @@
+"""Whether what is published is what was recorded of it, and whether it holds together.
+
+Belongs here: hashes, the archive behind a snapshot, the catalog file, the soundness rules, and building the
+catalog again. Does not belong here: deriving the numbers again (`deep.py`).
+"""
+
+from collections.abc import Callable
+from concurrent.futures import ThreadPoolExecutor
+from dataclasses import dataclass
+from functools import partial
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+from catalog.archive import read_archived, read_register
+from catalog.places import Places, write_lock
+from catalog.query import open_catalog, run_query
+from catalog.store import Manifest, check_files, current_snapshot, read_manifest, rebuild_catalog
+from contracts.errors import StoreUnsound, UsageError
+from contracts.tables import TABLES
+
+if TYPE_CHECKING:
+    import duckdb
+
+RULES = Path(__file__).parent / "soundness"
+_SHOWN = 3
+_READERS = 4
+
+
+@dataclass(frozen=True)
+class Report:
+    """The outcome: problems in words (none where the store is sound), files hashed, soundness rules run."""
+
+    problems: tuple[str, ...]
+    files_checked: int
+    rules_run: int
+    snapshot: str | None = None
+
+
+def verify_store(places: Places, snapshot: str | None = None) -> Report:
+    """Check a snapshot (the current one by default), the archive behind it and, if current, the catalog.
+
+    Hashes every file of the snapshot and every raw file it names, looks for what is missing or not listed,
+    and runs each rule of `soundness/`, which returns the rows that offend. Whatever is wrong is a problem of
+    the report; raises UsageError where nothing is published or the snapshot named is not there.
+    """
+    try:
+        current = current_snapshot(places)
+        if snapshot is None and current is None:
+            raise UsageError(f"{places.store}: nothing is published here yet; run ropewalk build first")
+        manifest = read_manifest(places, snapshot or current)
+    except StoreUnsound as error:
+        return Report((str(error),), 0, 0)
+    problems = [f"{manifest.name}/{problem}" for problem in check_files(places.snapshot(manifest.name), manifest)]
+    if manifest.name == current:
+        problems += _gather(partial(_check_catalog, places, manifest))
+    try:
+        connection = open_catalog(places, manifest.name)
+    except StoreUnsound as error:
+        return Report((*problems, str(error)), len(manifest.files), 0, manifest.name)
+    with connection:
+        raw_files = 0
+        problems += _gather(partial(_count_rows, connection, manifest))
+        try:
+            named = run_query(connection, "select distinct path, file from files order by all")[1]
+            raw_files = len({file for _, file in named})
+            problems += _check_archive(places, named)
+        except StoreUnsound as error:
+            problems.append(str(error))
+        rules = sorted(RULES.glob("*.sql"))
+        for rule in rules:
+            problems += _gather(partial(run_rule, connection, rule))
+    return Report(tuple(problems), len(manifest.files) + raw_files, len(rules), manifest.name)
+
+
+def run_rule(connection: "duckdb.DuckDBPyConnection", rule: Path) -> list[str]:
+    """What one soundness rule finds, in a sentence; empty where it finds nothing. Raises StoreUnsound."""
+    text = rule.read_text(encoding="utf-8")
+    meaning = text.partition("\n")[0].removeprefix("--").strip()
+    columns, rows = run_query(connection, text.rstrip().rstrip(";"))
+    if not rows:
+        return []
+    shown = []
+    for row in rows[:_SHOWN]:
+        shown.append(", ".join(f"{name} {value}" for name, value in zip(columns, row, strict=True)))
+    more = f" and {len(rows) - _SHOWN:,} more" if len(rows) > _SHOWN else ""
+    noun = "row" if len(rows) == 1 else "rows"
+    return [f"{rule.stem}: {meaning} {len(rows):,} {noun}: {'; '.join(shown)}{more}"]
+
+
+def repoint(places: Places) -> Manifest:
+    """Build the catalog again for the current snapshot, where the store now lies; takes the store's lock.
+
+    Raises StoreBusy, UsageError where nothing is published, StoreUnsound where the manifest is damaged.
+    """
+    with write_lock(places):
+        manifest = read_manifest(places)
+        rebuild_catalog(places, manifest)
+    return manifest
+
+
+def _gather(check: Callable[[], list[str]]) -> list[str]:
+    """A check's problems, or the one that kept it from finishing."""
+    try:
+        return check()
+    except StoreUnsound as error:
+        return [str(error)]
+
+
+def _check_catalog(places: Places, manifest: Manifest) -> list[str]:
+    """Whether the catalog file shows the current snapshot, whole."""
+    with open_catalog(places) as connection:
+        seen = run_query(connection, "select name, sequence, parent, desk, code from snapshot")[1]
+        expected = (manifest.name, manifest.sequence, manifest.parent, manifest.desk, manifest.code)
+        if seen != [expected]:
+            return [f"{places.catalog}: seen the snapshot {seen}; expected {expected}; run verify --repoint"]
+        return _count_rows(connection, manifest)
+
+
+def _count_rows(connection: "duckdb.DuckDBPyConnection", manifest: Manifest) -> list[str]:
+    """Tables that do not have the rows the manifest counts."""
+    problems = []
+    for table in TABLES:
+        listed = [file.rows for path, file in manifest.files.items() if path.startswith(f"{table.name}/")]
+        seen = run_query(connection, f"select count(*) from {table.name}")[1][0][0]  # noqa: S608
+        if seen != sum(listed):
+            problems.append(f"{table.name}: seen {seen:,} rows; expected {sum(listed):,} by the manifest")
+    return problems
+
+
+def _check_archive(places: Places, named: list[tuple[str, str]]) -> list[str]:
+    """What of a snapshot's raw files, given by path and SHA-256, is not in the archive or its register."""
+    arrivals = read_register(places)
+    registered = {(arrival.path, arrival.file) for arrival in arrivals}
+    problems = [
+        f"{places.register}: {path} with SHA-256 {file} is in the snapshot and not in the register"
+        for path, file in named
+        if (path, file) not in registered
+    ]
+    hashed = sorted({file for _, file in named})
+    with ThreadPoolExecutor(_READERS) as pool:
+        for found in pool.map(lambda file: _gather(partial(_read_only, places, file)), hashed):
+            problems += found
+    others = sorted({arrival.file for arrival in arrivals} - set(hashed))
+    problems += [
+        f"{places.archived(file)}: is registered and not there"
+        for file in others
+        if not places.archived(file).is_file()
+    ]
+    return problems
+
+
+def _read_only(places: Places, file: str) -> list[str]:
+    read_archived(places, file)
+    return []

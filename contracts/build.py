@@ -4,6 +4,7 @@ Belongs here: the order of the rooms. Does not belong here: what happens in any 
 reads or writes a file.
 """
 
+import datetime
 from dataclasses import dataclass, field, replace
 from typing import Any
 
@@ -17,6 +18,7 @@ from contracts.checks.rolled import check_rolls
 from contracts.checks.rows import check_rows
 from contracts.checks.shocks import check_shocks
 from contracts.checks.stale import find_stale_runs
+from contracts.deliveries import delivery_of
 from contracts.errors import IntakeError
 from contracts.findings import Finding, Kind, Severity, Waiver, findings_table, waive
 from contracts.intake import FileRows, RawFile, parse_rows, split_file
@@ -25,7 +27,7 @@ from contracts.panel import Panel, lay_panel
 from contracts.quality import Gates, Quality
 from contracts.repairs import Clean, DeclaredRepair, clean_panel
 from contracts.rolls import NEVER, Held, lay_rolls
-from contracts.sessions import day_of
+from contracts.sessions import day_of, last_trade_day
 from contracts.splice import Series, carry_forward, check_identities, splice
 from contracts.trend import impact_of_gap, impact_of_price
 from contracts.written import (
@@ -42,18 +44,22 @@ RECENT_SESSIONS = 60
 _TELLS_OF_SETTLE = frozenset({"repaired", "masked"})
 
 
+# Path, contract (None where its rows say it) and message of a file of which nothing can be read.
+Failure = tuple[str, str | None, str]
+
+
 @dataclass(frozen=True)
 class Inputs:
     """All that decides a market's tables: the same inputs give the same bytes.
 
     `files` are in any order; `is_old` marks those with a newer version under the same path; `failures` are
-    (path, contract, message) of files that could not even be unpacked.
+    of files that could not even be unpacked.
     """
 
     market: Market
     files: tuple[RawFile, ...]
     is_old: tuple[bool, ...]
-    failures: tuple[tuple[str, str | None, str], ...] = ()
+    failures: tuple[Failure, ...] = ()
     repairs: tuple[DeclaredRepair, ...] = ()
     waivers: tuple[Waiver, ...] = ()
     quality: Quality = field(default_factory=Quality)
@@ -85,11 +91,16 @@ def build_market(inputs: Inputs) -> Built:
     the result does not hold together.
     """
     market = inputs.market
-    files, is_old, findings = _read(inputs)
+    files, is_old, failures = _read(inputs)
     parsed = parse_rows(files, market)
     arrived = settle_arrivals(parsed, files, is_old)
+    if not len(arrived.bars.line):
+        first = f"; {failures[0][2]}" if failures else ""
+        raise ValueError(f"{market.code}: no row of its {len(inputs.files)} files can be read{first}")
     panel = lay_panel(market, arrived.bars)
+    data_date = day_of(panel.sessions[-1])
     clean = clean_panel(panel, arrived.bars, inputs.repairs, inputs.quality)
+    findings = _tell_failures(market, failures, data_date)
     findings += check_files(market.code, files, is_old)
     findings += check_meetings(market.code, parsed, arrived, files, inputs.gates)
     findings += check_days(panel, _left_out(panel, arrived))
@@ -102,7 +113,6 @@ def build_market(inputs: Inputs) -> Built:
     for one in laid:
         findings += check_rolls(panel, one.name, market.plans[one.name], one.held)
     findings = _weigh(findings, panel, clean, laid, inputs.look_backs)
-    data_date = day_of(panel.sessions[-1])
     findings = waive(findings, inputs.waivers, market.code, data_date)
     counts = _counts(findings)
     impacts = [_gap_impacts(one, inputs.look_backs) for one in laid]
@@ -118,10 +128,9 @@ def build_market(inputs: Inputs) -> Built:
     return Built(tables, _facts(findings, panel, files, is_old, laid))
 
 
-def _read(inputs: Inputs) -> tuple[list[FileRows], list[bool], list[Finding]]:
-    """Split every file into rows, in order of intake and path; a file without a usable header is a finding."""
-    code = inputs.market.code
-    findings = [_unreadable(code, *failure) for failure in inputs.failures]
+def _read(inputs: Inputs) -> tuple[list[FileRows], list[bool], list[Failure]]:
+    """Split every file into rows, in order of intake and path; a newest version without a usable header fails."""
+    failures = list(inputs.failures)
     files: list[FileRows] = []
     is_old: list[bool] = []
     order = sorted(
@@ -132,12 +141,19 @@ def _read(inputs: Inputs) -> tuple[list[FileRows], list[bool], list[Finding]]:
             files.append(split_file(raw))
             is_old.append(old)
         except IntakeError as error:
-            findings.append(_unreadable(code, raw.path, raw.claim.contract, str(error)))
-    return files, is_old, findings
+            if not old:
+                failures.append((raw.path, raw.claim.contract, str(error)))
+    return files, is_old, failures
 
 
-def _unreadable(market: str, path: str, contract: str | None, message: str) -> Finding:
-    return Finding(Kind.UNREADABLE_FILE, Severity.BLOCK, message, market, contract, detail=path)
+def _tell_failures(market: Market, failures: list[Failure], data_date: datetime.date) -> list[Finding]:
+    """Files of which no row can be read. Without a live contract no roll can be trusted; a dead one leaves a hole."""
+    found = []
+    for path, contract, message in failures:
+        is_dead = contract is not None and last_trade_day(market, delivery_of(contract)) < data_date
+        severity = Severity.REVIEW if is_dead else Severity.BLOCK
+        found.append(Finding(Kind.UNREADABLE_FILE, severity, message, market.code, contract, detail=path))
+    return found
 
 
 def _left_out(panel: Panel, arrived: Arrived) -> list[tuple[int, str, int]]:

@@ -21,6 +21,8 @@ from contracts.notation import parse_prices
 from contracts.sessions import day_number
 
 MOST_ROWS = 20_000_000
+# No price or count of anything that trades is larger; beyond it doubles no longer hold every whole number.
+LARGEST_NUMBER = 2.0**53
 _LINE_END = re.compile(r"\r\n|\n|\r")
 # A quoted field may run over a few lines; past these an opening quote is taken for a slip of its own line.
 _LONGEST_RECORD = 20
@@ -178,7 +180,8 @@ def _places(header: list[str], raw: RawFile, line: int) -> dict[str, int]:
             continue
         count = names.count(wanted)
         if count != 1:
-            seen = "twice" if count else f"not among {', '.join(names)[:200]}"
+            there = "".join(mark if mark.isprintable() else _UNREADABLE for mark in ", ".join(names)[:200])
+            seen = "twice" if count else f"not among {there}"
             raise IntakeError(
                 f"{raw.path}:{line}: column {wanted!r} ({name}) is {seen}; "
                 f"expected once, as layout {raw.layout_name} says"
@@ -317,8 +320,9 @@ def _numbers(reader: _Reader, name: str, market: Market) -> np.ndarray:
     expected = f"a price ({notation}, decimal mark {layout.decimal!r})" if is_price else "a whole number of contracts"
     if not is_price:
         with np.errstate(invalid="ignore"):
-            bad |= ~np.isnan(values) & ((values < 0) | (values != np.floor(values)) | (values > 2**53))
-    bad |= np.isinf(values)
+            bad |= ~np.isnan(values) & ((values < 0) | (values != np.floor(values)))
+    with np.errstate(invalid="ignore"):
+        bad |= np.abs(values) > LARGEST_NUMBER
     reader.refuse(bad, texts, name, expected)
     if is_price and layout.price_scale != 1.0:
         values = scale_prices(values, layout.price_scale)

@@ -179,3 +179,24 @@ def test_store_is_rebuilt_from_the_archive_when_the_raw_folder_is_gone(tiny: Pat
     first, second = table_hashes(store), table_hashes(other)
     assert {path for path in first if first[path] != second[path]} <= {"findings/_desk.parquet"}
     assert current_snapshot(Places(other)) is not None
+
+
+def test_rubbish_of_a_dead_contract_is_told_and_does_not_stop_its_market(tiny: Path, tmp_path: Path) -> None:
+    (tiny / "raw" / "TINA_2023_03.csv").write_bytes(bytes(range(256)) * 20)
+    (tiny / "raw" / "TINA_2023_06.csv").write_bytes(b"")
+    (tiny / "raw" / "TINA_2023_09.csv").symlink_to("/etc/hostname")
+    store = tmp_path / "published"
+    summary = run_night(tiny, store)
+    assert summary.published == ("TINA", "TINB")
+    query = "select kind, contract from findings where kind in ('unreadable_file', 'refused_path') order by all"
+    assert rows(store, query) == [
+        ("refused_path", None),
+        ("unreadable_file", "TINA-2023-03"),
+        ("unreadable_file", "TINA-2023-06"),
+    ]
+
+
+def test_rubbish_of_a_live_contract_holds_its_market_back(tiny: Path, tmp_path: Path) -> None:
+    (tiny / "raw" / "TINA_2025_03.csv").write_bytes(b"")
+    summary = run_night(tiny, tmp_path / "published")
+    assert summary.held_back == (("TINA", "TINA_2025_03.csv: the file is empty; expected a header and rows"),)

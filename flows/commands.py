@@ -1,0 +1,345 @@
+"""The commands.
+
+Belongs here: what each command asks for, which room it calls, and what it prints. Does not belong here: the
+frame around a command (`shell.py`), any computation. Heavy modules are imported inside the commands.
+"""
+
+import datetime
+import re
+from typing import TYPE_CHECKING, Any
+
+import click
+
+from contracts.errors import UsageError
+from flows.exits import Exit
+from flows.render import complain, say, say_json, say_table
+from flows.shell import Asked, Ropewalk, command, show_version
+
+if TYPE_CHECKING:
+    from catalog.summary import Summary
+
+# What a person reads of the quality log in one go; a machine gets all of it.
+_FINDINGS_SHOWN = 50
+_CONTRACT_COLUMNS = ("contract", "last_trade", "first_notice")
+_ROLL_COLUMNS = (
+    "plan", "nearby", "effective_on", "outgoing", "incoming", "weight_after", "outgoing_settle",
+    "incoming_settle", "gap", "ratio", "trigger", "decided_on", "measured_on", "impact_sessions",
+)  # fmt: skip
+_FINDING_COLUMNS = ("impact_sessions", "severity", "action", "waived_until", "message", "finding")
+
+
+@click.group(cls=Ropewalk, context_settings={"max_content_width": 100})
+@click.option(
+    "--version", is_flag=True, is_eager=True, expose_value=False, callback=show_version, help="The version."
+)
+def main() -> None:
+    """Lay raw per-expiry futures files into clean continuous series.
+
+    Without options every command works on the sample desk that comes with the program, in ./published.
+    """
+
+
+_jobs = click.option(
+    "--jobs",
+    type=click.IntRange(min=1),
+    metavar="N",
+    help="Number of workers.  [default: one a processor, at least 2]",
+)
+
+
+@command(main, "nightly", "ropewalk nightly --desk /srv/desk")
+@_jobs
+def nightly(asked: Asked, jobs: int | None) -> Exit:
+    """Run one night under Prefect: take in, build, check, publish.
+
+    Reports to the Prefect API that Prefect's settings name. Where none is named, an own server is started for
+    the length of the run; its records stay in Prefect's home folder. Where the API cannot be reached, the
+    same work is done unwatched.
+    """
+    _check_desk(asked)
+    from flows.nightly import run_watched
+
+    told = run_watched(asked.where(), jobs)
+    assert told.summary is not None
+    code = _tell_summary(told.summary, asked.as_json)
+    if not asked.as_json and not told.notes:
+        kept = f"{told.recorded} of {told.expected} task runs" if told.expected else "the run"
+        say([f"  Prefect keeps {kept}"])
+    for note in told.notes:
+        complain(note)
+    return code
+
+
+@command(main, "build", "ropewalk build --desk /srv/desk --jobs 4")
+@_jobs
+def build(asked: Asked, jobs: int | None) -> Exit:
+    """Do the work of one night without a scheduler.
+
+    Takes in, builds, checks, publishes. What carries the markets is declared in desk.toml: [run] workers =
+    "threads", "processes" or "dask".
+    """
+    _check_desk(asked)
+    from flows.work import pool_builder, run_night
+
+    return _tell_summary(run_night(asked.where(), "build", pool_builder(jobs)), asked.as_json)
+
+
+def _check_desk(asked: Asked) -> None:
+    """All mistakes of a wrong desk are told at once, and before a lock is taken or a server started for it."""
+    from catalog.declarations import load_desk
+
+    load_desk(asked.desk_folder())
+
+
+def _tell_summary(summary: "Summary", as_json: bool) -> Exit:
+    if as_json:
+        say_json(summary.as_json())
+    else:
+        say(summary.lines())
+    if summary.snapshot is None and not summary.nothing_new:
+        return Exit.NOT_PUBLISHED
+    return Exit(summary.exit_code)
+
+
+@command(main, "desk", "ropewalk desk NWHT --years 2019:2026")
+@click.argument("market", required=False)
+@click.option("--years", metavar="FIRST:LAST", help="Delivery years.  [default: last year to next year]")
+def desk(asked: Asked, market: str | None, years: str | None) -> Exit:
+    """Validate the desk; with a MARKET, list its contracts.
+
+    Every declaration is read, and every mistake told. A market's days are the last trading session, first
+    notice, and each roll plan's deadline: the session from which the plan holds the next contract.
+    """
+    from catalog.declarations import load_desk
+
+    first, last = _read_years(years, has_market=market is not None)
+    declared = load_desk(asked.desk_folder())
+    if market is None:
+        if asked.as_json:
+            say_json({"markets": list(declared.markets), "layouts": list(declared.layouts), "mistakes": []})
+            return Exit.DONE
+        counts = (
+            f"{len(declared.markets)} markets, {len(declared.layouts)} layouts, "
+            f"{len(declared.repairs)} repairs, {len(declared.waivers)} waivers"
+        )
+        say([f"{declared.path}: {counts}; no mistakes", ""])
+        rows = [
+            (code, m.name, m.exchange, m.currency, ", ".join(m.plans)) for code, m in declared.markets.items()
+        ]
+        say_table(("market", "name", "exchange", "currency", "plans"), rows)
+        return Exit.DONE
+    if market not in declared.markets:
+        from catalog.listings import nearest
+
+        raise UsageError(f"the desk declares no market {market!r}; {nearest(market, list(declared.markets))}")
+    from contracts.calendar_table import contract_days
+
+    contracts = contract_days(declared.markets[market], first, last)
+    if asked.as_json:
+        say_json({"contracts": contracts})
+        return Exit.DONE
+    plans = list(declared.markets[market].plans)
+    rows = [
+        (*(row[column] for column in _CONTRACT_COLUMNS), *(row["deadlines"].get(plan) for plan in plans))
+        for row in contracts
+    ]
+    say_table((*_CONTRACT_COLUMNS, *(f"deadline of {plan}" for plan in plans)), rows)
+    return Exit.DONE
+
+
+def _read_years(text: str | None, has_market: bool) -> tuple[int, int]:
+    if text is None:
+        this = datetime.date.today().year
+        return this - 1, this + 1
+    if not has_market:
+        raise UsageError("--years was given without a market; expected a market to list the contracts of")
+    match = re.fullmatch(r"(\d{4})(?::(\d{4}))?", text)
+    first, last = (int(match[1]), int(match[2] or match[1])) if match else (0, -1)
+    if not 1900 <= first <= last <= 2099:
+        expected = "years from 1900 to 2099, the first not after the last, as 2019:2026"
+        raise UsageError(f"--years: seen {text!r}; expected {expected}")
+    return first, last
+
+
+@command(main, "trace", "ropewalk trace NWHT 2024-11-05 --plan by_open_interest")
+@click.argument("market")
+@click.argument("session")
+@click.option("--plan", metavar="NAME", help="Roll plan.  [default: the first the market declares]")
+@click.option(
+    "--nearby", type=click.IntRange(min=1), default=1, show_default=True, metavar="N", help="Which nearby."
+)
+@click.option("--snapshot", metavar="NAME", help="Snapshot.  [default: the newest]")
+def trace(
+    asked: Asked, market: str, session: str, plan: str | None, nearby: int, snapshot: str | None
+) -> Exit:
+    """Tell where one published price comes from.
+
+    The arithmetic, the rolls, the repair, the raw line. SESSION is a day written as 2024-11-05.
+    """
+    day = _read_day(session, "SESSION")
+    from catalog.places import Places
+    from catalog.trace import trace_price
+
+    found = trace_price(Places(asked.where().store), market, day, plan, nearby, snapshot)
+    if asked.as_json:
+        say_json(found.as_json())
+    else:
+        say(found.lines())
+    return Exit.DONE
+
+
+def _read_day(text: str, name: str) -> datetime.date:
+    try:
+        if re.fullmatch(r"\d{4}-\d{2}-\d{2}", text):
+            return datetime.date.fromisoformat(text)
+    except ValueError:
+        pass
+    raise UsageError(f"{name}: seen {text!r}; expected a day, as 2024-11-05")
+
+
+@command(main, "findings", "ropewalk findings NWHT --since 2024-11-01 --severity block")
+@click.argument("market", required=False)
+@click.option("--since", metavar="DATE", help="Only findings on sessions from this day on.")
+@click.option("--kind", metavar="KIND", help="Only this kind of finding.")
+@click.option("--severity", type=click.Choice(["note", "review", "block"]), help="Only this severity.")
+@click.option(
+    "--limit",
+    type=click.IntRange(min=1),
+    metavar="N",
+    help=f"At most so many.  [default: {_FINDINGS_SHOWN}; all with --json]",
+)
+def findings(
+    asked: Asked,
+    market: str | None,
+    since: str | None,
+    kind: str | None,
+    severity: str | None,
+    limit: int | None,
+) -> Exit:
+    """Print the quality log, most harmful first.
+
+    The order is by impact: the number of sessions whose trend-sign score would differ had the reported price
+    stood.
+    """
+    day = None if since is None else _read_day(since, "--since")
+    from catalog.listings import list_findings
+    from catalog.places import Places
+
+    places = Places(asked.where().store)
+    shown = limit if limit is not None or asked.as_json else _FINDINGS_SHOWN
+    columns, rows, total = list_findings(places, market, day, kind, severity, shown)
+    if asked.as_json:
+        say_json({"findings": [dict(zip(columns, row, strict=True)) for row in rows], "total": total})
+        return Exit.DONE
+    if not rows:
+        say(["no findings"])
+        return Exit.DONE
+    say_table(_FINDING_COLUMNS, _pick(columns, rows, _FINDING_COLUMNS))
+    if total > len(rows):
+        say(["", f"the first {len(rows):,} of {total:,}; --limit {total} shows all"])
+    return Exit.DONE
+
+
+@command(main, "rolls", "ropewalk rolls NWHT --plan by_open_interest")
+@click.argument("market")
+@click.option("--plan", metavar="NAME", help="Only this roll plan.")
+@click.option("--nearby", type=click.IntRange(min=1), metavar="N", help="Only this nearby.")
+def rolls(asked: Asked, market: str, plan: str | None, nearby: int | None) -> Exit:
+    """Print the roll ledger of a MARKET.
+
+    Every roll with its two prices and its gap, in the order of plan, nearby and day.
+    """
+    from catalog.listings import list_rolls
+    from catalog.places import Places
+
+    columns, rows = list_rolls(Places(asked.where().store), market, plan, nearby)
+    if asked.as_json:
+        say_json({"rolls": [dict(zip(columns, row, strict=True)) for row in rows]})
+    elif rows:
+        say_table(_ROLL_COLUMNS, _pick(columns, rows, _ROLL_COLUMNS))
+    else:
+        say(["no rolls"])
+    return Exit.DONE
+
+
+def _pick(columns: list[str], rows: list[tuple[Any, ...]], wanted: tuple[str, ...]) -> list[tuple[Any, ...]]:
+    places = [columns.index(name) for name in wanted]
+    return [tuple(row[at] for at in places) for row in rows]
+
+
+@command(main, "verify", "ropewalk verify --deep")
+@click.option(
+    "--deep", is_flag=True, help="Also derive every published number again from archive, desk and code."
+)
+@click.option(
+    "--repoint", is_flag=True, help="First make the catalog again, for a store that was moved or copied."
+)
+@click.option("--snapshot", metavar="NAME", help="Snapshot.  [default: the newest]")
+def verify(asked: Asked, deep: bool, repoint: bool, snapshot: str | None) -> Exit:
+    """Check what is published, to the last byte.
+
+    Every hash, the archive behind it, and the soundness rules.
+    """
+    from catalog import verify as checks
+    from catalog.places import Places
+
+    where = asked.where()
+    places = Places(where.store)
+    if repoint:
+        checks.repoint(places)
+    report = checks.verify_store(places, snapshot)
+    problems = list(report.problems)
+    if deep and report.snapshot is not None:
+        from catalog.declarations import load_desk
+        from catalog.deep import rederive
+
+        problems += rederive(places, load_desk(where.desk), report.snapshot)
+    if asked.as_json:
+        say_json(
+            {
+                "snapshot": report.snapshot,
+                "sound": not problems,
+                "deep": deep,
+                "files_checked": report.files_checked,
+                "rules_run": report.rules_run,
+                "problems": problems,
+            }
+        )
+    else:
+        also = ", every number derived again" if deep else ""
+        done = f"{report.files_checked:,} files hashed, {report.rules_run} soundness rules run{also}"
+        verdict = f"{len(problems):,} problems" if len(problems) != 1 else "1 problem"
+        say([f"snapshot {report.snapshot}: {verdict if problems else 'sound'} ({done})"])
+        say(f"  {problem}" for problem in problems)
+    return Exit.UNSOUND if problems else Exit.DONE
+
+
+@command(main, "sql", 'ropewalk sql "select market, plan, count(*) from series group by all order by all"')
+@click.argument("query", required=False)
+def sql(asked: Asked, query: str | None) -> Exit:
+    """Run a QUERY on the catalog, or say how to open it.
+
+    A query only reads. With none, says how any client opens the catalog.
+    """
+    from catalog.places import Places
+    from catalog.query import how_to_open, open_catalog, run_query
+
+    places = Places(asked.where().store)
+    if query is None:
+        told = how_to_open(places)
+        if asked.as_json:
+            say_json({"catalog": str(places.catalog), "how_to_open": told})
+        else:
+            say(told.split("\n"))
+        return Exit.DONE
+    with open_catalog(places) as connection:
+        columns, rows = run_query(connection, query)
+    if asked.as_json:
+        say_json({"columns": columns, "rows": rows})
+    else:
+        say_table(columns, rows)
+    return Exit.DONE
+
+
+if __name__ == "__main__":
+    main()

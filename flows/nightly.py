@@ -1,0 +1,267 @@
+"""One night as a Prefect flow.
+
+Belongs here: what Prefect is told of a night, and what happens when Prefect cannot be told. Does not belong
+here: the steps of a night (`work.py`), where a Prefect API comes from (`watched.py`).
+"""
+
+from contextvars import ContextVar
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+from uuid import UUID
+
+# Before Prefect: it sets how that starts.
+from flows.watched import Api, Unreachable, count_recorded, drain, note_loss, reach_api
+
+# isort: split
+from concurrent.futures import BrokenExecutor
+from contextlib import ExitStack
+
+from prefect import flow
+from prefect.client.orchestration import get_client
+from prefect.client.schemas.objects import State
+from prefect.context import FlowRunContext
+from prefect.futures import as_completed
+from prefect.states import Completed, Failed
+from prefect.task_runners import ProcessPoolTaskRunner, ThreadPoolTaskRunner
+from prefect.utilities.annotations import quote
+
+from contracts.errors import RopewalkError, UsageError
+from flows.progress import Tick
+from flows.settings import Where
+from flows.tasks import build_market
+from flows.work import (
+    NO_DASK,
+    Builder,
+    Result,
+    build_alone,
+    count_workers,
+    ignore_interrupt,
+    pool_builder,
+    run_night,
+    unreachable_dask,
+)
+
+if TYPE_CHECKING:
+    from catalog.night import Night
+    from catalog.summary import Summary
+
+
+# A supervisor that asked for an end does not wait long.
+STOPPED_SECONDS = 4.0
+
+
+class Lost(Exception):
+    """Prefect failed in the middle of a night; the night's own work is not to blame."""
+
+
+@dataclass
+class Told:
+    """What came of a night that Prefect watched: the work's own outcome, and what Prefect keeps of it."""
+
+    summary: "Summary | None" = None
+    error: BaseException | None = None
+    run: UUID | None = None
+    expected: int = 0
+    recorded: int = 0
+    is_lost: bool = False
+    notes: list[str] = field(default_factory=list)
+
+
+# A flow hands back a state, and where Prefect is lost not even that; this is how its caller learns the
+# outcome.
+_TOLD: ContextVar[Told | None] = ContextVar("told", default=None)
+
+
+def run_watched(where: Where, jobs: int | None = None) -> Told:
+    """Run one night under Prefect; where Prefect cannot be reached, or is lost on the way, without it.
+
+    Returns the summary, and notes on what Prefect kept. Raises what the night itself raises: DeskError,
+    UsageError, StoreBusy, StoreError.
+    """
+    told = Told()
+    token = _TOLD.set(told)
+    try:
+        with reach_api() as api:
+            try:
+                _run_flow(where, jobs, told)
+            except BaseException:
+                drain(STOPPED_SECONDS)
+                raise
+            if not told.is_lost:
+                drain()
+                _count(told, api)
+    except Unreachable as error:
+        told.notes.append(f"{error}; the night runs unwatched")
+    finally:
+        _TOLD.reset(token)
+    if told.error is not None:
+        raise told.error
+    if told.summary is None:
+        told.summary = run_night(where, "nightly", pool_builder(jobs))
+    return told
+
+
+def _run_flow(where: Where, jobs: int | None, told: Told) -> None:
+    raw = None if where.raw is None else str(where.raw)
+    try:
+        state: State[Any] = night(str(where.desk), raw, str(where.store), jobs, return_state=True)  # type: ignore[assignment]
+        failure = state.message or str(state.name)
+    except Exception as error:  # Prefect's own: what the night itself raises stands in `told` already
+        failure = _in_short(error)
+        if told.error is None:
+            _note_loss(told, failure)
+    if told.error is None and told.summary is None:
+        _note_loss(told, failure)
+
+
+def _count(told: Told, api: Api) -> None:
+    if told.run is None or told.error is not None:
+        return
+    try:
+        told.recorded = count_recorded(api, told.run, told.expected)
+    except Exception as error:
+        told.notes.append(f"Prefect was lost after the night ({_in_short(error)})")
+        return
+    if told.recorded < told.expected:
+        told.notes.append(
+            f"Prefect keeps {told.recorded} of {told.expected} task runs; the night itself is complete"
+        )
+
+
+def _note_loss(told: Told, why: str) -> None:
+    if not told.is_lost:
+        told.is_lost = True
+        note_loss()
+        told.notes.append(f"Prefect was lost during the night ({why}); its record is not complete")
+
+
+def _in_short(error: BaseException) -> str:
+    return (str(error) or type(error).__name__).splitlines()[0]
+
+
+def _run_id() -> UUID | None:
+    context = FlowRunContext.get()
+    return None if context is None or context.flow_run is None else context.flow_run.id
+
+
+def _current() -> Told:
+    """Where the run under way tells its outcome. The flow may not name the variable itself: Prefect hands the
+    flow's function with all it names to worker processes, and a ContextVar cannot go there."""
+    return _TOLD.get() or Told()
+
+
+@flow(
+    name="nightly",
+    flow_run_name="nothing new",
+    retries=0,
+    persist_result=False,
+    validate_parameters=False,
+    log_prints=False,
+)
+def night(desk: str, raw: str | None, store: str, jobs: int | None = None) -> Any:
+    """Take in what is new, build each market as a task, publish; paths are absolute."""
+    told = _current()
+    told.run = _run_id()
+    where = Where(Path(desk), None if raw is None else Path(raw), Path(store))
+    try:
+        told.summary = run_night(where, "nightly", _task_builder(jobs, told))
+    except Lost:
+        raise
+    except RopewalkError as error:
+        told.error = error
+        return Failed(message=str(error))
+    except BaseException as error:
+        told.error = error
+        raise
+    summary = told.summary
+    held_back = "; ".join(f"{market}: {reason}" for market, reason in summary.held_back)
+    if summary.nothing_new:
+        message = f"nothing new, snapshot {summary.current} stands"
+    else:
+        message = f"snapshot {summary.snapshot}" + (f"; held back {held_back}" if held_back else "")
+    return Completed(name="Held back" if summary.exit_code else "Completed", message=message)
+
+
+def _task_builder(jobs: int | None, told: Told) -> Builder:
+    """The builder that makes a Prefect task of each market."""
+
+    def build(night: "Night", tick: Tick) -> list[Result]:
+        told.expected = len(night.markets)
+        _name_run(told, _count_markets(night))
+        results: list[Result] = []
+        dead: list[str] = []
+        with ExitStack() as stack:
+            try:
+                runner = stack.enter_context(_task_runner(night, jobs))
+            except (OSError, ValueError) as error:
+                if night.workers != "dask":
+                    raise
+                raise UsageError(unreachable_dask(night.dask_address, error)) from None
+            try:
+                futures = {
+                    runner.submit(build_market, {"night": quote(night), "market": m}): m
+                    for m in night.markets
+                }
+            except Exception as error:
+                raise Lost(_in_short(error)) from error
+            for future in as_completed(list(futures)):
+                market = futures[future]
+                try:
+                    results.append(future.result())
+                except BrokenExecutor:
+                    dead.append(market)
+                    continue
+                tick(market)
+        if dead:
+            told.notes.append(
+                "a worker process died; the markets it left were built again, unwatched, one by one"
+            )
+        for market in dead:
+            results.append(build_alone(night, market))
+            tick(market)
+        _name_run(told, f"{_count_markets(night)}, data to {_data_date(results)}")
+        return results
+
+    return build
+
+
+def _task_runner(night: "Night", jobs: int | None) -> Any:
+    workers = count_workers(jobs, len(night.markets))
+    if night.workers == "processes":
+        return ProcessPoolTaskRunner(workers, initializer=ignore_interrupt)
+    if night.workers == "dask":
+        try:
+            from prefect_dask import DaskTaskRunner
+        except ImportError:
+            raise UsageError(NO_DASK) from None
+        if night.dask_address:
+            return DaskTaskRunner(address=night.dask_address)
+        return DaskTaskRunner(
+            cluster_kwargs={"n_workers": workers, "threads_per_worker": 1, "dashboard_address": None}
+        )
+    return ThreadPoolTaskRunner(workers)
+
+
+def _count_markets(night: "Night") -> str:
+    built, all_of_them = len(night.markets), len(night.markets) + len(night.unchanged)
+    return f"{built} of {all_of_them} markets"
+
+
+def _data_date(results: list[Result]) -> str:
+    """The newest session of any market built."""
+    return max(
+        (str(r["facts"]["last_session"]) for r in results if r["facts"].get("last_session")),
+        default="no session",
+    )
+
+
+def _name_run(told: Told, name: str) -> None:
+    """Name the run by what it does, since a list of runs is read by their names."""
+    if told.run is None or told.is_lost:
+        return
+    try:
+        with get_client(sync_client=True) as client:
+            client.update_flow_run(told.run, name=name)
+    except Exception as error:
+        _note_loss(told, _in_short(error))

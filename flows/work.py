@@ -1,0 +1,211 @@
+"""One night without Prefect: lock the store, begin, build every market on a pool of workers, finish.
+
+Belongs here: the order of the steps, and threads, processes and Dask. Does not belong here: what a step does
+(`catalog/night.py`), Prefect (`nightly.py`).
+"""
+
+import multiprocessing
+import os
+import signal
+from collections.abc import Callable, Iterator
+from concurrent.futures import (
+    BrokenExecutor,
+    Executor,
+    Future,
+    ProcessPoolExecutor,
+    ThreadPoolExecutor,
+    as_completed,
+)
+from contextlib import contextmanager
+from typing import TYPE_CHECKING, Any
+
+from catalog.places import Places, write_lock
+from contracts.errors import UsageError
+from flows.progress import Tick, show_progress
+from flows.settings import Where
+
+if TYPE_CHECKING:
+    from catalog.night import Night
+    from catalog.summary import Summary
+
+NO_DASK = (
+    'the desk says workers = "dask", and Dask is not installed; install ropewalk[dask], '
+    'or say workers = "threads" or "processes" under [run] in desk.toml'
+)
+
+Result = dict[str, Any]
+Builder = Callable[["Night", Tick], list[Result]]
+
+
+def run_night(where: Where, command: str, build: Builder) -> "Summary":
+    """Take in what is new, build the markets it concerns, publish.
+
+    `build` is handed the night and a function to call with each market that is done; it returns the result of
+    every market of the night, in any order. The store's write lock is held throughout. Whatever goes wrong,
+    or stops the run, the staging folder is removed and the last snapshot stands.
+
+    Raises DeskError, StoreBusy, StoreError.
+    """
+    from catalog.declarations import load_desk
+    from catalog.night import abandon, begin, finish
+
+    places = Places(where.store)
+    # The lock makes the store's folder, and wrong usage must leave nothing behind.
+    declared = load_desk(where.desk)
+    raw = where.raw or declared.raw
+    if not raw.is_dir() and not places.archive.is_dir():
+        raise UsageError(
+            f"{raw}: no such folder, and no archive in {where.store}; name the raw files with --raw"
+        )
+    with write_lock(places):
+        night = begin(where.desk, where.raw, where.store, command)
+        try:
+            results: list[Result] = []
+            if night.markets:
+                with show_progress(len(night.markets), "building markets") as tick:
+                    results = build(night, tick)
+            return finish(night, sorted(results, key=lambda result: str(result["market"])))
+        except BaseException:
+            abandon(night)
+            raise
+
+
+def pool_builder(jobs: int | None) -> Builder:
+    """The builder that shares a night's markets among the workers the desk names; `jobs` is their number."""
+
+    def build(night: "Night", tick: Tick) -> list[Result]:
+        if night.workers == "dask":
+            return _build_on_dask(night, jobs, tick)
+        if night.workers == "processes":
+            return _build_in_processes(night, jobs, tick)
+        with _interruptible(ThreadPoolExecutor(count_workers(jobs, len(night.markets)))) as pool:
+            return [_ticked(future.result(), tick) for future in _submit(pool, night, night.markets)]
+
+    return build
+
+
+def count_workers(jobs: int | None, markets: int) -> int:
+    """How many workers: `jobs` where given, else one a usable processor, at least 2; never more than
+    markets."""
+    if jobs is None:
+        # A container may be given fewer processors than the machine has.
+        usable = len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else os.cpu_count() or 1
+        jobs = max(2, usable)
+    return max(1, min(jobs, markets))
+
+
+def process_context() -> multiprocessing.context.BaseContext:
+    """How worker processes start: never by a plain fork, because Arrow's threads do not survive one."""
+    methods = multiprocessing.get_all_start_methods()
+    context = multiprocessing.get_context("forkserver" if "forkserver" in methods else "spawn")
+    if "forkserver" in methods:
+        context.set_forkserver_preload(["catalog.night"])
+    return context
+
+
+def ignore_interrupt() -> None:
+    """In a worker process: leave Ctrl-C, which reaches the whole group, to the process that holds the
+    lock."""
+    signal.signal(signal.SIGINT, signal.SIG_IGN)
+
+
+def failed_result(market: str, reason: str) -> Result:
+    """The result of a market whose worker died before it could give one."""
+    return {"market": market, "files": {}, "facts": {}, "error": reason, "rows": 0, "seconds": 0.0}
+
+
+def build_alone(night: "Night", market: str) -> Result:
+    """Build one market in a process of its own; where that dies too, the result says so."""
+    try:
+        with _process_pool(1) as pool:
+            return next(_submit(pool, night, (market,))).result()
+    except BrokenExecutor:
+        return failed_result(
+            market, "the worker process that built it died twice; see the system's log for why"
+        )
+
+
+def _submit(pool: Executor, night: "Night", markets: tuple[str, ...]) -> Iterator[Future[Result]]:
+    from catalog.night import build_one
+
+    yield from as_completed([pool.submit(build_one, night, market) for market in markets])
+
+
+def _ticked(result: Result, tick: Tick) -> Result:
+    tick(str(result["market"]))
+    return result
+
+
+@contextmanager
+def _interruptible(pool: Executor) -> Iterator[Executor]:
+    """The pool; when the run is stopped, markets not begun are dropped and those begun are waited for, so
+    that no worker writes into a staging folder that is being removed."""
+    try:
+        yield pool
+    except BaseException:
+        pool.shutdown(wait=True, cancel_futures=True)
+        raise
+    pool.shutdown(wait=True)
+
+
+def _build_in_processes(night: "Night", jobs: int | None, tick: Tick) -> list[Result]:
+    """A worker that dies (memory, a fault in a library) takes the whole pool with it. The markets left are
+    then built each in a process of its own, so that only the one that kills its worker is held back."""
+    done: dict[str, Result] = {}
+    try:
+        with _process_pool(count_workers(jobs, len(night.markets))) as pool:
+            for future in _submit(pool, night, night.markets):
+                result = _ticked(future.result(), tick)
+                done[str(result["market"])] = result
+    except BrokenExecutor:
+        for market in night.markets:
+            if market not in done:
+                done[market] = _ticked(build_alone(night, market), tick)
+    return list(done.values())
+
+
+def _process_pool(workers: int) -> Any:
+    return _interruptible(ProcessPoolExecutor(workers, process_context(), ignore_interrupt))
+
+
+def _build_on_dask(night: "Night", jobs: int | None, tick: Tick) -> list[Result]:
+    try:
+        from distributed import Client, KilledWorker, LocalCluster
+        from distributed import as_completed as dask_completed
+    except ImportError:
+        raise UsageError(NO_DASK) from None
+    from catalog.night import build_one
+
+    cluster = None
+    if not night.dask_address:
+        workers = count_workers(jobs, len(night.markets))
+        cluster = LocalCluster(n_workers=workers, threads_per_worker=1, dashboard_address=None)
+    try:
+        with _dask_client(Client, night.dask_address or cluster) as client:
+            waiting = {
+                client.submit(build_one, night, market, pure=False): market for market in night.markets
+            }
+            results = []
+            for future in dask_completed(waiting):
+                try:
+                    result = future.result()
+                except KilledWorker as error:
+                    result = failed_result(waiting[future], f"its Dask workers died: {error}")
+                results.append(_ticked(result, tick))
+            return results
+    finally:
+        if cluster is not None:
+            cluster.close()
+
+
+def _dask_client(client: Any, address: Any) -> Any:
+    try:
+        return client(address, timeout="60s")
+    except (OSError, ValueError) as error:
+        raise UsageError(unreachable_dask(str(address), error)) from None
+
+
+def unreachable_dask(address: str, error: Exception) -> str:
+    """What to say where the desk names a Dask scheduler that does not answer."""
+    place = address or "a cluster of its own"
+    return f"Dask at {place} cannot be reached: {error}; see dask_address in desk.toml"

@@ -215,21 +215,35 @@ def gather_inputs(desk: Desk, market: str, files: tuple[FileOfMarket, ...], plac
     )  # fmt: skip
 
 
-def inputs_digest(desk: Desk, market: str, files: tuple[FileOfMarket, ...]) -> str:
-    """SHA-256 of all that decides a market's tables: code, packages, declarations, and the files' content."""
-    used = sorted({entry.layout for entry in files})
+def declarations_digest(desk: Desk, market: str, layouts: list[str]) -> str:
+    """SHA-256 of all that is declared of a market; the same while nothing that concerns it changes."""
     return _digest(
         {
-            "code": code_digest(),
-            "packages": package_versions(),
             "market": desk.markets[market].model_dump(mode="json", by_alias=True),
+            # Which plan is the first one matters, and a digest sorts.
             "plans": list(desk.markets[market].plans),
-            "layouts": {name: desk.layouts[name].model_dump(mode="json") for name in used},
+            "layouts": {name: desk.layouts[name].model_dump(mode="json") for name in layouts},
             "repairs": [repair.model_dump(mode="json") for repair in desk.repairs_of(market)],
             "waivers": [waiver.model_dump(mode="json", by_alias=True) for waiver in desk.waivers_for(market)],
             "quality": desk.quality.model_dump(mode="json"),
             "gates": desk.gates.model_dump(mode="json"),
             "look_backs": desk.look_backs,
+        }
+    )
+
+
+def table_stamp(desk: Desk, market: str, files: tuple[FileOfMarket, ...]) -> dict[str, str]:
+    """What a market's tables say of where they came from; nothing in it depends on the clock or the night."""
+    layouts = sorted({entry.layout for entry in files})
+    return {"desk": declarations_digest(desk, market, layouts), "code": code_digest()}
+
+
+def inputs_digest(desk: Desk, market: str, files: tuple[FileOfMarket, ...]) -> str:
+    """SHA-256 of all that decides a market's tables: code, packages, declarations, and the files' content."""
+    return _digest(
+        {
+            **table_stamp(desk, market, files),
+            "packages": package_versions(),
             "files": [[e.path, e.file, e.taken_in, e.is_old, e.is_told_here] for e in files],
         }
     )

@@ -5,6 +5,7 @@ market or layout may say (`contracts/markets.py`, `contracts/layouts.py`).
 """
 
 import hashlib
+import json
 import zoneinfo
 from dataclasses import dataclass, field
 from enum import StrEnum
@@ -108,7 +109,11 @@ class WaiversFile(Declared):
 
 @dataclass(frozen=True)
 class Desk:
-    """Everything declared. `digest` is the SHA-256 of all its files by name and content."""
+    """Everything declared.
+
+    `digest` is the SHA-256 of all of it that can change what is published: where files lie, when the night
+    runs and on what workers plays no part.
+    """
 
     path: Path
     raw: Path
@@ -152,22 +157,19 @@ class _Reading:
 
 def load_desk(path: Path) -> Desk:
     """Read a desk folder; raises DeskError with every mistake in any of its files."""
-    texts, mistakes, digest = _read_texts(Path(path))
+    texts, mistakes = _read_texts(Path(path))
     if mistakes:
         raise DeskError(mistakes)
-    return _load(Path(path).resolve(), digest, tuple(texts.items()))
+    return _load(Path(path).resolve(), tuple(texts.items()))
 
 
-def _read_texts(path: Path) -> tuple[dict[str, str], list[Mistake], str]:
+def _read_texts(path: Path) -> tuple[dict[str, str], list[Mistake]]:
+    """Every file of a desk by its name below it, and the files that cannot be read."""
     texts: dict[str, str] = {}
     mistakes: list[Mistake] = []
-    digest = hashlib.sha256()
     if not path.is_dir():
-        return (
-            {},
-            [Mistake(str(path), "(desk)", "no such folder", "a folder with desk.toml, markets/ and layouts/")],
-            "",
-        )
+        expected = "a folder with desk.toml, markets/ and layouts/"
+        return {}, [Mistake(str(path), "(desk)", "no such folder", expected)]
     files = [path / "desk.toml", path / "waivers.toml"]
     for folder in ("markets", "layouts", "repairs"):
         files += sorted((path / folder).glob("*.toml"))
@@ -178,17 +180,20 @@ def _read_texts(path: Path) -> tuple[dict[str, str], list[Mistake], str]:
                 mistakes.append(Mistake(name, "(file)", "no such file", "a desk.toml with raw and store"))
             continue
         try:
-            data = file.read_bytes()
-            texts[name] = data.decode("utf-8")
+            texts[name] = file.read_bytes().decode("utf-8")
         except (OSError, UnicodeDecodeError) as error:
             mistakes.append(Mistake(name, "(file)", str(error), "a readable UTF-8 file"))
-            continue
-        digest.update(f"{name}\0{len(data)}\0".encode() + data)
-    return texts, mistakes, digest.hexdigest()
+    return texts, mistakes
+
+
+def _digest(texts: dict[str, str], head: DeskFile) -> str:
+    weighing = head.model_dump(mode="json", include={"look_backs", "gates", "quality"})
+    parts = {**{name: text for name, text in texts.items() if name != "desk.toml"}, "desk.toml": weighing}
+    return hashlib.sha256(json.dumps(parts, sort_keys=True).encode()).hexdigest()
 
 
 @lru_cache(maxsize=4)
-def _load(path: Path, digest: str, items: tuple[tuple[str, str], ...]) -> Desk:
+def _load(path: Path, items: tuple[tuple[str, str], ...]) -> Desk:
     reading = _Reading(dict(items))
     head = reading.model(DeskFile, "desk.toml")
     markets = _load_markets(reading)
@@ -207,7 +212,7 @@ def _load(path: Path, digest: str, items: tuple[tuple[str, str], ...]) -> Desk:
     return Desk(
         path, (path / head.raw).resolve(), (path / head.store).resolve(), head.schedule, head.run, head.gates,
         head.quality, head.look_backs, dict(sorted(markets.items())), dict(sorted(layouts.items())), repairs,
-        waivers, digest,
+        waivers, _digest(reading.texts, head),
     )  # fmt: skip
 
 

@@ -10,7 +10,7 @@ from pathlib import Path
 import pyarrow.parquet as pq
 
 from catalog.archive import Intake, read_register
-from catalog.assignment import assign_files, code_digest, gather_inputs
+from catalog.assignment import assign_files, code_digest, gather_inputs, table_stamp
 from catalog.declarations import Desk
 from catalog.places import Places, table_path
 from catalog.store import current_snapshot, read_manifest, write_table
@@ -34,7 +34,6 @@ def rederive(places: Places, desk: Desk, snapshot: str | None = None) -> tuple[s
     arrivals = tuple(arrival for arrival in read_register(places) if arrival.taken_in <= manifest.intake)
     assignment = assign_files(desk, Intake(manifest.intake, 0, arrivals, ()), places)
     problems: list[str] = []
-    metadata = {"desk": desk.digest, "code": code_digest()}
     with tempfile.TemporaryDirectory(dir=places.store) as folder:
         for market, verdict in manifest.markets.items():
             if verdict.state != "published":
@@ -44,6 +43,7 @@ def rederive(places: Places, desk: Desk, snapshot: str | None = None) -> tuple[s
             except (RopewalkError, ValueError) as error:
                 problems.append(f"{market}: cannot be built again: {error}")
                 continue
+            metadata = table_stamp(desk, market, assignment.files[market])
             for table in MARKET_TABLES:
                 path = table_path(table.name, market)
                 stored = write_table(Path(folder), table, market, built.tables[table.name], metadata)

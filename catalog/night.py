@@ -23,6 +23,7 @@ from catalog.assignment import (
     gather_inputs,
     inputs_digest,
     package_versions,
+    table_stamp,
 )
 from catalog.declarations import Desk, load_desk
 from catalog.gates import judge_market
@@ -176,7 +177,7 @@ def build_one(night: Night, market: str) -> dict[str, Any]:
         result["error"] = str(error)
         result["seconds"] = time.monotonic() - started
         return result
-    metadata = _stamp(desk)
+    metadata = table_stamp(desk, market, entries)
     for table in MARKET_TABLES:
         stored = write_table(Path(night.staging), table, market, built.tables[table.name], metadata)
         result["files"][stored.path] = stored.model_dump(exclude={"path"})
@@ -185,11 +186,6 @@ def build_one(night: Night, market: str) -> dict[str, Any]:
     result["worst"] = _worst(built.tables["findings"])
     result["seconds"] = time.monotonic() - started
     return result
-
-
-def _stamp(desk: Desk) -> dict[str, str]:
-    """What every file says of where it came from; nothing in it depends on the clock or the night."""
-    return {"desk": desk.digest, "code": code_digest()}
 
 
 def _worst(findings: pa.Table, count: int = 10) -> list[dict[str, Any]]:
@@ -230,7 +226,7 @@ def finish(night: Night, results: list[dict[str, Any]]) -> Summary:
     if not any(path.startswith("series/") for path in files):
         reasons = "; ".join(f"{code}: {verdict.reason}" for code, verdict in verdicts.items())
         raise StoreError(f"no market can be published, and none was before: {reasons}")
-    metadata = _stamp(desk)
+    metadata = {"desk": desk.digest, "code": code_digest()}
     run = Run(
         next_run(places), night.command, night.started_at, _now(), "published", len(desk.markets),
         sum(verdict.state == PUBLISHED for verdict in verdicts.values()),

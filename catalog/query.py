@@ -100,16 +100,23 @@ def run_query(
             connection.execute(f"explain select * from query({quote_text(sql)})")  # noqa: S608
         cursor = connection.execute(sql, list(parameters))
         return [column[0] for column in cursor.description or ()], cursor.fetchall()
-    except (duckdb.IOException, duckdb.SerializationException, duckdb.InternalException) as error:
-        raise StoreUnsound(f"a published file cannot be read: {_first_line(error)}; run ropewalk verify") from error
-    except duckdb.InvalidInputException as error:
-        if ".parquet" in str(error):
+    except duckdb.Error as error:
+        if _is_about_a_file(error):
             text = f"a published file cannot be read: {_first_line(error)}; run ropewalk verify"
             raise StoreUnsound(text) from error
-        raise UsageError(f"the query cannot be run: {_first_line(error)}") from error
-    except duckdb.Error as error:
         text = str(error).partition("\n\nLINE ")[0]
         raise UsageError(f"the query cannot be run: {text}") from error
+
+
+def _is_about_a_file(error: "duckdb.Error") -> bool:
+    """Whether a query failed for the files it reads rather than for what it says."""
+    import duckdb
+
+    if isinstance(error, duckdb.InvalidInputException):
+        return ".parquet" in str(error)
+    # What a damaged Parquet footer or page raises has no class of its own.
+    damaged = (duckdb.IOException, duckdb.SerializationException, duckdb.InternalException)
+    return isinstance(error, damaged) or type(error) is duckdb.Error
 
 
 def _first_line(error: Exception) -> str:

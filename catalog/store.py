@@ -248,12 +248,16 @@ def link_table(staging: Path, source_snapshot: Path, relative: str) -> None:
 
 def _check_table(table: Table, market: str | None, data: pa.Table, path: str) -> None:
     """Refuse a table that is not what its definition says."""
-    if not data.schema.remove_metadata().equals(table.schema, check_metadata=True):
+    if not data.schema.equals(table.schema):
         raise StoreError(f"{path}: seen the columns {_show(data.schema)}; expected {_show(table.schema)}")
+    if not data.schema.remove_metadata().equals(table.schema, check_metadata=True):
+        raise StoreError(f"{path}: seen columns without their unit and meaning; expected those of contracts.tables")
     for field in table.schema:
         column = data[field.name]
         if not field.nullable and column.null_count:
-            raise StoreError(f"{path}: {field.name} is null in {column.null_count} rows; it is part of the key")
+            raise StoreError(
+                f"{path}: {field.name} is null in {column.null_count} rows; it is part of the key"
+            )
         if pa.types.is_floating(field.type) and pc.all(pc.is_finite(column)).as_py() is False:
             raise StoreError(f"{path}: {field.name} holds a number that is not finite; expected null instead")
     # A raw file of several markets is told in the table of one of them, without a market.
@@ -264,7 +268,9 @@ def _check_table(table: Table, market: str | None, data: pa.Table, path: str) ->
     if table.order:
         repeated = data.num_rows - data.group_by(list(table.key)).aggregate([]).num_rows
     if repeated:
-        raise StoreError(f"{path}: {repeated} rows repeat a key; expected {', '.join(table.key)} to be unique")
+        raise StoreError(
+            f"{path}: {repeated} rows repeat a key; expected {', '.join(table.key)} to be unique"
+        )
 
 
 def _show(schema: pa.Schema) -> str:
@@ -281,11 +287,17 @@ def _tied_rows(data: pa.Table, order: tuple[str, ...], path: str) -> int:
         column = data[name]
         upper, lower = column.slice(0, count), column.slice(1)
         # A null sorts last, as Arrow sorts it.
-        rises = pc.or_(pc.fill_null(pc.less(upper, lower), False), pc.and_(pc.is_valid(upper), pc.is_null(lower)))
-        falls = pc.or_(pc.fill_null(pc.greater(upper, lower), False), pc.and_(pc.is_null(upper), pc.is_valid(lower)))
+        rises = pc.or_(
+            pc.fill_null(pc.less(upper, lower), False), pc.and_(pc.is_valid(upper), pc.is_null(lower))
+        )
+        falls = pc.or_(
+            pc.fill_null(pc.greater(upper, lower), False), pc.and_(pc.is_null(upper), pc.is_valid(lower))
+        )
         if pc.any(pc.and_(tied, falls)).as_py():
             row = pc.index(pc.and_(tied, falls), True).as_py() + 1
-            raise StoreError(f"{path}: row {row + 1} sorts before row {row} by {name}; expected {', '.join(order)}")
+            raise StoreError(
+                f"{path}: row {row + 1} sorts before row {row} by {name}; expected {', '.join(order)}"
+            )
         tied = pc.and_(tied, pc.invert(rises))
     return int(pc.sum(tied).as_py() or 0)
 
@@ -339,7 +351,9 @@ def check_files(folder: Path, manifest: Manifest) -> list[str]:
     seen = set()
     for above, _, names in os.walk(folder):
         seen |= {os.path.relpath(os.path.join(above, name), folder) for name in names}
-    problems += [f"{path}: is not listed in the manifest" for path in sorted(seen - {*manifest.files, MANIFEST})]
+    problems += [
+        f"{path}: is not listed in the manifest" for path in sorted(seen - {*manifest.files, MANIFEST})
+    ]
     with ThreadPoolExecutor(_READERS) as pool:
         found = pool.map(lambda file: _check_file(folder, file), manifest.files.values())
         problems += [problem for problem in found if problem]

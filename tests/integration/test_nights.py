@@ -200,3 +200,23 @@ def test_rubbish_of_a_live_contract_holds_its_market_back(tiny: Path, tmp_path: 
     (tiny / "raw" / "TINA_2025_03.csv").write_bytes(b"")
     summary = run_night(tiny, tmp_path / "published")
     assert summary.held_back == (("TINA", "TINA_2025_03.csv: the file is empty; expected a header and rows"),)
+
+
+def test_where_and_on_what_a_night_runs_is_no_part_of_what_it_publishes(tiny: Path, tmp_path: Path) -> None:
+    store = tmp_path / "published"
+    first = run_night(tiny, store)
+    desk = (tiny / "desk.toml").read_text()
+    (tiny / "desk.toml").write_text(desk + '[run]\nworkers = "processes"\n[schedule]\ncron = "0 6 * * *"\n')
+    assert run_night(tiny, store).nothing_new
+    (tiny / "desk.toml").write_text(desk.replace("silent_sessions = 5", "silent_sessions = 6"))
+    second = run_night(tiny, store)
+    assert second.snapshot not in (None, first.snapshot)
+
+
+def test_linked_tables_are_derived_again_after_another_market_changed(tiny: Path, tmp_path: Path) -> None:
+    store = tmp_path / "published"
+    run_night(tiny, store)
+    market = tiny / "markets" / "tina.toml"
+    market.write_text(market.read_text().replace("backstop = 3", "backstop = 4"))
+    assert run_night(tiny, store).published == ("TINA", "TINB")
+    assert rederive(Places(store), load_desk(tiny)) == ()

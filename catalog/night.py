@@ -276,13 +276,20 @@ def _judge(
     for code, market in desk.markets.items():
         reasons = (errors[code],) if code in errors else judge_market(market, facts[code], desk.gates, data_date)
         before = last.markets.get(code) if last is not None else None
+        if not reasons:
+            verdicts[code] = Verdict(
+                state=PUBLISHED, reason="", inputs=digests[code], facts=facts[code], last_good_snapshot=None
+            )
+            continue
         good = before.last_good_snapshot if before is not None else None
         if before is not None and before.state == PUBLISHED and last is not None:
             good = last.name
+        # The facts are those of the tables served; only the findings are tonight's.
+        served = dict(before.facts) if before is not None else {}
+        served["findings"] = facts.get(code, {}).get("findings", {})
         verdicts[code] = Verdict(
-            state=HELD_BACK if reasons else PUBLISHED, reason="; ".join(reasons), inputs=digests[code], facts=facts.get(code, {}),
-            last_good_snapshot=good if reasons else None,
-        )  # fmt: skip
+            state=HELD_BACK, reason="; ".join(reasons), inputs=digests[code], facts=served, last_good_snapshot=good
+        )
     return verdicts
 
 

@@ -12,6 +12,7 @@ from catalog.deep import rederive
 from catalog.night import begin, build_one, finish
 from catalog.places import Places, write_lock
 from catalog.store import current_snapshot, read_manifest
+from catalog.verify import verify_store
 from contracts.errors import DeskError
 from tests.integration.tiny import run_night, write_desk, write_raw
 
@@ -93,6 +94,7 @@ def test_market_that_lost_rows_is_held_back_and_serves_its_last_good_tables(tiny
     assert held[:2] == ("held back", first.snapshot)
     assert "5 rows of its version of intake 1 are missing from the newest version" in held[2]
     assert ("shrunken_file", "block") in rows(store, "select kind, severity from findings where market = 'TINB'")
+    assert verify_store(Places(store)).problems == ()
     # When the file comes whole again, the market goes out again.
     file.write_text("".join(lines))
     third = run_night(tiny, store)

@@ -34,7 +34,7 @@ def rederive(places: Places, desk: Desk, snapshot: str | None = None) -> tuple[s
     arrivals = tuple(arrival for arrival in read_register(places) if arrival.taken_in <= manifest.intake)
     assignment = assign_files(desk, Intake(manifest.intake, 0, arrivals, ()), places)
     problems: list[str] = []
-    with tempfile.TemporaryDirectory(dir=places.store) as folder:
+    with tempfile.TemporaryDirectory() as folder:
         for market, verdict in manifest.markets.items():
             if verdict.state != "published":
                 continue

@@ -251,13 +251,11 @@ def _check_table(table: Table, market: str | None, data: pa.Table, path: str) ->
     if not data.schema.equals(table.schema):
         raise StoreError(f"{path}: seen the columns {_show(data.schema)}; expected {_show(table.schema)}")
     if not data.schema.remove_metadata().equals(table.schema, check_metadata=True):
-        raise StoreError(f"{path}: seen columns without their unit and meaning; expected those of contracts.tables")
+        raise StoreError(f"{path}: seen columns without their unit and meaning; expected those of the table")
     for field in table.schema:
         column = data[field.name]
         if not field.nullable and column.null_count:
-            raise StoreError(
-                f"{path}: {field.name} is null in {column.null_count} rows; it is part of the key"
-            )
+            raise StoreError(f"{path}: {field.name} is part of the key and null in {column.null_count} rows")
         if pa.types.is_floating(field.type) and pc.all(pc.is_finite(column)).as_py() is False:
             raise StoreError(f"{path}: {field.name} holds a number that is not finite; expected null instead")
     # A raw file of several markets is told in the table of one of them, without a market.
@@ -268,9 +266,8 @@ def _check_table(table: Table, market: str | None, data: pa.Table, path: str) ->
     if table.order:
         repeated = data.num_rows - data.group_by(list(table.key)).aggregate([]).num_rows
     if repeated:
-        raise StoreError(
-            f"{path}: {repeated} rows repeat a key; expected {', '.join(table.key)} to be unique"
-        )
+        seen = f"seen repeated keys, {repeated} of {data.num_rows} rows"
+        raise StoreError(f"{path}: {seen}; expected {', '.join(table.key)} to be unique")
 
 
 def _show(schema: pa.Schema) -> str:
@@ -349,8 +346,10 @@ def check_files(folder: Path, manifest: Manifest) -> list[str]:
     """What differs between a snapshot's folder and its manifest, in words; empty where nothing does."""
     problems = []
     seen = set()
-    for above, _, names in os.walk(folder):
+    for above, folders, names in os.walk(folder):
         seen |= {os.path.relpath(os.path.join(above, name), folder) for name in names}
+        links = [os.path.join(above, name) for name in folders if os.path.islink(os.path.join(above, name))]
+        problems += [f"{os.path.relpath(link, folder)}: is a link; expected a folder" for link in links]
     problems += [
         f"{path}: is not listed in the manifest" for path in sorted(seen - {*manifest.files, MANIFEST})
     ]

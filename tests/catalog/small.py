@@ -19,14 +19,14 @@ MAY = [110.0, 112.0, 111.0, 114.0, 113.0, 116.0]
 STAMP = {"desk": "a desk", "code": "some code"}
 
 
-def sound_rows(market: str = "NWHT", file: str = RAW_SHA) -> dict[str, dict[str, list[Any]]]:
+def sound_rows(market: str = "NWHT", file: str = RAW_SHA) -> dict[str, dict[str, Any]]:
     """Columns of every table of one market that is right in every number.
 
     Three plans: `at_once` rolls from March to May on the fourth session, `in_halves` does so in two steps,
     `still` holds March throughout.
     """
     march, may = f"{market}-2024-03", f"{market}-2024-05"
-    bars: dict[str, list[Any]] = {
+    bars: dict[str, Any] = {
         "market": [market] * 12,
         "contract": [march] * 6 + [may] * 6,
         "session": S * 2,
@@ -71,7 +71,7 @@ def sound_rows(market: str = "NWHT", file: str = RAW_SHA) -> dict[str, dict[str,
             "rolled": [False] * 6,
         },
     ]
-    series: dict[str, list[Any]] = {
+    series: dict[str, Any] = {
         "market": [market] * 18,
         "plan": ["at_once"] * 6 + ["in_halves"] * 6 + ["still"] * 6,
         "nearby": [1] * 18,
@@ -87,7 +87,7 @@ def sound_rows(market: str = "NWHT", file: str = RAW_SHA) -> dict[str, dict[str,
             plan["growth"].append(plan["growth"][-1] * (1 + value))
         for name, values in plan.items():
             series[name] = series.get(name, []) + values
-    rolls: dict[str, list[Any]] = {
+    rolls: dict[str, Any] = {
         "market": [market] * 3,
         "plan": ["at_once", "in_halves", "in_halves"],
         "nearby": [1, 1, 1],
@@ -106,7 +106,7 @@ def sound_rows(market: str = "NWHT", file: str = RAW_SHA) -> dict[str, dict[str,
         "trigger": ["volume"] * 3,
         "impact_sessions": [0] * 3,
     }
-    findings: dict[str, list[Any]] = {
+    findings: dict[str, Any] = {
         "finding": [f"{market.lower()}0000001"],
         "market": [market],
         "contract": [march],
@@ -117,7 +117,7 @@ def sound_rows(market: str = "NWHT", file: str = RAW_SHA) -> dict[str, dict[str,
         "impact_sessions": [0],
         "message": ["a move of its own"],
     }
-    files: dict[str, list[Any]] = {
+    files: dict[str, Any] = {
         "path": [f"{market}.csv"],
         "file": [file],
         "bytes": [30],
@@ -126,20 +126,20 @@ def sound_rows(market: str = "NWHT", file: str = RAW_SHA) -> dict[str, dict[str,
         "rejects": [1],
         "taken_in": [1],
     }
-    rejects: dict[str, list[Any]] = {
+    rejects: dict[str, Any] = {
         "market": [market],
         "file": [file],
         "line": [14],
         "text": ["torn"],
         "reason": ["too few columns"],
     }
-    terms: dict[str, list[Any]] = {
+    terms: dict[str, Any] = {
         "market": [market] * 2,
         "contract": [march, may],
         "name": ["wheat"] * 2,
         "tick_size": [0.25] * 2,
     }
-    coverage: dict[str, list[Any]] = {
+    coverage: dict[str, Any] = {
         "market": [market] * 3,
         "plan": ["at_once", "in_halves", "still"],
         "first_session": [S[0]] * 3,
@@ -151,7 +151,7 @@ def sound_rows(market: str = "NWHT", file: str = RAW_SHA) -> dict[str, dict[str,
         "missing": [0] * 3,
         "state": ["published"] * 3,
     }
-    runs: dict[str, list[Any]] = {
+    runs: dict[str, Any] = {
         "run": [1],
         "command": ["build"],
         "started_at": [datetime.datetime(2024, 1, 16, 2, 30, tzinfo=datetime.UTC)],
@@ -208,4 +208,6 @@ def publish_small(places: Places, raw: Path, market: str = "NWHT") -> Manifest:
     with write_lock(places):
         intake = take_in(raw, places)
         staging = open_staging(places)
-        return publish(places, staging, draft_of(stage_small(staging, market, intake.arrivals[0].file), market))
+        return publish(
+            places, staging, draft_of(stage_small(staging, market, intake.arrivals[0].file), market)
+        )

@@ -14,6 +14,7 @@ import resource
 import signal
 import sys
 from collections.abc import Callable
+from functools import partial
 from pathlib import Path
 from typing import Any
 
@@ -90,15 +91,17 @@ def stop_at(step: int) -> None:
 
 
 def look(places: Places) -> dict[str, Any]:
-    """What a reader sees: the catalog's snapshot and how many rows its tables have, and what CURRENT names."""
+    """What a reader sees: the catalog's snapshot, how many rows its tables have, what CURRENT names."""
     with open_catalog(places) as connection:
         name = run_query(connection, "select name from snapshot")[1][0][0]
-        rows = run_query(connection, "select (select count(*) from series), (select count(*) from bars)")[1][0]
+        rows = run_query(connection, "select (select count(*) from series), (select count(*) from bars)")[1][
+            0
+        ]
     return {"catalog": name, "rows": list(rows), "current": current_snapshot(places)}
 
 
 def recover(places: Places, raw: Path) -> dict[str, Any]:
-    """What a reader sees, what the next run cleans up, whether all is in place then and after one more night."""
+    """What a reader sees, what the next run cleans up, whether all is in place after that and a night."""
     seen: dict[str, Any] = {"reader": look(places)}
     with write_lock(places):
         seen["cleaned"] = clean_leftovers(places)
@@ -149,6 +152,12 @@ def filled_night(places: Places, raw: Path, size: int) -> str:
     return "published"
 
 
+def tell(row: object) -> None:
+    """One JSON object a line."""
+    sys.stdout.write(json.dumps(row) + "\n")
+    sys.stdout.flush()
+
+
 def main(kind: str, folder: Path) -> None:
     """Break a night in every way of one kind, with a new raw file each night."""
     places, raw = Places(folder / "store"), folder / "raw"
@@ -157,16 +166,16 @@ def main(kind: str, folder: Path) -> None:
         lay_raw(raw, text=f"night {number}\n".encode())
         row: dict[str, Any] = {"number": number, "before": name}
         if kind == "kill":
-            row["ended"], row["answer"] = fork(lambda step=number: killed_night(places, raw, step))
+            row["ended"], row["answer"] = fork(partial(killed_night, places, raw, number))
         else:
             row["size"] = SIZES[number - 1]
-            row["ended"], row["answer"] = fork(lambda size=row["size"]: filled_night(places, raw, size))
+            row["ended"], row["answer"] = fork(partial(filled_night, places, raw, row["size"]))
         row["recovered"] = fork(lambda: recover(places, raw))[1]
         name = row["recovered"]["next"]["current"]
-        print(json.dumps(row), flush=True)
+        tell(row)
         if (kind == "kill" and row["ended"] == 0) or (kind == "fill" and number == len(SIZES)):
             break
-    print(json.dumps(fork(lambda: list(verify_store(places).problems))[1]))
+    tell(fork(lambda: list(verify_store(places).problems))[1])
 
 
 if __name__ == "__main__":

@@ -126,7 +126,9 @@ def test_without_a_raw_folder_the_archive_alone_is_used(places: Places, raw: Pat
     missing = take_in(raw, places)
     assert missing.number == 0
     assert missing.problems == (
-        Problem(".", f"the raw folder {raw} cannot be read: No such file or directory; the archive alone is used"),
+        Problem(
+            ".", f"the raw folder {raw} cannot be read: No such file or directory; the archive alone is used"
+        ),
     )
     raw.mkdir()
     (raw / "a.csv").write_bytes(b"first")
@@ -134,10 +136,14 @@ def test_without_a_raw_folder_the_archive_alone_is_used(places: Places, raw: Pat
     (raw / "a.csv").unlink()
     empty = take_in(raw, places)
     assert empty.arrivals == arrivals
-    assert empty.problems == (Problem(".", f"the raw folder {raw} holds no file to take in; the archive alone is used"),)
+    assert empty.problems == (
+        Problem(".", f"the raw folder {raw} holds no file to take in; the archive alone is used"),
+    )
 
 
-def test_what_is_no_regular_file_of_a_plain_name_is_a_problem_and_is_not_read(places: Places, raw: Path) -> None:
+def test_what_is_no_regular_file_of_a_plain_name_is_a_problem_and_is_not_read(
+    places: Places, raw: Path
+) -> None:
     raw.mkdir()
     (raw / "secret").write_bytes(b"secret")
     (raw / "link.csv").symlink_to(raw / "secret")
@@ -333,7 +339,9 @@ def test_a_damaged_line_of_the_register_is_named(places: Places, raw: Path) -> N
     take_in(raw, places)
     lines = places.register.read_bytes().splitlines(keepends=True)
     places.register.write_bytes(lines[0][:10] + b"\x00\x00" + lines[0][12:] + lines[1])
-    with pytest.raises(StoreUnsound, match=r"register\.jsonl:1: seen '.*'; expected one arrival as a JSON object"):
+    with pytest.raises(
+        StoreUnsound, match=r"register\.jsonl:1: seen '.*'; expected one arrival as a JSON object"
+    ):
         take_in(raw, places)
     record = json.loads(lines[1])
     places.register.write_bytes(lines[0] + json.dumps({**record, "file": "../../etc"}).encode() + b"\n")
@@ -366,7 +374,12 @@ def test_damage_to_the_archive_is_noticed_and_mended_from_the_raw_folder(
     path = places.archived(digest)
     packed = bytearray(path.read_bytes())
     packed[len(packed) // 2] ^= 1
-    broken = {"flip": bytes(packed), "cut": bytes(packed[:-4]), "empty": b"", "other": places.archived(sha(b"other")).read_bytes()}
+    broken = {
+        "flip": bytes(packed),
+        "cut": bytes(packed[:-4]),
+        "empty": b"",
+        "other": places.archived(sha(b"other")).read_bytes(),
+    }
     path.unlink()
     if damage != "gone":
         path.write_bytes(broken[damage])

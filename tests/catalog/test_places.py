@@ -10,7 +10,16 @@ from pathlib import Path
 
 import pytest
 
-from catalog.places import Places, hash_file, prepare_part, sequence_of, table_path, write_lock, write_new, write_whole
+from catalog.places import (
+    Places,
+    hash_file,
+    prepare_part,
+    sequence_of,
+    table_path,
+    write_lock,
+    write_new,
+    write_whole,
+)
 from contracts.errors import StoreBusy, StoreError
 
 
@@ -32,7 +41,9 @@ def test_a_table_of_a_market_and_of_the_whole_desk_have_their_paths() -> None:
     assert table_path("coverage", None) == table_path("coverage", "_desk") == "coverage/_desk.parquet"
 
 
-@pytest.mark.parametrize("table, market", [("series", "../NWHT"), ("series", "nwht"), ("series", "N" * 13), ("../a", "N")])
+@pytest.mark.parametrize(
+    "table, market", [("series", "../NWHT"), ("series", "nwht"), ("series", "N" * 13), ("../a", "N")]
+)
 def test_a_name_no_path_may_be_made_of_is_refused(table: str, market: str) -> None:
     with pytest.raises(StoreError, match="expected"):
         table_path(table, market)
@@ -41,7 +52,9 @@ def test_a_name_no_path_may_be_made_of_is_refused(table: str, market: str) -> No
 def test_a_snapshot_has_a_number_and_a_hash(places: Places) -> None:
     assert sequence_of("000042-0123456789ab") == 42
     assert sequence_of("1000000-0123456789ab") == 1_000_000
-    assert [sequence_of(name) for name in ("42-0123456789ab", ".staging-1", "000042-xyz", "000042-0123456789ab\n")] == [None] * 4
+    assert [
+        sequence_of(name) for name in ("42-0123456789ab", ".staging-1", "000042-xyz", "000042-0123456789ab\n")
+    ] == [None] * 4
     with pytest.raises(StoreError, match="expected the name of a snapshot"):
         places.snapshot("../elsewhere")
 
@@ -114,7 +127,12 @@ def _start(store: Path, body: str) -> subprocess.Popen[str]:
 def test_a_second_writer_is_refused_and_told_who_holds_the_store(places: Places) -> None:
     process = _start(places.store, "pass")
     try:
-        with pytest.raises(StoreBusy, match=rf"is being written by process {process.pid} on .+ since \d{{4}}-"), write_lock(places):
+        with (
+            pytest.raises(
+                StoreBusy, match=rf"is being written by process {process.pid} on .+ since \d{{4}}-"
+            ),
+            write_lock(places),
+        ):
             pass
     finally:
         process.kill()
@@ -122,9 +140,8 @@ def test_a_second_writer_is_refused_and_told_who_holds_the_store(places: Places)
 
 
 def test_a_second_writer_in_the_same_process_is_refused(places: Places) -> None:
-    with write_lock(places):
-        with pytest.raises(StoreBusy, match=f"process {os.getpid()}"), write_lock(places):
-            pass
+    with write_lock(places), pytest.raises(StoreBusy, match=f"process {os.getpid()}"), write_lock(places):
+        pass
     with write_lock(places):
         pass
 
@@ -139,7 +156,9 @@ def test_the_lock_of_a_killed_process_is_no_obstacle(places: Places) -> None:
     assert places.lock.read_text() == ""
 
 
-def test_a_worker_that_outlives_its_killed_parent_does_not_hold_the_lock(places: Places, tmp_path: Path) -> None:
+def test_a_worker_that_outlives_its_killed_parent_does_not_hold_the_lock(
+    places: Places, tmp_path: Path
+) -> None:
     """The forked child keeps running and would share the parent's lock if it kept its file open."""
     note = tmp_path / "child"
     body = (
@@ -175,7 +194,10 @@ def test_a_lock_file_that_says_nonsense_is_told_as_it_is(places: Places) -> None
 
 def test_a_store_that_is_a_file_is_an_error_in_words(tmp_path: Path) -> None:
     (tmp_path / "store").write_text("")
-    with pytest.raises(StoreError, match="cannot be written: File exists"), write_lock(Places(tmp_path / "store")):
+    with (
+        pytest.raises(StoreError, match="cannot be written: File exists"),
+        write_lock(Places(tmp_path / "store")),
+    ):
         pass
 
 

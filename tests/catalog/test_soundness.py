@@ -11,7 +11,7 @@ from tests.catalog.small import S, sound_rows, table_named
 
 Change = dict[str, Any]
 
-# Rule, table, the row (by its place in `sound_rows`), what is written over it. None in the place of a row adds one.
+# Rule, table, place of the row in `sound_rows` (None: one more row like the first), what is written over it.
 OFFENCES: list[tuple[str, str, int | None, Change]] = [
     ("back_adjusted_is_settle_plus_shift", "series", 1, {"back_adjusted": 110.5}),
     ("back_adjusted_is_settle_plus_shift", "series", 1, {"back_adjusted": None}),
@@ -80,7 +80,7 @@ OFFENCES: list[tuple[str, str, int | None, Change]] = [
 ]  # fmt: skip
 
 
-def lay_open(tables: dict[str, dict[str, list[Any]]]) -> duckdb.DuckDBPyConnection:
+def lay_open(tables: dict[str, dict[str, Any]]) -> duckdb.DuckDBPyConnection:
     """A connection in which each table is in reach by its name."""
     connection = duckdb.connect()
     for name, columns in tables.items():

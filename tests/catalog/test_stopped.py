@@ -1,4 +1,4 @@
-"""A kill at any step, and a disk that is full at any size, leave the last good snapshot and a clean next run."""
+"""A kill at any step and a disk full at any size leave a whole snapshot and a clean next run."""
 
 import json
 import os
@@ -52,7 +52,9 @@ def test_a_kill_at_any_step_of_a_night_leaves_a_whole_snapshot_and_a_clean_next_
     assert problems == []
 
 
-def test_a_disk_that_fills_up_leaves_the_last_snapshot_and_says_what_could_not_be_written(tmp_path: Path) -> None:
+def test_a_disk_that_fills_up_leaves_the_last_snapshot_and_says_what_could_not_be_written(
+    tmp_path: Path,
+) -> None:
     rows, problems = break_nights("fill", tmp_path)
     assert [row["size"] for row in rows] == SIZES
     told = [row["answer"].removeprefix("StoreError: ").partition(": ")[0] for row in rows]

@@ -72,6 +72,11 @@ def _put_link(places: Places, folder: Path) -> None:
     (folder / SERIES).symlink_to(places.store / "elsewhere.parquet")
 
 
+def _put_link_above(places: Places, folder: Path) -> None:
+    shutil.move(folder / "series", places.store / "elsewhere")
+    (folder / "series").symlink_to(places.store / "elsewhere")
+
+
 def _damage_manifest(places: Places, folder: Path) -> None:
     content = json.loads((folder / "manifest.json").read_bytes())
     content["files"][SERIES]["rows"] = 17
@@ -130,6 +135,7 @@ def _rename_snapshot_in_catalog(places: Places, folder: Path) -> None:
         (_remove, "series/NWHT.parquet: cannot be read: No such file"),
         (_add, "series/NKRN.parquet: is not listed in the manifest"),
         (_put_link, "series/NWHT.parquet: cannot be read: Too many levels of symbolic links"),
+        (_put_link_above, "series: is a link; expected a folder"),
         (_damage_manifest, "manifest.json: seen the name '.+' and content that makes"),
         (_point_nowhere, "CURRENT: seen '000001-000000000000'; expected the name of a snapshot"),
         (_flip_raw, f"{RAW_SHA}.zst: seen "),

@@ -13,6 +13,7 @@ import click
 from contracts.errors import UsageError
 from flows.exits import Exit
 from flows.render import complain, say, say_json, say_table
+from flows.settings import Where
 from flows.shell import Asked, Ropewalk, command, show_version
 
 if TYPE_CHECKING:
@@ -56,10 +57,10 @@ def nightly(asked: Asked, jobs: int | None) -> Exit:
     the length of the run; its records stay in Prefect's home folder. Where the API cannot be reached, the
     same work is done unwatched.
     """
-    _check_desk(asked)
+    where = _checked(asked)
     from flows.nightly import run_watched
 
-    told = run_watched(asked.where(), jobs)
+    told = run_watched(where, jobs)
     assert told.summary is not None
     code = _tell_summary(told.summary, asked.as_json)
     if not asked.as_json and not told.notes:
@@ -78,17 +79,22 @@ def build(asked: Asked, jobs: int | None) -> Exit:
     Takes in, builds, checks, publishes. What carries the markets is declared in desk.toml: [run] workers =
     "threads", "processes" or "dask".
     """
-    _check_desk(asked)
+    where = _checked(asked)
     from flows.work import pool_builder, run_night
 
-    return _tell_summary(run_night(asked.where(), "build", pool_builder(jobs)), asked.as_json)
+    return _tell_summary(run_night(where, "build", pool_builder(jobs)), asked.as_json)
 
 
-def _check_desk(asked: Asked) -> None:
-    """All mistakes of a wrong desk are told at once, and before a lock is taken or a server started for it."""
+def _checked(asked: Asked) -> Where:
+    """The folders to work on, once all that can be wrong with them was told."""
     from catalog.declarations import load_desk
+    from flows.work import check_usage
 
+    # First the desk as a whole: all its mistakes, and not only that it names no store.
     load_desk(asked.desk_folder())
+    where = asked.where()
+    check_usage(where)
+    return where
 
 
 def _tell_summary(summary: "Summary", as_json: bool) -> Exit:
@@ -118,9 +124,11 @@ def desk(asked: Asked, market: str | None, years: str | None) -> Exit:
         if asked.as_json:
             say_json({"markets": list(declared.markets), "layouts": list(declared.layouts), "mistakes": []})
             return Exit.DONE
-        counts = (
-            f"{len(declared.markets)} markets, {len(declared.layouts)} layouts, "
-            f"{len(declared.repairs)} repairs, {len(declared.waivers)} waivers"
+        kinds = ("market", "layout", "repair", "waiver")
+        parts = (declared.markets, declared.layouts, declared.repairs, declared.waivers)
+        counts = ", ".join(
+            f"{len(part)} {kind}{'' if len(part) == 1 else 's'}"
+            for kind, part in zip(kinds, parts, strict=True)
         )
         say([f"{declared.path}: {counts}; no mistakes", ""])
         rows = [
@@ -234,7 +242,9 @@ def findings(
     if not rows:
         say(["no findings"])
         return Exit.DONE
-    say_table(_FINDING_COLUMNS, _pick(columns, rows, _FINDING_COLUMNS))
+    is_any_waived = any(row[columns.index("waived_until")] is not None for row in rows)
+    names = tuple(name for name in _FINDING_COLUMNS if is_any_waived or name != "waived_until")
+    say_table(names, _pick(columns, rows, names))
     if total > len(rows):
         say(["", f"the first {len(rows):,} of {total:,}; --limit {total} shows all"])
     return Exit.DONE

@@ -5,7 +5,7 @@ here: the steps of a night (`work.py`), where a Prefect API comes from (`watched
 """
 
 from contextvars import ContextVar
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 from uuid import UUID
@@ -14,8 +14,7 @@ from uuid import UUID
 from flows.watched import Api, Unreachable, count_recorded, drain, note_loss, reach_api
 
 # isort: split
-from concurrent.futures import BrokenExecutor
-from contextlib import ExitStack
+from contextlib import ExitStack, suppress
 
 from prefect import flow
 from prefect.client.orchestration import get_client
@@ -24,18 +23,17 @@ from prefect.context import FlowRunContext
 from prefect.futures import as_completed
 from prefect.states import Completed, Failed
 from prefect.task_runners import ProcessPoolTaskRunner, ThreadPoolTaskRunner
-from prefect.utilities.annotations import quote
 
 from contracts.errors import RopewalkError, UsageError
 from flows.progress import Tick
 from flows.settings import Where
 from flows.tasks import build_market
 from flows.work import (
-    NO_DASK,
     Builder,
     Result,
-    build_alone,
+    build_missing,
     count_workers,
+    death_errors,
     ignore_interrupt,
     pool_builder,
     run_night,
@@ -105,12 +103,14 @@ def run_watched(where: Where, jobs: int | None = None) -> Told:
 def _run_flow(where: Where, jobs: int | None, told: Told) -> None:
     raw = None if where.raw is None else str(where.raw)
     try:
-        state: State[Any] = night(str(where.desk), raw, str(where.store), jobs, return_state=True)  # type: ignore[assignment]
+        # Typed as if it were awaited; a flow without async gives the state itself.
+        state: State[Any] = night(  # type: ignore[assignment]
+            str(where.desk), raw, str(where.store), jobs, return_state=True
+        )
         failure = state.message or str(state.name)
     except Exception as error:  # Prefect's own: what the night itself raises stands in `told` already
         failure = _in_short(error)
-        if told.error is None:
-            _note_loss(told, failure)
+        _note_loss(told, failure)
     if told.error is None and told.summary is None:
         _note_loss(told, failure)
 
@@ -121,6 +121,7 @@ def _count(told: Told, api: Api) -> None:
     try:
         told.recorded = count_recorded(api, told.run, told.expected)
     except Exception as error:
+        note_loss()
         told.notes.append(f"Prefect was lost after the night ({_in_short(error)})")
         return
     if told.recorded < told.expected:
@@ -189,8 +190,9 @@ def _task_builder(jobs: int | None, told: Told) -> Builder:
     def build(night: "Night", tick: Tick) -> list[Result]:
         told.expected = len(night.markets)
         _name_run(told, _count_markets(night))
+        # Prefect notes as dependency of a task whatever it is handed that a result holds too, such as codes.
+        handed = replace(night, markets=(), unchanged=())
         results: list[Result] = []
-        dead: list[str] = []
         with ExitStack() as stack:
             try:
                 runner = stack.enter_context(_task_runner(night, jobs))
@@ -200,26 +202,19 @@ def _task_builder(jobs: int | None, told: Told) -> Builder:
                 raise UsageError(unreachable_dask(night.dask_address, error)) from None
             try:
                 futures = {
-                    runner.submit(build_market, {"night": quote(night), "market": m}): m
-                    for m in night.markets
+                    runner.submit(build_market, {"night": handed, "market": market}): market
+                    for market in night.markets
                 }
             except Exception as error:
                 raise Lost(_in_short(error)) from error
             for future in as_completed(list(futures)):
-                market = futures[future]
-                try:
+                # A market whose worker died has no result; it is built again below.
+                with suppress(*death_errors(night)):
                     results.append(future.result())
-                except BrokenExecutor:
-                    dead.append(market)
-                    continue
-                tick(market)
-        if dead:
-            told.notes.append(
-                "a worker process died; the markets it left were built again, unwatched, one by one"
-            )
-        for market in dead:
-            results.append(build_alone(night, market))
-            tick(market)
+                    tick(futures[future])
+        if len(results) < len(night.markets):
+            told.notes.append("a worker died; the markets it left were built again, unwatched, one by one")
+        results += build_missing(night, results, tick)
         _name_run(told, f"{_count_markets(night)}, data to {_data_date(results)}")
         return results
 
@@ -231,10 +226,8 @@ def _task_runner(night: "Night", jobs: int | None) -> Any:
     if night.workers == "processes":
         return ProcessPoolTaskRunner(workers, initializer=ignore_interrupt)
     if night.workers == "dask":
-        try:
-            from prefect_dask import DaskTaskRunner
-        except ImportError:
-            raise UsageError(NO_DASK) from None
+        from prefect_dask import DaskTaskRunner
+
         if night.dask_address:
             return DaskTaskRunner(address=night.dask_address)
         return DaskTaskRunner(

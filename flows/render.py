@@ -17,6 +17,7 @@ from typing import Any
 # set the terminal's title or make a number read backwards.
 _STEERING = re.compile("[\x00-\x1f\x7f-\x9f\u061c\u200e\u200f\u2028-\u202e\u2066-\u2069\ud800-\udfff\ufeff]")
 _GAP = "  "
+_LONGEST_WORD = 24
 
 
 def plain(text: str) -> str:
@@ -91,8 +92,15 @@ def _draw(columns: Sequence[str], rows: Sequence[Sequence[Any]]) -> None:
     from rich.text import Text
 
     table = Table(box=SIMPLE_HEAD, pad_edge=False)
+    lengths = [max((len(show(row[at])) for row in rows), default=0) for at in range(len(columns))]
     for at, column in enumerate(columns):
-        table.add_column(Text(plain(column)), justify="right" if _is_number_column(rows, at) else "left")
+        # On a narrow terminal only sentences break; a broken price or name cannot be read.
+        table.add_column(
+            Text(plain(column)),
+            justify="right" if _is_number_column(rows, at) else "left",
+            no_wrap=lengths[at] <= _LONGEST_WORD,
+            min_width=min(lengths[at], _LONGEST_WORD),
+        )
     for row in rows:
         table.add_row(*(Text(show(value)) for value in row))
     console = Console()

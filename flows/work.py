@@ -4,6 +4,7 @@ Belongs here: the order of the steps, and threads, processes and Dask. Does not 
 (`catalog/night.py`), Prefect (`nightly.py`).
 """
 
+import importlib.util
 import multiprocessing
 import os
 import signal
@@ -16,7 +17,7 @@ from concurrent.futures import (
     ThreadPoolExecutor,
     as_completed,
 )
-from contextlib import contextmanager
+from contextlib import ExitStack, contextmanager, suppress
 from typing import TYPE_CHECKING, Any
 
 from catalog.places import Places, write_lock
@@ -27,11 +28,6 @@ from flows.settings import Where
 if TYPE_CHECKING:
     from catalog.night import Night
     from catalog.summary import Summary
-
-NO_DASK = (
-    'the desk says workers = "dask", and Dask is not installed; install ropewalk[dask], '
-    'or say workers = "threads" or "processes" under [run] in desk.toml'
-)
 
 Result = dict[str, Any]
 Builder = Callable[["Night", Tick], list[Result]]
@@ -46,18 +42,10 @@ def run_night(where: Where, command: str, build: Builder) -> "Summary":
 
     Raises DeskError, StoreBusy, StoreError.
     """
-    from catalog.declarations import load_desk
     from catalog.night import abandon, begin, finish
 
-    places = Places(where.store)
-    # The lock makes the store's folder, and wrong usage must leave nothing behind.
-    declared = load_desk(where.desk)
-    raw = where.raw or declared.raw
-    if not raw.is_dir() and not places.archive.is_dir():
-        raise UsageError(
-            f"{raw}: no such folder, and no archive in {where.store}; name the raw files with --raw"
-        )
-    with write_lock(places):
+    check_usage(where)
+    with write_lock(Places(where.store)):
         night = begin(where.desk, where.raw, where.store, command)
         try:
             results: list[Result] = []
@@ -68,6 +56,27 @@ def run_night(where: Where, command: str, build: Builder) -> "Summary":
         except BaseException:
             abandon(night)
             raise
+
+
+def check_usage(where: Where) -> None:
+    """What can be known to be wrong before a lock is taken, and with it a folder made, or a server started.
+
+    Raises DeskError with every mistake of the desk, UsageError for a raw folder that is not there while
+    nothing was ever taken in, and for Dask that is asked for and not installed.
+    """
+    from catalog.declarations import load_desk
+
+    desk = load_desk(where.desk)
+    raw = where.raw or desk.raw
+    if not raw.is_dir() and not Places(where.store).archive.is_dir():
+        raise UsageError(
+            f"{raw}: no such folder, and no archive in {where.store}; name the raw files with --raw"
+        )
+    if desk.run.workers == "dask" and not all(map(importlib.util.find_spec, ("distributed", "prefect_dask"))):
+        raise UsageError(
+            'the desk says workers = "dask", and Dask is not installed; install ropewalk[dask], '
+            'or say workers = "threads" or "processes" under [run] in desk.toml'
+        )
 
 
 def pool_builder(jobs: int | None) -> Builder:
@@ -85,8 +94,7 @@ def pool_builder(jobs: int | None) -> Builder:
 
 
 def count_workers(jobs: int | None, markets: int) -> int:
-    """How many workers: `jobs` where given, else one a usable processor, at least 2; never more than
-    markets."""
+    """How many workers: `jobs`, else one a usable processor and at least 2; never more than markets."""
     if jobs is None:
         # A container may be given fewer processors than the machine has.
         usable = len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else os.cpu_count() or 1
@@ -104,25 +112,44 @@ def process_context() -> multiprocessing.context.BaseContext:
 
 
 def ignore_interrupt() -> None:
-    """In a worker process: leave Ctrl-C, which reaches the whole group, to the process that holds the
-    lock."""
+    """In a worker process: leave Ctrl-C, which reaches the whole group, to the one that holds the lock."""
     signal.signal(signal.SIGINT, signal.SIG_IGN)
 
 
-def failed_result(market: str, reason: str) -> Result:
-    """The result of a market whose worker died before it could give one."""
-    return {"market": market, "files": {}, "facts": {}, "error": reason, "rows": 0, "seconds": 0.0}
+def build_missing(night: "Night", results: list[Result], tick: Tick) -> list[Result]:
+    """Build each market of the night that has no result yet, in a process of its own.
+
+    A worker that dies (memory, a fault in a library) takes others with it. This way only the market that
+    kills its worker is held back: its result says that its process died.
+    """
+    there = {result["market"] for result in results}
+    return [_ticked(_build_alone(night, market), tick) for market in night.markets if market not in there]
 
 
-def build_alone(night: "Night", market: str) -> Result:
-    """Build one market in a process of its own; where that dies too, the result says so."""
+def death_errors(night: "Night") -> tuple[type[Exception], ...]:
+    """What is raised for a market whose worker died."""
+    if night.workers == "dask":
+        from distributed import KilledWorker
+
+        return (BrokenExecutor, KilledWorker)
+    return (BrokenExecutor,)
+
+
+def _build_alone(night: "Night", market: str) -> Result:
     try:
         with _process_pool(1) as pool:
             return next(_submit(pool, night, (market,))).result()
     except BrokenExecutor:
-        return failed_result(
-            market, "the worker process that built it died twice; see the system's log for why"
-        )
+        reason = "the process that built it died; perhaps too little memory"
+        return {
+            "market": market,
+            "files": {},
+            "facts": {},
+            "worst": [],
+            "error": reason,
+            "rows": 0,
+            "seconds": 0.0,
+        }
 
 
 def _submit(pool: Executor, night: "Night", markets: tuple[str, ...]) -> Iterator[Future[Result]]:
@@ -149,19 +176,14 @@ def _interruptible(pool: Executor) -> Iterator[Executor]:
 
 
 def _build_in_processes(night: "Night", jobs: int | None, tick: Tick) -> list[Result]:
-    """A worker that dies (memory, a fault in a library) takes the whole pool with it. The markets left are
-    then built each in a process of its own, so that only the one that kills its worker is held back."""
-    done: dict[str, Result] = {}
+    results: list[Result] = []
     try:
         with _process_pool(count_workers(jobs, len(night.markets))) as pool:
             for future in _submit(pool, night, night.markets):
-                result = _ticked(future.result(), tick)
-                done[str(result["market"])] = result
+                results.append(_ticked(future.result(), tick))
     except BrokenExecutor:
-        for market in night.markets:
-            if market not in done:
-                done[market] = _ticked(build_alone(night, market), tick)
-    return list(done.values())
+        results += build_missing(night, results, tick)
+    return results
 
 
 def _process_pool(workers: int) -> Any:
@@ -169,38 +191,29 @@ def _process_pool(workers: int) -> Any:
 
 
 def _build_on_dask(night: "Night", jobs: int | None, tick: Tick) -> list[Result]:
-    try:
-        from distributed import Client, KilledWorker, LocalCluster
-        from distributed import as_completed as dask_completed
-    except ImportError:
-        raise UsageError(NO_DASK) from None
+    from distributed import Client, LocalCluster
+    from distributed import as_completed as dask_completed
+
     from catalog.night import build_one
 
-    cluster = None
-    if not night.dask_address:
-        workers = count_workers(jobs, len(night.markets))
-        cluster = LocalCluster(n_workers=workers, threads_per_worker=1, dashboard_address=None)
-    try:
-        with _dask_client(Client, night.dask_address or cluster) as client:
-            waiting = {
-                client.submit(build_one, night, market, pure=False): market for market in night.markets
-            }
-            results = []
-            for future in dask_completed(waiting):
-                try:
-                    result = future.result()
-                except KilledWorker as error:
-                    result = failed_result(waiting[future], f"its Dask workers died: {error}")
-                results.append(_ticked(result, tick))
-            return results
-    finally:
-        if cluster is not None:
-            cluster.close()
+    results: list[Result] = []
+    with ExitStack() as stack:
+        address: Any = night.dask_address
+        if not address:
+            workers = count_workers(jobs, len(night.markets))
+            cluster = LocalCluster(n_workers=workers, threads_per_worker=1, dashboard_address=None)
+            address = stack.enter_context(cluster)
+        client = stack.enter_context(_dask_client(Client, address))
+        waiting = [client.submit(build_one, night, market, pure=False) for market in night.markets]
+        for future in dask_completed(waiting):
+            with suppress(*death_errors(night)):
+                results.append(_ticked(future.result(), tick))
+    return results + build_missing(night, results, tick)
 
 
 def _dask_client(client: Any, address: Any) -> Any:
     try:
-        return client(address, timeout="60s")
+        return client(address, timeout="30s")
     except (OSError, ValueError) as error:
         raise UsageError(unreachable_dask(str(address), error)) from None
 

@@ -1,0 +1,1 @@
+"""The command line and the nightly flow: exit codes, help, JSON, workers, Prefect."""

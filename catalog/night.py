@@ -26,7 +26,7 @@ from catalog.assignment import (
     table_stamp,
 )
 from catalog.declarations import Desk, load_desk
-from catalog.gates import judge_market
+from catalog.gates import judge_market, silent_sessions
 from catalog.places import Places, table_path
 from catalog.runs import Run, next_run, record_run, runs_table
 from catalog.store import (
@@ -232,7 +232,8 @@ def finish(night: Night, results: list[dict[str, Any]]) -> Summary:
         sum(verdict.state == PUBLISHED for verdict in verdicts.values()),
         sum(verdict.state == HELD_BACK for verdict in verdicts.values()),
     )  # fmt: skip
-    desk_findings = _desk_findings(memory, desk, staging, files)
+    late = late_markets(desk, verdicts)
+    desk_findings = [*_desk_findings(memory, desk, staging, files), *late]
     for table, market, data in (
         (_table("findings"), _NO_MARKET, findings_table(desk_findings)),
         (COVERAGE, _NO_MARKET, coverage_table(desk, verdicts)),
@@ -249,6 +250,7 @@ def finish(night: Night, results: list[dict[str, Any]]) -> Summary:
             "unclaimed": memory["unclaimed"],
             "files_taken_in": night.files_taken_in,
             "desk_findings": len(desk_findings),
+            "late": [finding.market for finding in late],
         },
     )  # fmt: skip
     manifest = publish(places, staging, draft)
@@ -332,6 +334,28 @@ def _desk_findings(memory: dict[str, Any], desk: Desk, staging: Path, files: dic
             if waiver.finding not in known:
                 text = f"the waiver of {waiver.describe()} by {waiver.by} covers no finding; remove it"
                 found.append(Finding(Kind.WAIVER_UNMATCHED, Severity.REVIEW, text, detail=waiver.describe()))
+    return found
+
+
+def late_markets(desk: Desk, verdicts: dict[str, Verdict]) -> list[Finding]:
+    """Markets that lack the newest session of any market, by their own calendar and the data, not the clock."""
+    dates = {
+        code: datetime.date.fromisoformat(verdict.facts["last_session"])
+        for code, verdict in verdicts.items()
+        if "last_session" in verdict.facts
+    }
+    newest = max(dates.values(), default=datetime.date.min)
+    found = []
+    for code, last in dates.items():
+        count = silent_sessions(desk.markets[code], last, newest)
+        if count:
+            plural = "s" if count > 1 else ""
+            text = f"{code}, {newest}: its newest bar is of {last}, {count} session{plural} behind the newest market"
+            found.append(
+                Finding(
+                    Kind.FILE_LATE, Severity.REVIEW, text, code, session=newest, score=float(count), detail="market"
+                )
+            )
     return found
 
 

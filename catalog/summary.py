@@ -38,7 +38,7 @@ class Summary:
     finding_counts: dict[str, int]
     rows: int
     unclaimed: int
-    late: tuple[str, ...] = ()
+    late: tuple[str, ...]
 
     @property
     def exit_code(self) -> int:
@@ -60,6 +60,8 @@ class Summary:
             told = [f"published snapshot {self.snapshot}: {len(self.published)} markets, {self.rows:,} rows built"]
             told.append(f"  published: {', '.join(self.published) or 'none'}")
         told += [f"  held back: {market}: {reason}" for market, reason in self.held_back]
+        if self.late:
+            told.append(f"  late: {', '.join(self.late)} (ropewalk findings --kind file_late)")
         if self.unclaimed:
             plural = "file belongs" if self.unclaimed == 1 else "files belong"
             told.append(
@@ -96,4 +98,5 @@ def summarise(
         finding_counts=counts,
         rows=sum(int(result["rows"]) for result in results),
         unclaimed=int(manifest.summary.get("unclaimed", 0)),
+        late=tuple(manifest.summary.get("late", ())),
     )

@@ -12,7 +12,7 @@ import numpy as np
 import pyarrow as pa
 
 from contracts.arrivals import Arrived, settle_arrivals
-from contracts.checks.arrived import check_days, check_files, check_meetings
+from contracts.checks.arrived import account_for_rows, check_days, check_files, check_meetings
 from contracts.checks.gaps import check_gaps
 from contracts.checks.rolled import check_rolls
 from contracts.checks.rows import check_rows
@@ -94,6 +94,7 @@ def build_market(inputs: Inputs) -> Built:
     files, is_old, failures = _read(inputs)
     parsed = parse_rows(files, market)
     arrived = settle_arrivals(parsed, files, is_old)
+    account_for_rows(market.code, files, is_old, parsed, arrived)
     if not len(arrived.bars.line):
         first = f"; {failures[0][2]}" if failures else ""
         raise ValueError(f"{market.code}: no row of its {len(inputs.files)} files can be read{first}")

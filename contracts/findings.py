@@ -44,6 +44,7 @@ class Kind(StrEnum):
     REFUSED_PATH = "refused_path"  # not a regular file, or a name nothing may be made of
     TORN_FILE = "torn_file"  # no line end at the end: the last row is held out
     SHRUNKEN_FILE = "shrunken_file"  # a later version lacks rows of an earlier one
+    FILE_LATE = "file_late"  # a live contract, or a whole market, lacks the newest sessions
     UNREADABLE_ROWS = "unreadable_rows"  # rows of a file that could not be read
     # the rows
     DUPLICATE_ROWS = "duplicate_rows"  # the same row again

@@ -4,7 +4,10 @@ Belongs here: findings about files, rejected rows, rows that came twice, bars on
 here: anything that needs another contract's price.
 """
 
+import numpy as np
+
 from contracts.arrivals import Arrived, Meeting
+from contracts.errors import IdentityError
 from contracts.findings import Action, Finding, Kind, Severity
 from contracts.intake import TORN, FileRows, ParsedRows
 from contracts.layouts import BAR_FIELDS
@@ -42,6 +45,22 @@ def check_files(market: str, files: list[FileRows], is_old: list[bool]) -> list[
                 )
             )
     return found
+
+
+def account_for_rows(
+    market: str, files: list[FileRows], is_old: list[bool], parsed: ParsedRows, arrived: Arrived
+) -> None:
+    """Raise IdentityError unless every row of every newest file is kept, rejected, superseded, or another market's."""
+    kept = np.bincount(arrived.bars.source, minlength=len(files))
+    gone = np.bincount([parsed.source[meeting.row] for meeting in arrived.superseded] or [], minlength=len(files))
+    for source, (rows, old) in enumerate(zip(files, is_old, strict=True)):
+        if old or not rows.raw.is_told_here:
+            continue
+        others = sum(text.strip() != market for text in rows.columns.get("market", ()))
+        parts = {"kept": int(kept[source]), "rejected": len(rows.rejects), "superseded": int(gone[source])}
+        if rows.row_count != sum(parts.values()) + others:
+            told = ", ".join(f"{count} {name}" for name, count in parts.items())
+            raise IdentityError(f"{rows.raw.path}: {rows.row_count} rows came in; {told}, {others} of other markets")
 
 
 def check_meetings(

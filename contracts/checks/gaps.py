@@ -44,6 +44,30 @@ def check_gaps(panel: Panel) -> list[Finding]:
                     score=float(count), threshold=1.0,
                 )
             )  # fmt: skip
+    return found + _late_contracts(panel)
+
+
+def _late_contracts(panel: Panel) -> list[Finding]:
+    """Contracts that still trade by the market's calendar and lack the newest sessions that others have."""
+    has_bar = panel.bar >= 0
+    newest = len(has_bar) - 1
+    found = []
+    for contract in np.flatnonzero(has_bar.any(axis=0) & (panel.last_trade > newest)):
+        last = int(np.flatnonzero(has_bar[:, contract])[-1])
+        if last == newest:
+            continue
+        label, count = panel.contracts[contract], newest - last
+        newest_day = day_of(panel.sessions[newest])
+        message = (
+            f"{label}, {newest_day}: its newest bar is of {day_of(panel.sessions[last])}, "
+            f"{count} session{'s' if count > 1 else ''} behind the other contracts"
+        )
+        found.append(
+            Finding(
+                Kind.FILE_LATE, Severity.REVIEW, message, panel.market.code, label, newest_day, "settle",
+                score=float(count), threshold=1.0,
+            )
+        )  # fmt: skip
     return found
 
 

@@ -89,8 +89,4 @@ def test_dask_gives_the_same_tables_as_threads(desk: Path, tmp_path: Path, run_a
     text = (desk / "desk.toml").read_text()
     (desk / "desk.toml").write_text(text.replace('"dask"', '"threads"'))
     assert run_apart("build", "--desk", desk, "--store", tmp_path / "threads").returncode == 0
-    rows = [
-        {path: file.rows for path, file in read_manifest(Places(tmp_path / workers)).files.items()}
-        for workers in ("dask", "threads")
-    ]
-    assert rows[0] == rows[1]
+    assert hashes(tmp_path / "dask") == hashes(tmp_path / "threads")

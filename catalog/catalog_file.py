@@ -119,10 +119,7 @@ def _source(table: Table, facts: SnapshotFacts) -> str:
     paths = [str(facts.folder / path) for path in facts.files if path.startswith(f"{table.name}/")]
     if not paths:
         types = [_TYPES[table.definition(name).type] for name in table.columns]
-        nulls = (
-            f"cast(null as {kind}) as {quote_name(name)}"
-            for kind, name in zip(types, table.columns, strict=True)
-        )
+        nulls = (f"cast(null as {kind}) as {quote_name(name)}" for kind, name in zip(types, table.columns, strict=True))
         return f"(select {', '.join(nulls)} where false)"
     # Folders named like year=2024 above the store would otherwise add columns.
     options = "hive_partitioning = false"

@@ -63,9 +63,7 @@ def list_findings(
     is not there, or where nothing is published; StoreUnsound where the catalog cannot be read.
     """
     if kind is not None and kind not in set(Kind):
-        raise UsageError(
-            f"no kind of finding is called {kind!r}; {nearest(kind, [str(known) for known in Kind])}"
-        )
+        raise UsageError(f"no kind of finding is called {kind!r}; {nearest(kind, [str(known) for known in Kind])}")
     values = [part for wanted in (market, since, kind, severity) for part in (wanted, wanted)]
     with open_catalog(places) as connection:
         if market is not None:

@@ -284,17 +284,11 @@ def _tied_rows(data: pa.Table, order: tuple[str, ...], path: str) -> int:
         column = data[name]
         upper, lower = column.slice(0, count), column.slice(1)
         # A null sorts last, as Arrow sorts it.
-        rises = pc.or_(
-            pc.fill_null(pc.less(upper, lower), False), pc.and_(pc.is_valid(upper), pc.is_null(lower))
-        )
-        falls = pc.or_(
-            pc.fill_null(pc.greater(upper, lower), False), pc.and_(pc.is_null(upper), pc.is_valid(lower))
-        )
+        rises = pc.or_(pc.fill_null(pc.less(upper, lower), False), pc.and_(pc.is_valid(upper), pc.is_null(lower)))
+        falls = pc.or_(pc.fill_null(pc.greater(upper, lower), False), pc.and_(pc.is_null(upper), pc.is_valid(lower)))
         if pc.any(pc.and_(tied, falls)).as_py():
             row = pc.index(pc.and_(tied, falls), True).as_py() + 1
-            raise StoreError(
-                f"{path}: row {row + 1} sorts before row {row} by {name}; expected {', '.join(order)}"
-            )
+            raise StoreError(f"{path}: row {row + 1} sorts before row {row} by {name}; expected {', '.join(order)}")
         tied = pc.and_(tied, pc.invert(rises))
     return int(pc.sum(tied).as_py() or 0)
 
@@ -350,9 +344,7 @@ def check_files(folder: Path, manifest: Manifest) -> list[str]:
         seen |= {os.path.relpath(os.path.join(above, name), folder) for name in names}
         links = [os.path.join(above, name) for name in folders if os.path.islink(os.path.join(above, name))]
         problems += [f"{os.path.relpath(link, folder)}: is a link; expected a folder" for link in links]
-    problems += [
-        f"{path}: is not listed in the manifest" for path in sorted(seen - {*manifest.files, MANIFEST})
-    ]
+    problems += [f"{path}: is not listed in the manifest" for path in sorted(seen - {*manifest.files, MANIFEST})]
     with ThreadPoolExecutor(_READERS) as pool:
         found = pool.map(lambda file: _check_file(folder, file), manifest.files.values())
         problems += [problem for problem in found if problem]

@@ -30,9 +30,7 @@ _FINDING_COLUMNS = ("impact_sessions", "severity", "action", "waived_until", "me
 
 
 @click.group(cls=Ropewalk, context_settings={"max_content_width": 100})
-@click.option(
-    "--version", is_flag=True, is_eager=True, expose_value=False, callback=show_version, help="The version."
-)
+@click.option("--version", is_flag=True, is_eager=True, expose_value=False, callback=show_version, help="The version.")
 def main() -> None:
     """Lay raw per-expiry futures files into clean continuous series.
 
@@ -127,13 +125,10 @@ def desk(asked: Asked, market: str | None, years: str | None) -> Exit:
         kinds = ("market", "layout", "repair", "waiver")
         parts = (declared.markets, declared.layouts, declared.repairs, declared.waivers)
         counts = ", ".join(
-            f"{len(part)} {kind}{'' if len(part) == 1 else 's'}"
-            for kind, part in zip(kinds, parts, strict=True)
+            f"{len(part)} {kind}{'' if len(part) == 1 else 's'}" for kind, part in zip(kinds, parts, strict=True)
         )
         say([f"{declared.path}: {counts}; no mistakes", ""])
-        rows = [
-            (code, m.name, m.exchange, m.currency, ", ".join(m.plans)) for code, m in declared.markets.items()
-        ]
+        rows = [(code, m.name, m.exchange, m.currency, ", ".join(m.plans)) for code, m in declared.markets.items()]
         say_table(("market", "name", "exchange", "currency", "plans"), rows)
         return Exit.DONE
     if market not in declared.markets:
@@ -173,13 +168,9 @@ def _read_years(text: str | None, has_market: bool) -> tuple[int, int]:
 @click.argument("market")
 @click.argument("session")
 @click.option("--plan", metavar="NAME", help="Roll plan.  [default: the first the market declares]")
-@click.option(
-    "--nearby", type=click.IntRange(min=1), default=1, show_default=True, metavar="N", help="Which nearby."
-)
+@click.option("--nearby", type=click.IntRange(min=1), default=1, show_default=True, metavar="N", help="Which nearby.")
 @click.option("--snapshot", metavar="NAME", help="Snapshot.  [default: the newest]")
-def trace(
-    asked: Asked, market: str, session: str, plan: str | None, nearby: int, snapshot: str | None
-) -> Exit:
+def trace(asked: Asked, market: str, session: str, plan: str | None, nearby: int, snapshot: str | None) -> Exit:
     """Tell where one published price comes from.
 
     The arithmetic, the rolls, the repair, the raw line. SESSION is a day written as 2024-11-05.
@@ -278,12 +269,8 @@ def _pick(columns: list[str], rows: list[tuple[Any, ...]], wanted: tuple[str, ..
 
 
 @command(main, "verify", "ropewalk verify --deep")
-@click.option(
-    "--deep", is_flag=True, help="Also derive every published number again from archive, desk and code."
-)
-@click.option(
-    "--repoint", is_flag=True, help="First make the catalog again, for a store that was moved or copied."
-)
+@click.option("--deep", is_flag=True, help="Also derive every published number again from archive, desk and code.")
+@click.option("--repoint", is_flag=True, help="First make the catalog again, for a store that was moved or copied.")
 @click.option("--snapshot", metavar="NAME", help="Snapshot.  [default: the newest]")
 def verify(asked: Asked, deep: bool, repoint: bool, snapshot: str | None) -> Exit:
     """Check what is published, to the last byte.

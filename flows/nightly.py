@@ -125,9 +125,7 @@ def _count(told: Told, api: Api) -> None:
         told.notes.append(f"Prefect was lost after the night ({_in_short(error)})")
         return
     if told.recorded < told.expected:
-        told.notes.append(
-            f"Prefect keeps {told.recorded} of {told.expected} task runs; the night itself is complete"
-        )
+        told.notes.append(f"Prefect keeps {told.recorded} of {told.expected} task runs; the night itself is complete")
 
 
 def _note_loss(told: Told, why: str) -> None:
@@ -202,8 +200,7 @@ def _task_builder(jobs: int | None, told: Told) -> Builder:
                 raise UsageError(unreachable_dask(night.dask_address, error)) from None
             try:
                 futures = {
-                    runner.submit(build_market, {"night": handed, "market": market}): market
-                    for market in night.markets
+                    runner.submit(build_market, {"night": handed, "market": market}): market for market in night.markets
                 }
             except Exception as error:
                 raise Lost(_in_short(error)) from error
@@ -230,9 +227,7 @@ def _task_runner(night: "Night", jobs: int | None) -> Any:
 
         if night.dask_address:
             return DaskTaskRunner(address=night.dask_address)
-        return DaskTaskRunner(
-            cluster_kwargs={"n_workers": workers, "threads_per_worker": 1, "dashboard_address": None}
-        )
+        return DaskTaskRunner(cluster_kwargs={"n_workers": workers, "threads_per_worker": 1, "dashboard_address": None})
     return ThreadPoolTaskRunner(workers)
 
 

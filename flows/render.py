@@ -111,9 +111,7 @@ def _draw(columns: Sequence[str], rows: Sequence[Sequence[Any]]) -> None:
 
 def _is_number_column(rows: Sequence[Sequence[Any]], at: int) -> bool:
     values = [row[at] for row in rows if row[at] is not None]
-    return bool(values) and all(
-        isinstance(value, int | float) and not isinstance(value, bool) for value in values
-    )
+    return bool(values) and all(isinstance(value, int | float) and not isinstance(value, bool) for value in values)
 
 
 def _jsonable(value: Any) -> Any:

@@ -50,9 +50,7 @@ def sample_desk() -> Path:
     """The folder of the sample desk inside the installed package."""
     found = importlib.util.find_spec("catalog")
     if found is None or not found.submodule_search_locations:
-        raise DeskError(
-            [Mistake("catalog", "(package)", "no such package", "the package this program came with")]
-        )
+        raise DeskError([Mistake("catalog", "(package)", "no such package", "the package this program came with")])
     return Path(next(iter(found.submodule_search_locations))) / "desk"
 
 

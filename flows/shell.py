@@ -22,9 +22,7 @@ from flows.render import complain, say, say_json
 from flows.settings import Where, find_desk, find_where
 
 # The world, not the program: a full disk, a folder that may not be written, a broken drive.
-_WORLD = frozenset(
-    {errno.ENOSPC, errno.EDQUOT, errno.EROFS, errno.EACCES, errno.EPERM, errno.EIO, errno.EMFILE}
-)
+_WORLD = frozenset({errno.ENOSPC, errno.EDQUOT, errno.EROFS, errno.EACCES, errno.EPERM, errno.EIO, errno.EMFILE})
 
 
 @dataclass(frozen=True)

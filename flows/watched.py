@@ -147,13 +147,9 @@ def _check(api: Api) -> None:
         try:
             with get_client(sync_client=True) as client:
                 client.raise_for_api_version_mismatch()
-        except (
-            Exception
-        ) as error:  # refused, no such host, a page that is no API, another version: all the same
+        except Exception as error:  # refused, no such host, a page that is no API, another version: all the same
             cause = error.__cause__ or error
-            raise Unreachable(
-                f"the Prefect API at {_shown(api.url)} cannot be used: {_first_line(cause)}"
-            ) from error
+            raise Unreachable(f"the Prefect API at {_shown(api.url)} cannot be used: {_first_line(cause)}") from error
 
 
 def _shown(url: str) -> str:

@@ -69,9 +69,7 @@ def check_usage(where: Where) -> None:
     desk = load_desk(where.desk)
     raw = where.raw or desk.raw
     if not raw.is_dir() and not Places(where.store).archive.is_dir():
-        raise UsageError(
-            f"{raw}: no such folder, and no archive in {where.store}; name the raw files with --raw"
-        )
+        raise UsageError(f"{raw}: no such folder, and no archive in {where.store}; name the raw files with --raw")
     if desk.run.workers == "dask" and not all(map(importlib.util.find_spec, ("distributed", "prefect_dask"))):
         raise UsageError(
             'the desk says workers = "dask", and Dask is not installed; install ropewalk[dask], '

@@ -208,6 +208,4 @@ def publish_small(places: Places, raw: Path, market: str = "NWHT") -> Manifest:
     with write_lock(places):
         intake = take_in(raw, places)
         staging = open_staging(places)
-        return publish(
-            places, staging, draft_of(stage_small(staging, market, intake.arrivals[0].file), market)
-        )
+        return publish(places, staging, draft_of(stage_small(staging, market, intake.arrivals[0].file), market))

@@ -94,9 +94,7 @@ def look(places: Places) -> dict[str, Any]:
     """What a reader sees: the catalog's snapshot, how many rows its tables have, what CURRENT names."""
     with open_catalog(places) as connection:
         name = run_query(connection, "select name from snapshot")[1][0][0]
-        rows = run_query(connection, "select (select count(*) from series), (select count(*) from bars)")[1][
-            0
-        ]
+        rows = run_query(connection, "select (select count(*) from series), (select count(*) from bars)")[1][0]
     return {"catalog": name, "rows": list(rows), "current": current_snapshot(places)}
 
 

@@ -126,9 +126,7 @@ def test_without_a_raw_folder_the_archive_alone_is_used(places: Places, raw: Pat
     missing = take_in(raw, places)
     assert missing.number == 0
     assert missing.problems == (
-        Problem(
-            ".", f"the raw folder {raw} cannot be read: No such file or directory; the archive alone is used"
-        ),
+        Problem(".", f"the raw folder {raw} cannot be read: No such file or directory; the archive alone is used"),
     )
     raw.mkdir()
     (raw / "a.csv").write_bytes(b"first")
@@ -141,9 +139,7 @@ def test_without_a_raw_folder_the_archive_alone_is_used(places: Places, raw: Pat
     )
 
 
-def test_what_is_no_regular_file_of_a_plain_name_is_a_problem_and_is_not_read(
-    places: Places, raw: Path
-) -> None:
+def test_what_is_no_regular_file_of_a_plain_name_is_a_problem_and_is_not_read(places: Places, raw: Path) -> None:
     raw.mkdir()
     (raw / "secret").write_bytes(b"secret")
     (raw / "link.csv").symlink_to(raw / "secret")
@@ -188,9 +184,7 @@ def test_a_link_put_in_since_the_walk_is_not_followed(
     monkeypatch.setattr(catalog.archive, "_keep_files", swapping)
     intake = take_in(raw, places)
     assert intake.arrivals == ()
-    assert intake.problems == (
-        Problem("in/a.csv", "cannot be read: Not a directory; it is left for the next night"),
-    )
+    assert intake.problems == (Problem("in/a.csv", "cannot be read: Not a directory; it is left for the next night"),)
 
 
 def test_a_store_within_the_raw_folder_is_not_taken_in(raw: Path) -> None:
@@ -200,9 +194,7 @@ def test_a_store_within_the_raw_folder_is_not_taken_in(raw: Path) -> None:
     for _ in range(2):
         intake = take_in(raw, places)
         assert [arrival.path for arrival in intake.arrivals] == ["a.csv"]
-        assert intake.problems == (
-            Problem("published", "the store itself lies in the raw folder; it was not entered"),
-        )
+        assert intake.problems == (Problem("published", "the store itself lies in the raw folder; it was not entered"),)
 
 
 def test_a_file_larger_than_can_be_read_is_a_problem(
@@ -287,9 +279,7 @@ def test_a_file_that_keeps_changing_is_left_for_the_next_night(
     intake = take_in(raw, places)
     assert attempts == [b"first", b"first!"]
     assert [arrival.path for arrival in intake.arrivals] == ["b.csv"]
-    assert intake.problems == (
-        Problem("a.csv", "changed twice while it was read; it is left for the next night"),
-    )
+    assert intake.problems == (Problem("a.csv", "changed twice while it was read; it is left for the next night"),)
     monkeypatch.undo()
     assert take_in(raw, places).arrivals[1] == Arrival(2, "a.csv", sha(b"first!!"), 7)
 
@@ -339,9 +329,7 @@ def test_a_damaged_line_of_the_register_is_named(places: Places, raw: Path) -> N
     take_in(raw, places)
     lines = places.register.read_bytes().splitlines(keepends=True)
     places.register.write_bytes(lines[0][:10] + b"\x00\x00" + lines[0][12:] + lines[1])
-    with pytest.raises(
-        StoreUnsound, match=r"register\.jsonl:1: seen '.*'; expected one arrival as a JSON object"
-    ):
+    with pytest.raises(StoreUnsound, match=r"register\.jsonl:1: seen '.*'; expected one arrival as a JSON object"):
         take_in(raw, places)
     record = json.loads(lines[1])
     places.register.write_bytes(lines[0] + json.dumps({**record, "file": "../../etc"}).encode() + b"\n")

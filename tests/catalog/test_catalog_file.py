@@ -46,9 +46,7 @@ def test_any_client_counts_the_sessions_of_every_plan(places: Places, raw: Path)
     query = "select market, plan, count(*), min(session), max(session) from series group by all order by all"
     with connect(places) as connection:
         assert connection.execute(query).fetchall() == [
-            (market, plan, 6, S[0], S[5])
-            for market in ("NKRN", "NWHT")
-            for plan in ("at_once", "in_halves", "still")
+            (market, plan, 6, S[0], S[5]) for market in ("NKRN", "NWHT") for plan in ("at_once", "in_halves", "still")
         ]
 
 
@@ -58,9 +56,7 @@ def test_every_table_has_a_view_with_its_columns_and_types(places: Places, raw: 
         for table in TABLES:
             described = connection.execute(f"describe {table.name}").fetchall()
             assert tuple(row[0] for row in described) == table.columns
-        listed = connection.execute(
-            'select "table", "column", "type" from dictionary order by rowid'
-        ).fetchall()
+        listed = connection.execute('select "table", "column", "type" from dictionary order by rowid').fetchall()
         seen = [
             (table.name, row[0], row[1].lower())
             for table in TABLES
@@ -88,9 +84,7 @@ def test_the_catalog_says_which_snapshot_it_shows(places: Places, raw: Path) -> 
         ]
 
 
-def test_macros_are_in_reach_from_a_database_of_the_callers_own(
-    places: Places, raw: Path, tmp_path: Path
-) -> None:
+def test_macros_are_in_reach_from_a_database_of_the_callers_own(places: Places, raw: Path, tmp_path: Path) -> None:
     """A macro looks names up where it is called, hence none of them names a view."""
     publish_two(places, raw)
     with duckdb.connect(str(tmp_path / "own.duckdb")) as connection:
@@ -144,9 +138,7 @@ def test_a_raw_file_of_several_markets_is_shown_without_one(places: Places, raw:
     with write_lock(places):
         staging = open_staging(places)
         rows = {**sound_rows()["files"], "market": [None]}
-        stored = write_table(
-            staging, table_named("files"), "NWHT", make_table(table_named("files"), rows), STAMP
-        )
+        stored = write_table(staging, table_named("files"), "NWHT", make_table(table_named("files"), rows), STAMP)
         publish(places, staging, draft_of({stored.path: stored}))
     with connect(places) as connection:
         assert connection.execute("select path, market from files").fetchall() == [("NWHT.csv", None)]
@@ -165,9 +157,7 @@ def test_tables_without_any_file_are_empty_and_typed(places: Places, raw: Path) 
             assert connection.execute(f"select count(*) from {table.name}").fetchone() == (0,)
         assert connection.execute("describe series").fetchall()[3][1] == "DATE"
         assert connection.execute("select count(*) from series_of('NWHT')").fetchone() == (0,)
-        assert (
-            connection.execute("select * from bars where market = 'NWHT' limit 1").fetchall()[0][0] == "NWHT"
-        )
+        assert connection.execute("select * from bars where market = 'NWHT' limit 1").fetchall()[0][0] == "NWHT"
 
 
 @pytest.mark.parametrize("folder", ["year=2024", "it's", 'a "b"', "a b", "%24{series}", "$series", "é"])
@@ -181,9 +171,7 @@ def test_folders_of_any_name_above_the_store_change_nothing(tmp_path: Path, raw:
     assert verify_store(places).problems == ()
 
 
-def test_a_reader_keeps_the_snapshot_it_opened_while_the_next_one_is_published(
-    places: Places, raw: Path
-) -> None:
+def test_a_reader_keeps_the_snapshot_it_opened_while_the_next_one_is_published(places: Places, raw: Path) -> None:
     first = publish_small(places, raw)
     with connect(places) as early:
         assert early.execute("select count(*) from series").fetchone() == (18,)
@@ -229,9 +217,7 @@ def test_a_catalog_whose_files_are_not_there_is_not_built(places: Places, raw: P
 def test_views_can_be_laid_in_memory(places: Places, raw: Path) -> None:
     publish_small(places, raw)
     manifest = read_manifest(places)
-    facts = SnapshotFacts(
-        manifest.name, 1, None, "", "", places.snapshot(manifest.name), tuple(manifest.files)
-    )
+    facts = SnapshotFacts(manifest.name, 1, None, "", "", places.snapshot(manifest.name), tuple(manifest.files))
     with duckdb.connect() as connection:
         lay_views(connection, "memory", facts)
         assert connection.execute("select count(*) from rolls").fetchone() == (3,)

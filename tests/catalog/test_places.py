@@ -52,9 +52,9 @@ def test_a_name_no_path_may_be_made_of_is_refused(table: str, market: str) -> No
 def test_a_snapshot_has_a_number_and_a_hash(places: Places) -> None:
     assert sequence_of("000042-0123456789ab") == 42
     assert sequence_of("1000000-0123456789ab") == 1_000_000
-    assert [
-        sequence_of(name) for name in ("42-0123456789ab", ".staging-1", "000042-xyz", "000042-0123456789ab\n")
-    ] == [None] * 4
+    assert [sequence_of(name) for name in ("42-0123456789ab", ".staging-1", "000042-xyz", "000042-0123456789ab\n")] == [
+        None
+    ] * 4
     with pytest.raises(StoreError, match="expected the name of a snapshot"):
         places.snapshot("../elsewhere")
 
@@ -128,9 +128,7 @@ def test_a_second_writer_is_refused_and_told_who_holds_the_store(places: Places)
     process = _start(places.store, "pass")
     try:
         with (
-            pytest.raises(
-                StoreBusy, match=rf"is being written by process {process.pid} on .+ since \d{{4}}-"
-            ),
+            pytest.raises(StoreBusy, match=rf"is being written by process {process.pid} on .+ since \d{{4}}-"),
             write_lock(places),
         ):
             pass
@@ -156,9 +154,7 @@ def test_the_lock_of_a_killed_process_is_no_obstacle(places: Places) -> None:
     assert places.lock.read_text() == ""
 
 
-def test_a_worker_that_outlives_its_killed_parent_does_not_hold_the_lock(
-    places: Places, tmp_path: Path
-) -> None:
+def test_a_worker_that_outlives_its_killed_parent_does_not_hold_the_lock(places: Places, tmp_path: Path) -> None:
     """The forked child keeps running and would share the parent's lock if it kept its file open."""
     note = tmp_path / "child"
     body = (

@@ -68,9 +68,7 @@ def test_an_empty_store_says_that_nothing_is_published(places: Places) -> None:
         ("export database '{store}/snapshots/out'", "EXPORT"),
     ],
 )
-def test_anything_but_one_reading_statement_is_refused(
-    places: Places, raw: Path, sql: str, seen: str
-) -> None:
+def test_anything_but_one_reading_statement_is_refused(places: Places, raw: Path, sql: str, seen: str) -> None:
     publish_small(places, raw)
     with (
         open_catalog(places) as connection,
@@ -139,9 +137,7 @@ def test_python_variables_are_out_of_reach(places: Places, raw: Path) -> None:
         run_query(connection, "from secret")
 
 
-def test_a_store_that_was_moved_says_so_and_names_the_remedy(
-    places: Places, raw: Path, tmp_path: Path
-) -> None:
+def test_a_store_that_was_moved_says_so_and_names_the_remedy(places: Places, raw: Path, tmp_path: Path) -> None:
     name = publish_small(places, raw).name
     moved = Places(tmp_path / "moved")
     shutil.move(places.store, moved.store)
@@ -153,9 +149,7 @@ def test_a_store_that_was_moved_says_so_and_names_the_remedy(
     )
 
 
-def test_a_copied_store_does_not_quietly_serve_the_original(
-    places: Places, raw: Path, tmp_path: Path
-) -> None:
+def test_a_copied_store_does_not_quietly_serve_the_original(places: Places, raw: Path, tmp_path: Path) -> None:
     publish_small(places, raw)
     copied = Places(tmp_path / "copied")
     shutil.copytree(places.store, copied.store)
@@ -177,9 +171,7 @@ def test_a_catalog_that_is_gone_or_damaged_says_so(places: Places, raw: Path) ->
     assert not places.catalog.exists()
 
 
-@pytest.mark.parametrize(
-    "content", [None, b"", b"not a Parquet file at all", b"PAR1" + b"\x00" * 40 + b"PAR1"]
-)
+@pytest.mark.parametrize("content", [None, b"", b"not a Parquet file at all", b"PAR1" + b"\x00" * 40 + b"PAR1"])
 def test_a_published_file_that_cannot_be_read_is_no_wrong_query(
     places: Places, raw: Path, content: bytes | None
 ) -> None:

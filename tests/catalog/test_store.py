@@ -96,9 +96,7 @@ def test_writing_a_table_again_leaves_the_snapshot_alone_that_it_was_linked_to(t
     assert pq.read_metadata(tmp_path / "new/series/NWHT.parquet").num_rows == 6
 
 
-def test_where_no_link_can_be_made_the_file_is_copied(
-    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
-) -> None:
+def test_where_no_link_can_be_made_the_file_is_copied(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     write_table(tmp_path / "old", SERIES, "NWHT", sound_table("series"), STAMP)
 
     def refuse(*arguments: object, **named: object) -> None:
@@ -148,9 +146,7 @@ def _with_short_floats() -> pa.Table:
         (sound_table("bars", "NKRN"), "holds rows of another market"),
     ],
 )  # fmt: skip
-def test_a_table_that_is_not_what_it_is_called_is_refused(
-    tmp_path: Path, data: pa.Table, message: str
-) -> None:
+def test_a_table_that_is_not_what_it_is_called_is_refused(tmp_path: Path, data: pa.Table, message: str) -> None:
     with pytest.raises(StoreError, match=message):
         write_table(tmp_path, BARS, "NWHT", data, STAMP)
     assert list(tmp_path.iterdir()) == []
@@ -170,9 +166,7 @@ def test_findings_are_sorted_by_place_with_those_of_no_place_last_and_still_have
         write_table(tmp_path, FINDINGS, None, table.take([1, 0, 2]), STAMP)
 
 
-def test_a_disk_that_gives_back_other_bytes_is_noticed(
-    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
-) -> None:
+def test_a_disk_that_gives_back_other_bytes_is_noticed(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     original = Path.read_bytes
     monkeypatch.setattr(Path, "read_bytes", lambda path: original(path)[:-1] + b"?")
     with pytest.raises(StoreError, match="what is read back differs from what was written"):
@@ -235,9 +229,7 @@ def test_what_is_not_there_is_said(places: Places, raw: Path) -> None:
 def test_a_current_that_names_no_snapshot_is_unsound(places: Places, raw: Path, text: bytes) -> None:
     name = publish_small(places, raw).name
     places.current.write_bytes(text)
-    with pytest.raises(
-        StoreUnsound, match=f"expected the name of a snapshot that is there .newest there: {name}"
-    ):
+    with pytest.raises(StoreUnsound, match=f"expected the name of a snapshot that is there .newest there: {name}"):
         current_snapshot(places)
 
 
@@ -265,9 +257,7 @@ def test_nothing_is_published_that_differs_from_what_is_listed(places: Places, r
         "bytes; expected": cut,
         "cannot be read": link,
         "series/NWHT.parquet: cannot be read: No such file": lambda staging: (staging / series).unlink(),
-        "series/NEW.parquet: is not listed": lambda staging: (staging / "series/NEW.parquet").write_bytes(
-            b"new"
-        ),
+        "series/NEW.parquet: is not listed": lambda staging: (staging / "series/NEW.parquet").write_bytes(b"new"),
     }
     with write_lock(places):
         for message, break_it in breaks.items():
@@ -395,9 +385,7 @@ def test_a_newer_snapshot_that_is_not_whole_is_never_switched_to(places: Places,
         places.current.write_text(f"{first.name}\n")
         (places.snapshot(second.name) / "series/NWHT.parquet").unlink()
         (message,) = clean_leftovers(places)
-        assert message.startswith(
-            f"left {second.name}, which nothing points to, as it is: series/NWHT.parquet: "
-        )
+        assert message.startswith(f"left {second.name}, which nothing points to, as it is: series/NWHT.parquet: ")
         assert current_snapshot(places) == first.name
         # Its number is not given away again.
         assert add_snapshot(places).sequence == 3

@@ -156,9 +156,7 @@ def test_what_is_not_there_is_2_and_names_what_is(
     "arguments",
     [("findings",), ("rolls", "TINA"), ("trace", "TINA", "2024-01-10"), ("verify",), ("sql", "select 1")],
 )
-def test_a_store_with_nothing_in_it_is_2_for_every_reader(
-    arguments: tuple[str, ...], tmp_path: Path, run: Run
-) -> None:
+def test_a_store_with_nothing_in_it_is_2_for_every_reader(arguments: tuple[str, ...], tmp_path: Path, run: Run) -> None:
     result = run(*arguments, "--store", tmp_path / "empty")
     assert result.exit_code == 2
     assert "empty" in result.stderr
@@ -170,9 +168,7 @@ def test_rolls_as_json_and_text(published: Path, run: Run) -> None:
     assert [(roll["outgoing"], roll["incoming"]) for roll in told] == [("TINA-2024-03", "TINA-2024-06")]
     (roll,) = told
     assert roll["gap"] == roll["incoming_settle"] - roll["outgoing_settle"]
-    lines = run(
-        "rolls", "TINA", "--plan", "by_volume", "--nearby", "1", "--desk", published
-    ).stdout.splitlines()
+    lines = run("rolls", "TINA", "--plan", "by_volume", "--nearby", "1", "--desk", published).stdout.splitlines()
     assert lines[0].split()[:5] == ["plan", "nearby", "effective_on", "outgoing", "incoming"]
     assert lines[1].split()[:5] == ["by_volume", "1", roll["effective_on"], "TINA-2024-03", "TINA-2024-06"]
     assert run("rolls", "TINA", "--nearby", "7", "--desk", published).stdout == "no rolls\n"
@@ -210,9 +206,7 @@ def test_verify_deep_with_another_desk_is_5_and_says_so(published: Path, tmp_pat
     assert "was made with desk" in result.stdout
 
 
-def test_a_store_that_was_moved_says_so_and_is_pointed_right(
-    published: Path, tmp_path: Path, run: Run
-) -> None:
+def test_a_store_that_was_moved_says_so_and_is_pointed_right(published: Path, tmp_path: Path, run: Run) -> None:
     import shutil
 
     shutil.copytree(published / "published", tmp_path / "moved")
@@ -224,10 +218,7 @@ def test_a_store_that_was_moved_says_so_and_is_pointed_right(
 
 
 def test_sql_answers_as_json_and_text(published: Path, run: Run) -> None:
-    query = (
-        "select market, plan, count(*) as sessions, min(session) as first "
-        "from series group by all order by all"
-    )
+    query = "select market, plan, count(*) as sessions, min(session) as first from series group by all order by all"
     told = json.loads(run("sql", query, "--desk", published, "--json").stdout)
     assert told["columns"] == ["market", "plan", "sessions", "first"]
     assert told["rows"] == [["TINA", "by_volume", 80, "2023-11-01"], ["TINB", "by_volume", 80, "2023-11-01"]]
@@ -235,9 +226,7 @@ def test_sql_answers_as_json_and_text(published: Path, run: Run) -> None:
     assert lines[1].split() == ["TINA", "by_volume", "80", "2023-11-01"]
 
 
-@pytest.mark.parametrize(
-    "query", ["drop view series", "selec 1", "copy series to 'x.csv'", "select 1; select 2", ""]
-)
+@pytest.mark.parametrize("query", ["drop view series", "selec 1", "copy series to 'x.csv'", "select 1; select 2", ""])
 def test_sql_that_does_not_read_is_2(query: str, published: Path, run: Run) -> None:
     result = run("sql", query, "--desk", published)
     assert result.exit_code == 2

@@ -65,9 +65,7 @@ def test_a_market_held_back_is_3_and_the_other_is_published(desk: Path, run: Run
     assert "held back: TINB: " in result.stdout
 
 
-def test_nothing_published_is_4_where_every_market_is_sick_and_none_was_published(
-    desk: Path, run: Run
-) -> None:
+def test_nothing_published_is_4_where_every_market_is_sick_and_none_was_published(desk: Path, run: Run) -> None:
     for file in (desk / "raw").iterdir():
         file.write_text("date,high,low,settle,volume,oi\n" + "rubbish\n" * 90)
     result = run("build", "--desk", desk)
@@ -97,9 +95,7 @@ def test_a_wrong_desk_is_2_tells_every_mistake_and_leaves_no_store(desk: Path, r
     assert not (desk / "published").exists()
 
 
-def test_a_desk_or_raw_folder_that_is_not_there_is_2_and_leaves_no_store(
-    desk: Path, tmp_path: Path, run: Run
-) -> None:
+def test_a_desk_or_raw_folder_that_is_not_there_is_2_and_leaves_no_store(desk: Path, tmp_path: Path, run: Run) -> None:
     store = tmp_path / "store"
     for wrong in (
         ("--desk", tmp_path / "nowhere"),

@@ -52,9 +52,7 @@ def test_an_own_server_on_a_fresh_home_records_every_market_and_prints_nothing_o
     assert states == (12,), "pending, running and completed of four task runs"
 
 
-def test_where_the_api_cannot_be_reached_the_night_runs_unwatched_and_says_so(
-    desk: Path, run_apart: RunApart
-) -> None:
+def test_where_the_api_cannot_be_reached_the_night_runs_unwatched_and_says_so(desk: Path, run_apart: RunApart) -> None:
     done = run_apart("nightly", "--desk", desk, PREFECT_API_URL=REFUSED)
     assert done.returncode == 0
     assert done.stdout.startswith("published snapshot 000001-")
@@ -107,14 +105,10 @@ def test_an_api_that_breaks_costs_the_record_and_not_the_night(
     assert done.returncode == 0
     assert done.stdout.startswith("published snapshot 000001-")
     (note,) = done.stderr.splitlines()
-    assert note.startswith("Prefect was lost during the night") and note.endswith(
-        "its record is not complete"
-    )
+    assert note.startswith("Prefect was lost during the night") and note.endswith("its record is not complete")
 
 
-def test_a_wrong_desk_is_told_before_any_server_is_started(
-    desk: Path, tmp_path: Path, run_apart: RunApart
-) -> None:
+def test_a_wrong_desk_is_told_before_any_server_is_started(desk: Path, tmp_path: Path, run_apart: RunApart) -> None:
     (desk / "markets" / "tina.toml").write_text("code = 3")
     done = run_apart("nightly", "--desk", desk)
     assert done.returncode == 2

@@ -32,9 +32,7 @@ def test_a_desk_names_its_own_store(desk: Path, tmp_path: Path) -> None:
     assert (where.desk, where.raw, where.store) == (desk, None, tmp_path / "out")
 
 
-def test_raw_and_store_given_win_over_the_desk(
-    desk: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
-) -> None:
+def test_raw_and_store_given_win_over_the_desk(desk: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.chdir(tmp_path)
     where = find_where("desk", "a", "b")
     assert (where.desk, where.raw, where.store) == (desk, tmp_path / "a", tmp_path / "b")
@@ -56,9 +54,7 @@ def test_a_mistake_elsewhere_in_the_desk_does_not_hide_the_store(desk: Path, tmp
         (None, "(file)", "no such file"),
     ],
 )
-def test_a_desk_without_a_readable_store_is_refused(
-    desk: Path, text: str | None, key: str, seen: str
-) -> None:
+def test_a_desk_without_a_readable_store_is_refused(desk: Path, text: str | None, key: str, seen: str) -> None:
     if text is None:
         (desk / "desk.toml").unlink()
     else:

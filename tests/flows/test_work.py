@@ -20,14 +20,10 @@ def hashes(store: Path) -> dict[str, str]:
 
 
 def declare_workers(desk: Path, workers: str, more: str = "") -> None:
-    (desk / "desk.toml").write_text(
-        (desk / "desk.toml").read_text() + f'\n[run]\nworkers = "{workers}"\n{more}\n'
-    )
+    (desk / "desk.toml").write_text((desk / "desk.toml").read_text() + f'\n[run]\nworkers = "{workers}"\n{more}\n')
 
 
-@pytest.mark.parametrize(
-    ("jobs", "markets", "workers"), [(1, 9, 1), (3, 9, 3), (16, 9, 9), (None, 1, 1), (4, 0, 1)]
-)
+@pytest.mark.parametrize(("jobs", "markets", "workers"), [(1, 9, 1), (3, 9, 3), (16, 9, 9), (None, 1, 1), (4, 0, 1)])
 def test_there_are_never_more_workers_than_markets(jobs: int | None, markets: int, workers: int) -> None:
     assert count_workers(jobs, markets) == workers
 

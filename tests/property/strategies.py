@@ -138,9 +138,7 @@ def fill(
         for t in range(first, end + 1):
             if chance.random() < noise.no_bar:
                 continue
-            _fill_cell(
-                market, (name, t), levels[t] + slope * position + chance.randint(-2, 2) / 4, noise, chance
-            )
+            _fill_cell(market, (name, t), levels[t] + slope * position + chance.randint(-2, 2) / 4, noise, chance)
     return market
 
 
@@ -181,11 +179,7 @@ def _forceable(market: PlainMarket, months: tuple[int, ...] | None) -> list[tupl
 @st.composite
 def plans(draw: st.DrawFn, market: PlainMarket) -> PlainPlan:
     """A plan that a desk would accept for the market."""
-    before = (
-        draw(st.sampled_from(["last trade", "first notice", "earlier"]))
-        if market.first_notice
-        else "last trade"
-    )
+    before = draw(st.sampled_from(["last trade", "first notice", "earlier"])) if market.first_notice else "last trade"
     delay = draw(st.integers(1, 3))
     deliveries = sorted({int(name[-2:]) for name in market.contracts})
     chosen_months = st.sets(st.sampled_from(deliveries), min_size=1).map(lambda months: tuple(sorted(months)))
@@ -262,9 +256,7 @@ def wide_case(seed: int) -> tuple[PlainMarket, PlainPlan]:
         delay=chance.randint(1, 3),
         steps=chance.choice([1, 1, 2, 3, 5]),
         backstop=chance.choice([0, 0, 1, 2, 4, 6]),
-        before=chance.choice(["last trade", "first notice", "earlier"])
-        if market.first_notice
-        else "last trade",
+        before=chance.choice(["last trade", "first notice", "earlier"]) if market.first_notice else "last trade",
         incoming=chance.choice(["next", "most active"]),
         months=months,
         nearbys=(1, 2, 3),

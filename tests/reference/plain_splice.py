@@ -37,11 +37,7 @@ def weights_at(chain: Chain, t: int) -> dict[str, float]:
     for row in chain.rows:
         if row["effective_on"] <= t:
             weight = row["weight_after"]
-            held = (
-                {row["incoming"]: 1.0}
-                if weight == 1.0
-                else {row["outgoing"]: 1.0 - weight, row["incoming"]: weight}
-            )
+            held = {row["incoming"]: 1.0} if weight == 1.0 else {row["outgoing"]: 1.0 - weight, row["incoming"]: weight}
     return held
 
 

@@ -74,8 +74,5 @@ def impact_of_price(
             row["gap"] = (row["weight_after"] - row["weight_before"]) * (right - left)
         rows.append(row)
     before = [row["back_adjusted"] for row in splice_plain(market, chain)]
-    after = [
-        row["back_adjusted"]
-        for row in splice_plain(replace(market, prices=prices), replace(chain, rows=rows))
-    ]
+    after = [row["back_adjusted"] for row in splice_plain(replace(market, prices=prices), replace(chain, rows=rows))]
     return count_different(before, after, look_backs)

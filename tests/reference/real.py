@@ -97,11 +97,7 @@ def lay_panel_of(market: PlainMarket, plan: PlainPlan) -> Panel:
     for number, (contract, t) in enumerate(sorted(market.bars)):
         bar[t, market.contracts.index(contract)] = number
     last = np.array([market.last_trade[name] for name in market.contracts], dtype=np.int64)
-    notice = (
-        last
-        if market.first_notice is None
-        else np.array([market.first_notice[name] for name in market.contracts])
-    )
+    notice = last if market.first_notice is None else np.array([market.first_notice[name] for name in market.contracts])
     nothing = np.empty(0, dtype=np.int64)
     return Panel(
         market=declared,
@@ -138,9 +134,7 @@ def lay_real(market: PlainMarket, plan: PlainPlan) -> dict[int, RealChain]:
     for held in lay_rolls(panel, usable, settle, declared):
         chain = RealChain(None if held.start == NEVER else held.start)
         names = market.contracts
-        chain.decisions = [
-            (d.decided, names[d.outgoing], names[d.incoming], d.trigger) for d in held.decisions
-        ]
+        chain.decisions = [(d.decided, names[d.outgoing], names[d.incoming], d.trigger) for d in held.decisions]
         chain.rows = [
             {
                 "step": s.step,

@@ -67,9 +67,7 @@ def read_market(snapshot: pathlib.Path, declared: Market) -> tuple[PlainMarket, 
     days = Days(declared, {row["session"] for row in bars})
     place = {day: index for index, day in enumerate(days.sessions)}
     has_notice = any(row["first_notice"] is not None for row in terms)
-    cells: dict[str, dict[Cell, float]] = {
-        name: {} for name in ("settle", "volume", "open_interest", "clean_settle")
-    }
+    cells: dict[str, dict[Cell, float]] = {name: {} for name in ("settle", "volume", "open_interest", "clean_settle")}
     market = PlainMarket(
         sessions=days.sessions,
         contracts=[row["contract"] for row in terms],
@@ -79,9 +77,7 @@ def read_market(snapshot: pathlib.Path, declared: Market) -> tuple[PlainMarket, 
         bars=set(),
         usable=set(),
         last_trade={row["contract"]: days.index(row["last_trade"]) for row in terms},
-        first_notice={row["contract"]: days.index(row["first_notice"]) for row in terms}
-        if has_notice
-        else None,
+        first_notice={row["contract"]: days.index(row["first_notice"]) for row in terms} if has_notice else None,
         open_interest_lag=declared.open_interest_lag,
         prices=cells["clean_settle"],
     )

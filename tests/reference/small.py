@@ -59,9 +59,7 @@ def small_market(
         volume=cells(volume),
         open_interest=cells(open_interest),
         bars=set(reported) | set(fixed) | set(bars),
-        usable={
-            cell for cell in reported if cell not in unusable and cell not in fixed and cell not in masked
-        },
+        usable={cell for cell in reported if cell not in unusable and cell not in fixed and cell not in masked},
         last_trade=last_trade,
         first_notice=first_notice,
         open_interest_lag=lag,

@@ -39,9 +39,7 @@ def test_a_falling_and_a_rising_leg(tell: Callable[[PlainMarket], tuple[Rows, Ro
         IN: [None, None, None, None, 20.0, 25.0, 35.0, 40.0, 45.0],
     }
     ledger, rows = tell(small_market(settle, {OUT: 5, IN: 99}, bars=((IN, 0),)))
-    assert [(row["measured_on"], row["gap"], row["ratio"]) for row in ledger] == [
-        (4, -30.0, pytest.approx(0.4))
-    ]
+    assert [(row["measured_on"], row["gap"], row["ratio"]) for row in ledger] == [(4, -30.0, pytest.approx(0.4))]
     # Held: 50 - 100 in the outgoing and 45 - 20 in the incoming make -25 points; 50/100 x 45/20 makes 1.125.
     assert sum(row["change"] for row in rows[1:]) == pytest.approx(-25.0)
     assert rows[-1]["growth"] / 100 - 1 == pytest.approx(0.125)

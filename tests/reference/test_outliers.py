@@ -35,9 +35,7 @@ def test_the_scaled_mad_of_the_copper_data_is_the_published_one() -> None:
 
 @pytest.mark.parametrize("values", [CHEM, ROSNER, GOLD, np.array([1.0]), np.array([1.0, 5.0]), np.zeros(7)])
 def test_the_scaled_mad_is_scipys(values: np.ndarray) -> None:
-    assert scaled_mad(values) == pytest.approx(
-        stats.median_abs_deviation(values, scale=1 / MAD_SCALE), abs=1e-12
-    )
+    assert scaled_mad(values) == pytest.approx(stats.median_abs_deviation(values, scale=1 / MAD_SCALE), abs=1e-12)
 
 
 def test_the_scaled_mad_of_nothing_is_not_a_number() -> None:

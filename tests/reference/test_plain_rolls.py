@@ -83,9 +83,7 @@ def test_the_backstop_counts_from_the_named_day(before: str, effective: int) -> 
 
 def test_most_active_skips_and_a_tie_goes_to_the_nearest() -> None:
     settle = flat(6, 100, 105, 110, 115)
-    tied = small_market(
-        settle, FAR, volume={A: [5] * 6, B: [6, 1, 1, 1, 1, 1], C: [7] + [1] * 5, D: [7] + [1] * 5}
-    )
+    tied = small_market(settle, FAR, volume={A: [5] * 6, B: [6, 1, 1, 1, 1, 1], C: [7] + [1] * 5, D: [7] + [1] * 5})
     assert rolls(tied, PlainPlan("p", "volume", incoming="most active")) == [(0, 0, 1, A, C, "volume")]
     nothing = small_market(settle, {**FAR, A: 3})
     assert rolls(nothing, PlainPlan("p", "volume", incoming="most active")) == [(2, 2, 3, A, B, "backstop")]
@@ -98,9 +96,7 @@ def test_only_the_plans_months_are_held() -> None:
 
 def test_the_first_held_is_the_nearest_before_its_deadline_with_a_usable_settle() -> None:
     settle: Values = {A: [100] * 4, B: [None, None, 105, 105], C: [110] * 4}
-    chain = lay_plain(
-        small_market(settle, {**FAR, A: 0}, unusable=((C, 0),)), PlainPlan("p", "calendar")
-    ).chains[1]
+    chain = lay_plain(small_market(settle, {**FAR, A: 0}, unusable=((C, 0),)), PlainPlan("p", "calendar")).chains[1]
     assert (chain.start, chain.first) == (1, C)
 
 
@@ -156,9 +152,7 @@ def test_without_a_later_session_the_latest_earlier_one_measures() -> None:
 def test_a_stale_step_moves_all_that_is_left() -> None:
     market = small_market(flat(14, 100, 112), {**FAR, A: 8}, unusable=((A, 7), (A, 8)))
     rows = lay_plain(market, PlainPlan("p", "calendar", steps=4, backstop=1)).chains[1].rows
-    assert [
-        (r["measured_on"], r["effective_on"], r["weight_before"], r["weight_after"], r["gap"]) for r in rows
-    ] == [
+    assert [(r["measured_on"], r["effective_on"], r["weight_before"], r["weight_after"], r["gap"]) for r in rows] == [
         (3, 4, 0.0, 0.25, 3.0),
         (4, 5, 0.25, 0.5, 3.0),
         (5, 6, 0.5, 0.75, 3.0),
@@ -252,9 +246,7 @@ def test_a_second_nearby_that_has_moved_a_step_finishes_before_it_goes_on() -> N
         flat(16, 100, 105, 110, 115), {**FAR, A: 4, B: 9}, unusable=tuple((C, s) for s in (3, 4, 5, 6, 7, 8))
     )
     rows = lay_plain(market, plan).chains[2].rows
-    assert [
-        (r["decided_on"], r["measured_on"], r["effective_on"], r["outgoing"], r["incoming"]) for r in rows
-    ] == [
+    assert [(r["decided_on"], r["measured_on"], r["effective_on"], r["outgoing"], r["incoming"]) for r in rows] == [
         (2, 2, 3, B, C),
         (2, 9, 10, B, C),
         (7, 10, 11, C, D),

@@ -164,9 +164,7 @@ def test_declared_rules_give_every_published_date(product: str) -> None:
 def test_a_schedule_that_counts_a_holiday_more_says_so_with_no_business_days() -> None:
     """GC 2010-12: the schedule published in 2008 counts 2010-12-31 as a holiday."""
     marked = [
-        (row["product"], row["delivery"], row["date"])
-        for row in published()
-        if "no_business_days" in row["note"]
+        (row["product"], row["delivery"], row["date"]) for row in published() if "no_business_days" in row["note"]
     ]
     assert marked == [("GC", "2010-12", "2010-12-28")]
     plain = f"[last_trade]\n{RULES['third_last_bd']}"

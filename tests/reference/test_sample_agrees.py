@@ -40,9 +40,7 @@ def test_all_nine_markets_are_published(sample_store: pathlib.Path) -> None:
 
 
 @pytest.mark.parametrize("code", MARKETS)
-def test_published_rolls_and_series_are_those_of_the_plain_telling(
-    sample_store: pathlib.Path, code: str
-) -> None:
+def test_published_rolls_and_series_are_those_of_the_plain_telling(sample_store: pathlib.Path, code: str) -> None:
     snapshot = newest_snapshot(sample_store)
     desk = load_desk(SAMPLE_DESK)
     declared = desk.markets[code]
@@ -83,15 +81,10 @@ def test_a_repaired_settle_counts_the_sessions_whose_score_it_would_have_turned(
         for change in declared.rescaled:
             if row["session"] < change.before:
                 reported *= change.multiply
-        worst = max(
-            impact_of_price(market, chain, row["contract"], place, reported, desk.look_backs)
-            for chain in laid
-        )
+        worst = max(impact_of_price(market, chain, row["contract"], place, reported, desk.look_backs) for chain in laid)
         found[(row["contract"], row["session"], row["kind"])] = (worst, row["impact_sessions"])
     assert found, f"{code}: the sample has no repaired or masked settle"
-    assert {key: told for key, (_, told) in found.items()} == {
-        key: worst for key, (worst, _) in found.items()
-    }
+    assert {key: told for key, (_, told) in found.items()} == {key: worst for key, (worst, _) in found.items()}
     assert sum(worst for worst, _ in found.values()) > 0
 
 
@@ -100,8 +93,6 @@ def test_the_catalog_shows_the_rolls_that_were_told_again(sample_store: pathlib.
     snapshot = newest_snapshot(sample_store)
     with duckdb.connect(str(sample_store / "catalog.duckdb"), read_only=True) as connection:
         shown = connection.execute(f"select {', '.join(LEDGER)} from rolls").fetchall()
-    in_files = [
-        tuple(row[name] for name in LEDGER) for code in MARKETS for row in read_rows(snapshot, "rolls", code)
-    ]
+    in_files = [tuple(row[name] for name in LEDGER) for code in MARKETS for row in read_rows(snapshot, "rolls", code)]
     assert sorted(shown, key=str) == sorted(in_files, key=str)
     assert len(shown) > 500

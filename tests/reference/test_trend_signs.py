@@ -71,9 +71,7 @@ def test_real_and_plain_count_the_same_sessions_for_a_gap_left_in() -> None:
             values.append(None if chance.random() < 0.01 else walk)
         effective, gap = chance.randint(1, 149), chance.choice([-5.0, -0.5, 0.5, 3.0])
         expected = plain_trend.impact_of_gap(values, effective, gap)
-        real = impact_of_gap(
-            np.array([np.nan if v is None else v for v in values]), effective, gap, LOOK_BACKS
-        )
+        real = impact_of_gap(np.array([np.nan if v is None else v for v in values]), effective, gap, LOOK_BACKS)
         assert real == expected
         turned += expected
     assert turned > 100

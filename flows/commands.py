@@ -6,6 +6,7 @@ frame around a command (`shell.py`), any computation. Heavy modules are imported
 
 import datetime
 import re
+from collections.abc import Sized
 from typing import TYPE_CHECKING, Any
 
 import click
@@ -123,11 +124,12 @@ def desk(asked: Asked, market: str | None, years: str | None) -> Exit:
             say_json({"markets": list(declared.markets), "layouts": list(declared.layouts), "mistakes": []})
             return Exit.DONE
         kinds = ("market", "layout", "repair", "waiver")
-        parts = (declared.markets, declared.layouts, declared.repairs, declared.waivers)
+        parts: tuple[Sized, ...] = (declared.markets, declared.layouts, declared.repairs, declared.waivers)
         counts = ", ".join(
             f"{len(part)} {kind}{'' if len(part) == 1 else 's'}" for kind, part in zip(kinds, parts, strict=True)
         )
-        say([f"{declared.path}: {counts}; no mistakes", ""])
+        when = f"{declared.schedule.cron} {declared.schedule.timezone}"
+        say([f"{declared.path}: {counts}; no mistakes", f"runs on cron {when}, by {declared.run.workers}", ""])
         rows = [(code, m.name, m.exchange, m.currency, ", ".join(m.plans)) for code, m in declared.markets.items()]
         say_table(("market", "name", "exchange", "currency", "plans"), rows)
         return Exit.DONE

@@ -110,7 +110,8 @@ def build_market(inputs: Inputs) -> Built:
     findings += _tell_stale(panel, clean, inputs.quality)
     findings += check_shocks(panel, clean.settle)
     findings += check_gaps(panel)
-    laid = lay_plans(panel, clean)
+    traded = clean.traded(panel)
+    laid = lay_plans(traded, clean)
     for one in laid:
         findings += check_rolls(panel, one.name, market.plans[one.name], one.held)
     findings = _weigh(findings, panel, clean, laid, inputs.look_backs)
@@ -120,7 +121,7 @@ def build_market(inputs: Inputs) -> Built:
     tables = {
         "bars": bars_table(panel, arrived, files, clean),
         "series": series_table(panel, clean, [(o.name, o.held, o.series) for o in laid], counts),
-        "rolls": rolls_table(panel, [(o.name, o.held, i) for o, i in zip(laid, impacts, strict=True)]),
+        "rolls": rolls_table(traded, [(o.name, o.held, i) for o, i in zip(laid, impacts, strict=True)]),
         "findings": findings_table(findings),
         "rejects": rejects_table(market.code, files, is_old),
         "files": files_table(market.code, files, parsed),

@@ -5,7 +5,7 @@ belong here: the evidence against it (`checks/`). Nothing reported is ever overw
 """
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Annotated
 
 import numpy as np
@@ -68,6 +68,11 @@ class Clean:
         """Clean settles, (T, N)."""
         values: np.ndarray = self.prices[PRICE_FIELDS.index("settle")]
         return values
+
+    def traded(self, panel: Panel) -> Panel:
+        """The panel with these values in it: what a plan's triggers look at."""
+        values = np.concatenate([self.prices, self.volume[None], self.open_interest[None]])
+        return replace(panel, values=values)
 
 
 def clean_panel(panel: Panel, bars: Bars, repairs: tuple[DeclaredRepair, ...], quality: Quality) -> Clean:

@@ -13,7 +13,7 @@ import numpy as np
 from contracts.deliveries import delivery_of
 from contracts.markets import Incoming, Plan, Trigger
 from contracts.panel import Panel, deadlines
-from contracts.sessions import session_index
+from contracts.sessions import day_number, session_index
 
 NEVER = -1
 BACKSTOP = "backstop"
@@ -284,7 +284,13 @@ def _lay_first(market: _Market, panel: Panel) -> Held:
         contract, at = rows[-1].incoming, rows[-1].effective
     done = {decision.outgoing for decision in held.decisions if decision.trigger == FORCED}
     due = {outgoing for outgoing, effective in market.forces.items() if effective - market.plan.delay < market.length}
-    held.unused = [panel.contracts[c] for c in sorted(due - done)]
+    # A contract that never arrived cannot have been left either.
+    unknown = {
+        force.outgoing
+        for force in market.plan.force
+        if force.outgoing not in panel.contracts and day_number(force.effective) <= panel.sessions[-1]
+    }
+    held.unused = sorted({panel.contracts[c] for c in due - done} | unknown)
     if start != NEVER:
         _fill(held, first)
     return held

@@ -5,10 +5,13 @@ import pytest
 
 from contracts.errors import IdentityError
 from contracts.markets import parse_market
+from contracts.quality import Quality
+from contracts.repairs import DeclaredRepair, clean_panel
 from contracts.rolls import Held, lay_rolls
+from contracts.sessions import day_of
 from contracts.splice import Series, carry_forward, check_identities, splice
 from contracts.trend import impact_of_gap, impact_of_price, sign_score
-from tests.contracts.small import MARKET, make_panel, weekdays
+from tests.contracts.small import MARKET, make_bars_of, make_panel, weekdays
 
 CONTRACTS = ("NWHT-2024-03", "NWHT-2024-05")
 DAYS = weekdays("2024-01-02", 8)
@@ -114,3 +117,21 @@ def test_impact_counts_the_sessions_whose_score_would_differ() -> None:
     assert impact_of_price(prices, 10, 0.1, (1, 2)) == 0
     assert impact_of_gap(prices, 10, 5.0, (1, 2)) == 0
     assert impact_of_gap(prices, 10, -5.0, (1, 2)) == 2
+
+
+def test_declared_repair_of_a_volume_reaches_the_trigger() -> None:
+    """The incoming's volume of 80 on session 4 was typed as 8; corrected, the roll is decided there."""
+    market = parse_market(MARKET.format(extra="") + '[plans.tested]\ntrigger = "volume"\n', "markets/nwht.toml")
+    volume = VOLUME.copy()
+    volume[4, 1] = 8
+    panel = make_panel(market, CONTRACTS, DAYS, SETTLE, volume=volume)
+    repair = DeclaredRepair(
+        contract=CONTRACTS[1], session=day_of(DAYS[4]), field="volume", reported=8, corrected=80,
+        reason="a figure was lost", by="desk", on=day_of(DAYS[7]),
+    )  # fmt: skip
+    decided = []
+    for repairs in ((), (repair,)):
+        clean = clean_panel(panel, make_bars_of(panel), repairs, Quality())
+        (held,) = lay_rolls(clean.traded(panel), clean.usable, clean.settle, market.plans["tested"])
+        decided.append(held.steps[0].decision.decided)
+    assert decided == [5, 4]

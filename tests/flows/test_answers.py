@@ -39,7 +39,8 @@ def test_desk_as_json(published: Path, run: Run) -> None:
 def test_desk_as_text_counts_what_is_declared(published: Path, run: Run) -> None:
     lines = run("desk", "--desk", published).stdout.splitlines()
     assert lines[0].endswith("2 markets, 1 layout, 0 repairs, 0 waivers; no mistakes")
-    assert lines[3].split() == ["TINA", "Northmark", "TINA", "XNMK", "EUR", "by_volume"]
+    assert lines[1] == "runs on cron 30 19 * * 1-5 UTC, by threads"
+    assert lines[4].split() == ["TINA", "Northmark", "TINA", "XNMK", "EUR", "by_volume"]
 
 
 def test_desk_of_a_market_as_json(published: Path, run: Run) -> None:

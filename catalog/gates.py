@@ -6,6 +6,7 @@ Belongs here: judging a build's facts by the desk's gates. Does not belong here:
 import datetime
 from typing import Any
 
+from contracts.build import RECENT_SESSIONS
 from contracts.markets import Market
 from contracts.quality import Gates
 from contracts.sessions import day_number, market_days
@@ -22,10 +23,10 @@ def judge_market(market: Market, facts: dict[str, Any], gates: Gates, data_date:
     if rows and rejected / rows > gates.rejected_share:
         reasons.append(f"{rejected} of {rows} rows were rejected, more than {gates.rejected_share:.2%}")
     for name, plan in facts["plans"].items():
-        without, recent = int(plan["recent_without_price"]), int(plan["recent"])
-        if without / recent > gates.carried_share:
+        without = int(plan["recent_without_price"])
+        if without / RECENT_SESSIONS > gates.carried_share:
             reasons.append(
-                f"plan {name} has no price of its own on {without} of the last {recent} sessions, "
+                f"plan {name} has no price of its own on {without} of the last {RECENT_SESSIONS} sessions, "
                 f"more than {gates.carried_share:.2%}"
             )
     if not facts["plans"]:

@@ -280,7 +280,6 @@ def _facts(
             "carried": int((status == 2).sum()),
             "missing": int((status == 3).sum()),
             "recent_without_price": int((status[-RECENT_SESSIONS:] >= 2).sum()),
-            "recent": min(len(status), RECENT_SESSIONS),
         }
     return {
         "rows": sum(rows.row_count for rows in current),

@@ -33,8 +33,13 @@ class Quality(Declared):
 class Gates(Declared):
     """From where on a market is held back."""
 
-    rejected_share: Share = 0.01
-    carried_share: Share = 0.05
+    # Largest share of a market's rows that may be rejected.
+    rejected_share: Share = 0.05
+    # Largest share of the last 60 sessions on which a plan may carry a price or lack one.
+    carried_share: Share = 0.1
+    # Most unwaived block findings in the last 60 sessions of a held contract.
     block_findings: Annotated[int, Field(ge=0)] = 0
-    silent_sessions: Annotated[int, Field(ge=0)] = 5
+    # Most sessions without a bar, up to the newest session of any market.
+    silent_sessions: Annotated[int, Field(ge=0)] = 10
+    # Most rows a file may lack against an earlier version of itself.
     lost_rows: Annotated[int, Field(ge=0)] = 0

@@ -30,7 +30,9 @@ def check_rolls(panel: Panel, name: str, plan: Plan, held: Held) -> list[Finding
         found.append(teller.tell(Kind.FORCE_UNUSED, Severity.REVIEW, contract, day, text))
     if held.start == NEVER:
         text = "no contract can ever be held"
-        found.append(teller.tell(Kind.ROLL_UNMEASURED, Severity.BLOCK, None, None, text))
+        # A market may well list too few contracts for a farther nearby; without the first there is no series.
+        severity = Severity.BLOCK if held.nearby == 1 else Severity.REVIEW
+        found.append(teller.tell(Kind.ROLL_UNMEASURED, severity, None, None, text))
     return found
 
 

@@ -74,17 +74,18 @@ class Night:
     data_date: str | None = None
 
 
-def begin(desk_path: Path, raw: Path | None, store: Path | None, command: str) -> Night:
+def begin(desk_path: Path, raw: Path | None, store: Path | None, command: str, rehash: bool = False) -> Night:
     """Load the desk, take in what arrived, and say which markets have to be built.
 
-    The caller holds the store's write lock. Raises DeskError before anything is touched, UsageError for a
+    With `rehash` every raw file is read, and not only those whose size or time changed. The caller holds the
+    store's write lock. Raises DeskError before anything is touched, UsageError for a
     raw folder that is not there while the archive is empty.
     """
     started = datetime.datetime.now(datetime.UTC).isoformat()
     desk = load_desk(desk_path)
     raw_path, places = (raw or desk.raw).resolve(), Places((store or desk.store).resolve())
     clean_leftovers(places)
-    intake = take_in(raw_path, places)
+    intake = take_in(raw_path, places, rehash)
     if not intake.arrivals:
         raise UsageError(
             f"{raw_path}: no raw file there, and none in the archive of {places.store}; name another with --raw"

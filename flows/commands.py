@@ -7,6 +7,7 @@ frame around a command (`shell.py`), any computation. Heavy modules are imported
 import datetime
 import re
 from collections.abc import Sized
+from dataclasses import replace
 from typing import TYPE_CHECKING, Any
 
 import click
@@ -47,16 +48,22 @@ _jobs = click.option(
 )
 
 
+_rehash = click.option(
+    "--rehash", is_flag=True, help="Read every raw file again, and not only those whose size or time changed."
+)
+
+
 @command(main, "nightly", "ropewalk nightly --desk /srv/desk")
 @_jobs
-def nightly(asked: Asked, jobs: int | None) -> Exit:
+@_rehash
+def nightly(asked: Asked, jobs: int | None, rehash: bool) -> Exit:
     """Run one night under Prefect: take in, build, check, publish.
 
     Reports to the Prefect API that Prefect's settings name. Where none is named, an own server is started for
     the length of the run; its records stay in Prefect's home folder. Where the API cannot be reached, the
     same work is done unwatched.
     """
-    where = _checked(asked)
+    where = replace(_checked(asked), rehash=rehash)
     from flows.nightly import run_watched
 
     told = run_watched(where, jobs)
@@ -72,13 +79,14 @@ def nightly(asked: Asked, jobs: int | None) -> Exit:
 
 @command(main, "build", "ropewalk build --desk /srv/desk --jobs 4")
 @_jobs
-def build(asked: Asked, jobs: int | None) -> Exit:
+@_rehash
+def build(asked: Asked, jobs: int | None, rehash: bool) -> Exit:
     """Do the work of one night without a scheduler.
 
     Takes in, builds, checks, publishes. What carries the markets is declared in desk.toml: [run] workers =
     "threads", "processes" or "dask".
     """
-    where = _checked(asked)
+    where = replace(_checked(asked), rehash=rehash)
     from flows.work import pool_builder, run_night
 
     return _tell_summary(run_night(where, "build", pool_builder(jobs)), asked.as_json)

@@ -16,11 +16,15 @@ DEFAULT_STORE = "published"
 
 @dataclass(frozen=True)
 class Where:
-    """The folders of one command, absolute. `raw` is None where the desk's own declaration counts."""
+    """The folders of one command, absolute. `raw` is None where the desk's own declaration counts.
+
+    `rehash` asks for every raw file to be read again, and not only those whose size or time changed.
+    """
 
     desk: Path
     raw: Path | None
     store: Path
+    rehash: bool = False
 
 
 def find_where(desk: str | None, raw: str | None, store: str | None) -> Where:

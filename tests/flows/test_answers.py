@@ -1,6 +1,7 @@
 """What the reading commands print, as text and as JSON."""
 
 import json
+import os
 import re
 from pathlib import Path
 
@@ -246,3 +247,15 @@ def test_sql_without_a_query_says_how_to_open_the_catalog(published: Path, run: 
     assert result.exit_code == 0
     assert str(published / "published" / "catalog.duckdb") in result.stdout
     assert "read_only" in result.stdout
+
+
+def test_rehash_sees_a_file_that_changed_behind_its_size_and_time(published: Path, run: Run) -> None:
+    file = published / "raw" / "TINA_2024_06.csv"
+    before = file.stat()
+    text = file.read_text()
+    assert text.count(",5000,") > 1
+    file.write_text(text.replace(",5000,", ",5001,", 1))
+    os.utime(file, ns=(before.st_atime_ns, before.st_mtime_ns))
+    assert run("build", "--desk", published, "--json", "--rehash").exit_code == 0
+    told = json.loads(run("findings", "--desk", published, "--kind", "restated", "--json").stdout)
+    assert [row["contract"] for row in told["findings"]] == ["TINA-2024-06"]

@@ -86,6 +86,7 @@ _ALL = (
     Column("waived_until", _DAY, "day", "last day of the waiver that covers the finding"),
     Column("message", _TEXT, "", "the finding in a sentence"),
     Column("text", _TEXT, "", "the raw line"),
+    Column("offset", _BIG, "byte", "byte of the unpacked text at which the row begins, the first byte is 0"),
     Column("reason", _TEXT, "", "why the row was rejected, or the market held back"),
     Column("path", _TEXT, "", "path of the raw file below the raw folder"),
     Column("bytes", _BIG, "bytes", "size of the raw file as it arrived"),

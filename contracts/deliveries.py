@@ -6,10 +6,20 @@ that month stops trading (`sessions.py`).
 
 import re
 from dataclasses import dataclass
+from typing import TypeVar
+
+import numpy as np
 
 # Letters of the twelve delivery months: common practice, no source.
 MONTH_CODES = "FGHJKMNQUVXZ"
 MONTH_NAMES = ("JAN", "FEB", "MAR", "APR", "MAY", "JUN", "JUL", "AUG", "SEP", "OCT", "NOV", "DEC")
+_LONG_MONTH_NAMES = (
+    "JANUARY", "FEBRUARY", "MARCH", "APRIL", "MAY", "JUNE", "JULY", "AUGUST", "SEPTEMBER", "OCTOBER", "NOVEMBER",
+    "DECEMBER",
+)  # fmt: skip
+
+# A whole number, or an array of them.
+Whole = TypeVar("Whole", int, np.ndarray)
 
 _DELIVERY = re.compile(r"(\d{4})-(0[1-9]|1[0-2])")
 
@@ -39,14 +49,15 @@ def parse_delivery(text: str) -> Delivery:
 
 
 def parse_month(text: str) -> int:
-    """Read a month given as a number (`3`, `03`), a code (`H`) or a name (`Mar`); raises ValueError."""
+    """Read a month given as a number (`3`, `03`), a code (`H`) or a name (`Mar`, `March`); raises ValueError."""
     bare = text.strip().upper()
     if bare.isdecimal() and bare.isascii() and 1 <= int(bare) <= 12:
         return int(bare)
     if len(bare) == 1 and bare in MONTH_CODES:
         return MONTH_CODES.index(bare) + 1
-    if bare in MONTH_NAMES:
-        return MONTH_NAMES.index(bare) + 1
+    for names in (MONTH_NAMES, _LONG_MONTH_NAMES):
+        if bare in names:
+            return names.index(bare) + 1
     raise ValueError(f"seen {text!r}; expected a month: 1 to 12, a code of {MONTH_CODES}, or a name such as MAR")
 
 
@@ -58,6 +69,17 @@ def parse_year(text: str, window: int) -> int:
     if bare.isascii() and bare.isdecimal() and len(bare) == 2:
         return window + (int(bare) - window) % 100
     raise ValueError(f"seen {text!r}; expected a year of four or two digits")
+
+
+def year_of_digit(digit: Whole, month: Whole, session_month: Whole) -> Whole:
+    """The delivery year meant by its last digit in a row of a session.
+
+    The first year that ends in `digit` and whose delivery `month` (1 to 12) is not before the month that
+    precedes the session's, since a contract may be printed for a few days after its last. `session_month` is
+    the session's year * 12 + month - 1. Numbers or arrays of them.
+    """
+    earliest = -((month - session_month) // 12)
+    return earliest + (digit - earliest) % 10
 
 
 def contract_name(market: str, delivery: Delivery) -> str:

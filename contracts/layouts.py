@@ -4,8 +4,10 @@ Belongs here: which files a layout claims and how it says their text is written.
 reading them (`intake.py`).
 """
 
+import codecs
 import datetime
 import re
+from dataclasses import dataclass
 from typing import Annotated, Any
 
 from pydantic import AfterValidator, BeforeValidator, Field
@@ -15,6 +17,11 @@ from contracts.deliveries import Delivery, contract_name, parse_month, parse_yea
 from contracts.errors import Mistake
 
 _GROUPS = frozenset({"market", "year", "month", "month_code"})
+# Encodings of more than one byte a character in which a line end is still found by its own bytes.
+_WIDE_ENCODINGS = frozenset({"utf-8", "utf-8-sig", "utf-16", "utf-16-le", "utf-16-be"})
+MARKET_CODE = "a market code of A-Z and 0-9, at most 12"
+# Formats without a mark between two figures.
+_COMPACT = re.compile(r"%[a-zA-Z]%[a-zA-Z]")
 PRICE_FIELDS = ("open", "high", "low", "settle")
 BAR_FIELDS = (*PRICE_FIELDS, "volume", "open_interest")
 
@@ -31,10 +38,26 @@ def _expression(value: str) -> str:
 
 
 def _encoding(value: str) -> str:
+    expected = "an encoding such as 'utf-8', 'utf-16', 'latin-1' or 'cp1252'"
     try:
-        "".encode(value)
-    except LookupError:
-        raise ValueError(f"seen {value!r}; expected an encoding such as 'utf-8' or 'cp1252'") from None
+        name = codecs.lookup(value).name
+        # One character a byte, and the first 128 as in ASCII.
+        table = bytes(range(256)).decode(name, errors="replace")
+        is_narrow = len(table) == 256 and table[:128].encode("ascii") == bytes(range(128))
+    except (LookupError, ValueError):
+        is_narrow, name = False, ""
+    if not is_narrow and name not in _WIDE_ENCODINGS:
+        raise ValueError(f"seen {value!r}; expected {expected}")
+    return value
+
+
+def _not_rows(value: str) -> str:
+    try:
+        matches_all = re.match(value, "") is not None
+    except re.error as error:
+        raise ValueError(f"seen {value!r} ({error}); expected a regular expression") from None
+    if matches_all:
+        raise ValueError(f"seen {value!r}, which matches every line; expected what footers and notes begin with")
     return value
 
 
@@ -80,10 +103,15 @@ class Headers(Declared):
     market: str | None = None
     year: str | None = None
     month: str | None = None
+    contract: str | None = None
 
 
 class Layout(Declared):
-    """How the files of one kind are named and written."""
+    """How the files of one kind are named and written.
+
+    `not_rows` is an expression that the beginnings of footers and notes below the header match; `contract_code`
+    one that a whole cell of the column `contract` matches, with groups as in `files`.
+    """
 
     files: Annotated[str, AfterValidator(_expression)]
     delimiter: OneCharacter = ","
@@ -96,6 +124,8 @@ class Layout(Declared):
     comment: Annotated[str, Field(max_length=8)] = ""
     price_scale: Annotated[float, BeforeValidator(_scale), Field(gt=0, allow_inf_nan=False)] = 1.0
     zero_is_missing: Annotated[tuple[str, ...], BeforeValidator(_tuple), AfterValidator(_fields)] = ()
+    not_rows: Annotated[str | None, AfterValidator(_not_rows)] = None
+    contract_code: Annotated[str | None, AfterValidator(_expression)] = None
     year_window: Annotated[int, Field(ge=1800, le=2100)] = 1970
     columns: Headers
 
@@ -125,11 +155,87 @@ def claim_file(layout: Layout, path: str) -> Claim | None:
         return None
     groups = {name: text for name, text in match.groupdict().items() if text is not None}
     market = groups.get("market")
-    if market is not None and re.fullmatch(CODE, market) is None:
-        raise ValueError(f"{path}: seen the market {market!r}; expected a market code of A-Z and 0-9, at most 12")
+    if market is not None:
+        try:
+            read_market(market)
+        except ValueError as error:
+            raise ValueError(f"{path}: {error}") from None
     year = parse_year(groups["year"], layout.year_window) if "year" in groups else None
     month_text = groups.get("month", groups.get("month_code"))
     return Claim(market=market, year=year, month=parse_month(month_text) if month_text is not None else None)
+
+
+def read_market(text: str) -> str:
+    """The market code that a text is; raises ValueError where it is none."""
+    if re.fullmatch(CODE, text) is None:
+        raise ValueError(f"seen the market {text!r}; expected {MARKET_CODE}")
+    return text
+
+
+@dataclass(frozen=True)
+class ContractCode:
+    """What a contract's code in a cell says: market, year or only its last digit, month; None where it does not."""
+
+    market: str | None
+    year: int | None
+    digit: int | None
+    month: int | None
+
+
+def read_code(layout: Layout, text: str) -> ContractCode:
+    """Read a trimmed cell of the column `contract`; raises ValueError where it is not as the layout says."""
+    match = re.fullmatch(layout.contract_code or "", text, re.IGNORECASE)
+    groups = match.groupdict() if match else {}
+    if match is None or None in groups.values():
+        raise ValueError(f"seen {text!r}; expected a contract written as {layout.contract_code}")
+    market = read_market(groups["market"].upper()) if "market" in groups else None
+    year, month = groups.get("year"), groups.get("month", groups.get("month_code"))
+    is_digit = year is not None and re.fullmatch("[0-9]", year) is not None
+    return ContractCode(
+        market,
+        parse_year(year, layout.year_window) if year is not None and not is_digit else None,
+        int(year) if year is not None and is_digit else None,
+        parse_month(month) if month is not None else None,
+    )
+
+
+def market_in_code(layout: Layout, text: str) -> str:
+    """The market that a cell of the column `contract` names; empty where it cannot be read or names none."""
+    try:
+        return read_code(layout, text.strip()).market or ""
+    except ValueError:
+        return ""
+
+
+def place_columns(columns: Headers, header: list[str]) -> dict[str, int]:
+    """Where each declared column stands among trimmed header names; raises ValueError unless each stands there once."""
+    places: dict[str, int] = {}
+    for name, wanted in columns:
+        if wanted is None:
+            continue
+        count = header.count(wanted)
+        if count != 1:
+            there = "".join(
+                mark if mark.isprintable() else "\N{REPLACEMENT CHARACTER}" for mark in ", ".join(header)[:200]
+            )
+            seen = "twice" if count else f"not among {there}"
+            raise ValueError(f"column {wanted!r} ({name}) is {seen}; expected once")
+        places[name] = header.index(wanted)
+    return places
+
+
+def groups_of(expression: str | None) -> frozenset[str]:
+    """The named groups of a declared expression."""
+    return frozenset(re.compile(expression or "").groupindex)
+
+
+def read_day(text: str, date_format: str) -> datetime.date:
+    """Read a date; raises ValueError, also where a figure is missing that the format has no mark to notice it by."""
+    day = datetime.datetime.strptime(text, date_format)
+    # Of %Y%m%d alone, 2024112 would be a day too.
+    if _COMPACT.search(date_format) and day.strftime(date_format).casefold() != text.casefold():
+        raise ValueError(f"seen {text!r}; expected a date as {date_format}")
+    return day.date()
 
 
 def parse_layout(text: str, file: str) -> Layout:
@@ -144,30 +250,35 @@ def read_layout(text: str, file: str) -> tuple[Layout | None, list[Mistake]]:
 
 
 def _inconsistencies(layout: Layout, text: str, file: str) -> list[Mistake]:
-    groups = set(re.compile(layout.files).groupindex)
+    groups, coded = groups_of(layout.files), groups_of(layout.contract_code)
     found: list[Mistake] = []
 
     def add(key: str, seen: str, expected: str) -> None:
         found.append(Mistake(file, key, seen, expected, line_of(text, tuple(key.split(".")))))
 
-    for name, given in (
-        ("market", {"market"} & groups),
-        ("year", {"year"} & groups),
-        ("month", {"month", "month_code"} & groups),
-    ):
+    if layout.contract_code is not None and layout.columns.contract is None:
+        add("contract_code", "no column 'contract'", "a header for it in [columns]")
+    if layout.contract_code is None and layout.columns.contract is not None:
+        add("columns.contract", "no key 'contract_code'", "an expression that says how its cells are read")
+    for name, names in (("market", {"market"}), ("year", {"year"}), ("month", {"month", "month_code"})):
         column = getattr(layout.columns, name)
-        if not given and column is None:
+        if not names & groups and not names & coded and column is None:
             add(
                 "files",
                 f"no group {name!r} and no column for it",
                 f"one of the two, so that the {name} of a row is known",
             )
-        if given and column is not None:
+        if names & groups and column is not None:
             add(f"columns.{name}", f"{name} both in files and in a column", "one of the two")
+        if names & coded and (names & groups or column is not None):
+            other = "files" if names & groups else "a column of its own"
+            add("contract_code", f"{name} both in contract_code and in {other}", "one of the two")
     headers = [header for header in layout.columns.model_dump().values() if header is not None]
     twice = sorted({header for header in headers if headers.count(header) > 1})
     if twice:
         add("columns", f"the header {twice[0]!r} twice", "a header of its own for each column")
+    if layout.delimiter in '"\r\n':
+        add("delimiter", repr(layout.delimiter), "a mark that is neither a quotation mark nor a line end")
     marks = [mark for mark in (layout.decimal, layout.thousands) if mark]
     if len(set(marks)) < len(marks) or layout.decimal == layout.delimiter:
         add(

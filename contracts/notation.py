@@ -14,8 +14,14 @@ import pyarrow.compute as pc
 from contracts.errors import NotationError
 from contracts.markets import PriceNotation
 
-# Dashes that printed tables use for a minus: hyphen, minus sign, en dash, em dash (AP settlement table, 2018-05-21).
-_MINUS = "-\N{MINUS SIGN}\N{EN DASH}\N{EM DASH}"
+# Dashes that printed tables use for a minus: hyphen, minus sign, en dash, em dash (AP settlement table, 2018-05-21);
+# the other hyphens and dashes that print alike: common practice, no source.
+_MINUS = "-\N{MINUS SIGN}\N{EN DASH}\N{EM DASH}\N{HYPHEN}\N{NON-BREAKING HYPHEN}\N{FIGURE DASH}"
+# A reader cannot tell these apart, so a layout that declares one of a kind means all of it.
+_ALIKE = (
+    " \N{NO-BREAK SPACE}\N{NARROW NO-BREAK SPACE}\N{THIN SPACE}",
+    "'\N{RIGHT SINGLE QUOTATION MARK}",
+)
 _FRACTIONS = {
     "\N{VULGAR FRACTION ONE QUARTER}": 0.25, "\N{VULGAR FRACTION ONE HALF}": 0.5,
     "\N{VULGAR FRACTION THREE QUARTERS}": 0.75, "\N{VULGAR FRACTION ONE EIGHTH}": 0.125,
@@ -24,15 +30,21 @@ _FRACTIONS = {
 }  # fmt: skip
 # Third digit of a price in 32nds: quarters of a 32nd, the last figure of 0, 2.5, 5 and 7.5 cut off; plus is a half.
 _QUARTERS = {"": 0.0, "0": 0.0, "2": 0.25, "5": 0.5, "7": 0.75, "+": 0.5}
-_PARTED = re.compile(r"(\d+)['\-](\d+)(\+?)")
+_PARTED = re.compile(r"([0-9]{1,9})['\N{RIGHT SINGLE QUOTATION MARK}\-]([0-9]+)(\+?)")
 
 
 @lru_cache(maxsize=64)
 def _decimal_pattern(decimal: str, thousands: str) -> re.Pattern[str]:
-    whole = r"\d+" if not thousands else rf"(?:\d{{1,3}}(?:{re.escape(thousands)}\d{{3}})+|\d+)"
+    mark = f"[{re.escape(thousands_marks(thousands))}]" if thousands else ""
+    whole = rf"(?:[0-9]{{1,3}}(?:{mark}[0-9]{{3}})+|[0-9]+)" if thousands else "[0-9]+"
     point = re.escape(decimal)
     fractions = "".join(_FRACTIONS)
-    return re.compile(rf"({whole})?(?:{point}(\d*))?([eE][+\-]?\d{{1,3}})?([{fractions}])?")
+    return re.compile(rf"({whole})?(?:{point}([0-9]*))?([eE][+\-]?[0-9]{{1,3}})?(?:\s?([{fractions}]))?")
+
+
+def thousands_marks(mark: str) -> str:
+    """The marks that a declared thousands mark stands for: a blank means every blank, an apostrophe both."""
+    return next((alike for alike in _ALIKE if mark in alike), mark)
 
 
 def parse_price(text: str, notation: str, decimal: str = ".", thousands: str = "") -> float:
@@ -70,8 +82,11 @@ def _decimal(bare: str, decimal: str, thousands: str) -> float | None:
         return None
     if fraction and (part is not None or exponent):
         return None
-    digits = (whole or "0").replace(thousands, "") if thousands else whole or "0"
-    return float(f"{digits}.{part or '0'}{exponent or ''}") + _FRACTIONS.get(fraction or "", 0.0)
+    digits = re.sub("[^0-9]", "", whole or "0")
+    value = float(f"{digits}.{part or '0'}{exponent or ''}") + _FRACTIONS.get(fraction or "", 0.0)
+    # 1e-400 is no zero, only too small for a double.
+    is_lost = value == 0.0 and exponent is not None and (digits + (part or "")).strip("0") != ""
+    return None if is_lost else value
 
 
 def _parted(bare: str, kind: PriceNotation) -> float | None:
@@ -139,13 +154,24 @@ def _plain_numbers(bare: pa.Array, notation: str, decimal: str, thousands: str) 
     """The column read in one go where all of it is plain decimal digits; None where a text needs a closer look."""
     if notation != PriceNotation.DECIMAL:
         return None
+    marks = thousands_marks(thousands) if thousands else ""
+    grouped = f"[0-9]{{1,3}}(?:[{re.escape(marks)}][0-9]{{3}})+|" if marks else ""
+    plain = rf"^-?(?:{grouped}[0-9]{{1,300}})(?:{re.escape(decimal)}[0-9]*)?$"
+    if not pc.all(pc.match_substring_regex(bare, plain), min_count=0).as_py():
+        return None
+    for mark in marks:
+        bare = pc.replace_substring(bare, mark, "")
     if decimal != ".":
-        if pc.any(pc.match_substring(bare, ".")).as_py():
-            return None
         bare = pc.replace_substring(bare, decimal, ".")
-    if thousands and pc.any(pc.match_substring(bare, thousands)).as_py():
-        return None
-    if not pc.all(pc.match_substring_regex(bare, r"^-?\d+(\.\d*)?$"), min_count=0).as_py():
-        return None
     read = pc.cast(bare, pa.float64())
     return np.asarray(read.to_numpy(zero_copy_only=False), dtype=np.float64)
+
+
+def scale_prices(values: np.ndarray, factor: float) -> np.ndarray:
+    """Prices times a factor; a factor such as 0.01 divides by 100, so that decimal prices stay the nearest doubles."""
+    inverse = round(1.0 / factor)
+    is_inverse = factor < 1.0 and abs(inverse * factor - 1.0) < 1e-12
+    scaled = values / inverse if is_inverse else values * factor
+    # Ten decimals of a number below 100,000 are still exact, so that rounding gives the nearest double.
+    with np.errstate(invalid="ignore"):
+        return np.where(np.abs(scaled) < 1e5, np.round(scaled, 10), scaled)

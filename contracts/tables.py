@@ -77,7 +77,7 @@ REJECTS = Table(
     "rejects",
     "rows that could not be read, whole",
     ("file", "line"),
-    ("market", "contract", "file", "line", "text", "reason"),
+    ("market", "contract", "file", "line", "text", "reason", "offset"),
 )
 
 FILES = Table(

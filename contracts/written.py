@@ -20,6 +20,7 @@ from contracts.rolls import NEVER, Held
 from contracts.sessions import day_of, first_notice_day, last_trade_day
 from contracts.splice import MISSING, STATUS_NAMES, Series, mix
 from contracts.tables import BARS, FILES, REJECTS, ROLLS, SERIES, TERMS, make_table
+from contracts.unpack import Reject
 
 
 def _days(numbers: np.ndarray) -> pa.Array:
@@ -171,19 +172,21 @@ def _count(value: float) -> int | None:
 
 def rejects_table(market: str, files: list[FileRows], is_old: list[bool]) -> pa.Table:
     """Rejected rows of the newest version of every file."""
-    seen: dict[tuple[str, int], tuple[str | None, str, str]] = {}
+    seen: dict[tuple[str, int], Reject] = {}
     for rows, old in zip(files, is_old, strict=True):
         for reject in () if old else rows.rejects:
-            seen.setdefault((rows.raw.file, reject.line), (reject.contract, reject.text, reject.reason))
+            seen.setdefault((rows.raw.file, reject.line), reject)
+    rejects = list(seen.values())
     return make_table(
         REJECTS,
         {
             "market": [market] * len(seen),
-            "contract": [contract for contract, _, _ in seen.values()],
+            "contract": [reject.contract for reject in rejects],
             "file": [file for file, _ in seen],
-            "line": [line for _, line in seen],
-            "text": [text for _, text, _ in seen.values()],
-            "reason": [reason for _, _, reason in seen.values()],
+            "line": [reject.line for reject in rejects],
+            "text": [reject.text for reject in rejects],
+            "reason": [reject.reason for reject in rejects],
+            "offset": [reject.offset for reject in rejects],
         },
     )
 

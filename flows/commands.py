@@ -14,6 +14,7 @@ import click
 
 from contracts.errors import UsageError
 from flows.exits import Exit
+from flows.propose import propose
 from flows.render import complain, say, say_json, say_table
 from flows.settings import Where
 from flows.shell import Asked, Ropewalk, command, show_version
@@ -347,6 +348,8 @@ def sql(asked: Asked, query: str | None) -> Exit:
         say_table(columns, rows)
     return Exit.DONE
 
+
+main.add_command(propose)
 
 if __name__ == "__main__":
     main()

@@ -1,0 +1,1 @@
+"""Files made to do harm, and what reading them costs."""

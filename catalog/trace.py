@@ -19,8 +19,11 @@ from catalog.archive import read_archived
 from catalog.places import Places, table_path
 from catalog.store import Manifest, current_snapshot, read_manifest
 from contracts.errors import StoreUnsound, UsageError
+from contracts.findings import Kind
 from contracts.unpack import unpack
 
+# Findings that name another row for the same contract and session.
+_OTHER_ROWS = frozenset({Kind.RESTATED, Kind.CONFLICTING_ROWS})
 _LINE_END = re.compile(rb"\r\n|\n|\r")
 
 
@@ -28,7 +31,8 @@ _LINE_END = re.compile(rb"\r\n|\n|\r")
 class Leg:
     """One held contract on the session: its weight, its clean settle, and the raw row it comes from.
 
-    `session` is the session of the settle, earlier than the one asked for where it is carried.
+    `session` is the session of the settle, earlier than the one asked for where it is carried; `rejected` then
+    holds the rows of its file that could not be read since.
     """
 
     contract: str
@@ -42,6 +46,7 @@ class Leg:
     line: int | None
     text: str | None
     findings: tuple[str, ...]
+    rejected: tuple[str, ...] = ()
 
 
 @dataclass(frozen=True)
@@ -164,6 +169,7 @@ def _leg_lines(leg: Leg) -> list[str]:
     told += [f"  {message}" for message in leg.findings]
     if leg.path is not None:
         told += [f"  {leg.path}:{leg.line}", f"  SHA-256 {leg.file}", f"  {leg.text}"]
+    told += [f"  rejected since: {rejected}" for rejected in leg.rejected]
     return told
 
 
@@ -205,7 +211,10 @@ def trace_price(
     weights = [(row["contract"], 1.0 - row["incoming_weight"])]
     if row["incoming"] is not None:
         weights.append((row["incoming"], row["incoming_weight"]))
-    legs = tuple(_leg(places, bars, findings, paths, contract, weight, session) for contract, weight in weights)
+    rejects = pq.read_table(folder / table_path("rejects", market))
+    legs = tuple(
+        _leg(places, bars, findings, rejects, paths, contract, weight, session) for contract, weight in weights
+    )
     return Trace(
         market, name, nearby, session, manifest.name, manifest.desk, manifest.code, row, legs,
         tuple(roll for roll in ledger if roll.effective_on > session),
@@ -256,8 +265,8 @@ def _paths(folder: Path, manifest: Manifest) -> dict[str, list[str]]:
 
 
 def _leg(
-    places: Places, bars: pa.Table, findings: pa.Table, paths: dict[str, list[str]], contract: str, weight: float,
-    session: datetime.date,
+    places: Places, bars: pa.Table, findings: pa.Table, rejects: pa.Table, paths: dict[str, list[str]],
+    contract: str, weight: float, session: datetime.date,
 ) -> Leg:  # fmt: skip
     ours = bars.filter((pc.field("contract") == contract) & (pc.field("session") <= pa.scalar(session, pa.date32())))
     rows = [row for row in ours.to_pylist() if row["status"] != "not a session"]
@@ -271,15 +280,26 @@ def _leg(
     about = [
         entry["message"]
         for entry in findings.filter(pc.field("contract") == contract).to_pylist()
-        if entry["session"] in days and entry["field"] in ("settle", None)
+        if entry["session"] in days and (entry["field"] in ("settle", None) or entry["kind"] in _OTHER_ROWS)
     ]
     path = paths.get(row["file"], [None])[0]
     text = None if path is None else read_raw_line(places, path, row["file"], row["line"])
     status = row["status"] if row["session"] == session else f"carried from {row['session']}"
     return Leg(
         contract, weight, row["clean_settle"], row["session"], row["settle"], status, path, row["file"], row["line"],
-        text, tuple(about),
+        text, tuple(about), _rejected_since(bars, rejects, row, path) if row["session"] < session else (),
     )  # fmt: skip
+
+
+def _rejected_since(bars: pa.Table, rejects: pa.Table, row: dict[str, Any], path: str | None) -> tuple[str, ...]:
+    """Rows of the bar's file that could not be read, between it and the file's next bar."""
+    lines = [line for line in bars.filter(pc.field("file") == row["file"])["line"].to_pylist() if line > row["line"]]
+    following = min(lines, default=None)
+    return tuple(
+        f"{path}:{entry['line']}: {entry['reason']}: {entry['text'][:200]!r}"
+        for entry in rejects.filter(pc.field("file") == row["file"]).to_pylist()
+        if entry["line"] > row["line"] and (following is None or entry["line"] < following)
+    )
 
 
 def read_raw_line(places: Places, path: str, file: str, line: int) -> str:

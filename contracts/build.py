@@ -94,7 +94,7 @@ def build_market(inputs: Inputs) -> Built:
     files, is_old, failures = _read(inputs)
     parsed = parse_rows(files, market)
     arrived = settle_arrivals(parsed, files, is_old)
-    account_for_rows(market.code, files, is_old, parsed, arrived)
+    account_for_rows(files, is_old, parsed, arrived)
     if not len(arrived.bars.line):
         first = f"; {failures[0][2]}" if failures else ""
         raise ValueError(f"{market.code}: no row of its {len(inputs.files)} files can be read{first}")
@@ -282,7 +282,7 @@ def _facts(
             "recent_without_price": int((status[-RECENT_SESSIONS:] >= 2).sum()),
         }
     return {
-        "rows": sum(rows.row_count for rows in current),
+        "rows": sum(rows.row_count - rows.elsewhere for rows in current),
         "rejected": sum(len(rows.rejects) for rows in current),
         "expected": len(panel.sessions),
         "first_session": day_of(panel.sessions[0]).isoformat(),

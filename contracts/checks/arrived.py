@@ -47,20 +47,18 @@ def check_files(market: str, files: list[FileRows], is_old: list[bool]) -> list[
     return found
 
 
-def account_for_rows(
-    market: str, files: list[FileRows], is_old: list[bool], parsed: ParsedRows, arrived: Arrived
-) -> None:
+def account_for_rows(files: list[FileRows], is_old: list[bool], parsed: ParsedRows, arrived: Arrived) -> None:
     """Raise IdentityError unless every row of every newest file is kept, rejected, superseded, or another market's."""
     kept = np.bincount(arrived.bars.source, minlength=len(files))
     gone = np.bincount([parsed.source[meeting.row] for meeting in arrived.superseded] or [], minlength=len(files))
     for source, (rows, old) in enumerate(zip(files, is_old, strict=True)):
-        if old or not rows.raw.is_told_here:
+        if old:
             continue
-        others = sum(text.strip() != market for text in rows.columns.get("market", ()))
         parts = {"kept": int(kept[source]), "rejected": len(rows.rejects), "superseded": int(gone[source])}
-        if rows.row_count != sum(parts.values()) + others:
+        parts["of other markets"] = rows.elsewhere
+        if rows.row_count != sum(parts.values()):
             told = ", ".join(f"{count} {name}" for name, count in parts.items())
-            raise IdentityError(f"{rows.raw.path}: {rows.row_count} rows came in; {told}, {others} of other markets")
+            raise IdentityError(f"{rows.raw.path}: {rows.row_count} rows came in; {told}")
 
 
 def check_meetings(

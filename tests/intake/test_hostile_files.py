@@ -171,7 +171,9 @@ def test_harmful_file_is_read_or_refused_within_a_gibibyte(
     assert peak < LIMIT
 
 
-def test_plain_file_of_two_gigabytes_is_refused_by_its_size_before_it_is_read(tmp_path: Path) -> None:
+def test_plain_file_of_two_gigabytes_is_refused_by_its_size_before_it_is_read(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
     raw, store = tmp_path / "raw", tmp_path / "store"
     raw.mkdir()
     with (raw / "huge.csv").open("wb") as file:
@@ -185,6 +187,8 @@ def test_plain_file_of_two_gigabytes_is_refused_by_its_size_before_it_is_read(tm
         intake = take_in(Path({str(raw)!r}), Places(Path({str(store)!r})))
         return [[arrival.path for arrival in intake.arrivals], [str(p.reason) for p in intake.problems]]
     """)
+    with capsys.disabled():
+        sys.stdout.write(f"\nplain file of 2 GB: peak {peak / 1024 / 1024:,.0f} MiB; {said}")
     assert said == [["good.csv"], ["seen 2,147,483,648 bytes; expected at most 268,435,456"]]
     assert LARGEST_TEXT == 268_435_456
     assert peak < LIMIT // 2

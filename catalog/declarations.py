@@ -16,7 +16,7 @@ from typing import Annotated, Any
 from pydantic import AfterValidator, BeforeValidator, Field
 
 from contracts.calendar_table import calendar_mistakes
-from contracts.declared import Declared, Model, line_of, read_declaration
+from contracts.declared import Declared, Model, line_of, read_declaration, read_toml
 from contracts.errors import CalendarError, DeskError, Mistake
 from contracts.findings import Waiver
 from contracts.layouts import Layout, read_layout
@@ -144,6 +144,8 @@ class _Reading:
 
     texts: dict[str, str]
     mistakes: list[Mistake] = field(default_factory=list)
+    # Codes of all market files, those with mistakes too: what speaks of them is no mistake of its own.
+    codes: set[str] = field(default_factory=set)
 
     def names(self, folder: str) -> list[str]:
         return [name for name in self.texts if name.startswith(f"{folder}/")]
@@ -205,8 +207,8 @@ def _load(path: Path, items: tuple[tuple[str, str], ...]) -> Desk:
             layouts[Path(name).stem] = layout
     if not reading.names("layouts"):
         reading.mistakes.append(Mistake("layouts/", "(folder)", "no layout", "at least one layouts/<name>.toml"))
-    repairs = _load_repairs(reading, markets)
-    waivers = _load_waivers(reading, markets)
+    repairs = _load_repairs(reading)
+    waivers = _load_waivers(reading)
     if reading.mistakes or head is None:
         raise DeskError(reading.mistakes)
     return Desk(
@@ -222,6 +224,7 @@ def _load_markets(reading: _Reading) -> dict[str, Market]:
     for name in reading.names("markets"):
         market, mistakes = read_market(reading.texts[name], name)
         reading.mistakes += mistakes
+        reading.codes.add(market.code if market else str(read_toml(reading.texts[name], name)[0].get("code")))
         if market is None:
             continue
         if market.code in where:
@@ -242,15 +245,16 @@ def _load_markets(reading: _Reading) -> dict[str, Market]:
     return markets
 
 
-def _load_repairs(reading: _Reading, markets: dict[str, Market]) -> tuple[DeclaredRepair, ...]:
+def _load_repairs(reading: _Reading) -> tuple[DeclaredRepair, ...]:
     repairs: list[DeclaredRepair] = []
     seen: dict[tuple[object, ...], str] = {}
     for name in reading.names("repairs"):
         file = reading.model(RepairsFile, name)
         for index, repair in enumerate(file.repair if file else ()):
             key = (repair.contract, repair.session, repair.field)
-            if repair.contract[:-8] not in markets:
-                reading.mistakes.append(_unknown_market(name, f"repair[{index}].contract", repair.contract, markets))
+            if repair.contract[:-8] not in reading.codes:
+                key_name = f"repair[{index}].contract"
+                reading.mistakes.append(_unknown_market(name, key_name, repair.contract, reading.codes))
             if key in seen:
                 reading.mistakes.append(
                     Mistake(
@@ -265,16 +269,17 @@ def _load_repairs(reading: _Reading, markets: dict[str, Market]) -> tuple[Declar
     return tuple(repairs)
 
 
-def _load_waivers(reading: _Reading, markets: dict[str, Market]) -> tuple[Waiver, ...]:
+def _load_waivers(reading: _Reading) -> tuple[Waiver, ...]:
     if "waivers.toml" not in reading.texts:
         return ()
     file = reading.model(WaiversFile, "waivers.toml")
     waivers = file.waiver if file else ()
     for index, waiver in enumerate(waivers):
-        if waiver.market is not None and waiver.market not in markets:
-            reading.mistakes.append(_unknown_market("waivers.toml", f"waiver[{index}].market", waiver.market, markets))
+        if waiver.market is not None and waiver.market not in reading.codes:
+            key = f"waiver[{index}].market"
+            reading.mistakes.append(_unknown_market("waivers.toml", key, waiver.market, reading.codes))
     return waivers
 
 
-def _unknown_market(file: str, key: str, seen: str, markets: dict[str, Market]) -> Mistake:
-    return Mistake(file, key, f"{seen!r}, a market the desk does not declare", f"one of {', '.join(sorted(markets))}")
+def _unknown_market(file: str, key: str, seen: str, codes: set[str]) -> Mistake:
+    return Mistake(file, key, f"{seen!r}, a market the desk does not declare", f"one of {', '.join(sorted(codes))}")

@@ -121,6 +121,10 @@ def test_wrong_desk_is_refused_whole_and_nothing_is_touched(tiny: Path, tmp_path
     (tiny / "markets" / "tina.toml").write_text(market.replace('"volume"', '"volumes"').replace("unit =", "units ="))
     other = (tiny / "markets" / "tinb.toml").read_text().replace("BYMONTHDAY=15", "BYMONTHDAY=31")
     (tiny / "markets" / "tinb.toml").write_text(other + '\n[plans.by_volume]\ntrigger = "volume"\n')
+    # A waiver of a market whose file is wrong is no mistake of its own; one of a market nobody declares is.
+    waiver = '[[waiver]]\nmarket = "{}"\nkind = "off_tick"\nfrom = 2024-01-01\nto = 2024-01-02\nreason = "test"\n'
+    waiver += 'by = "desk"\non = 2024-01-01\nuntil = 2024-12-31\n'
+    (tiny / "waivers.toml").write_text(waiver.format("TINA") + waiver.format("TINC"))
     store = tmp_path / "published"
     with pytest.raises(DeskError) as caught:
         begin(tiny, None, store, "build")
@@ -130,6 +134,7 @@ def test_wrong_desk_is_refused_whole_and_nothing_is_touched(tiny: Path, tmp_path
         ("markets/tina.toml", "plans.by_volume.trigger"),
         ("markets/tinb.toml", "last_trade.rule"),
         ("markets/tinb.toml", "plans.by_volume"),
+        ("waivers.toml", "waiver[1].market"),
     ]
     assert not store.exists()
 

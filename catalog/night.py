@@ -27,7 +27,7 @@ from catalog.assignment import (
 )
 from catalog.declarations import Desk, load_desk
 from catalog.gates import judge_market, silent_sessions
-from catalog.places import Places, table_path
+from catalog.places import DESK_WIDE, Places, table_path
 from catalog.runs import Run, next_run, record_run, runs_table
 from catalog.store import (
     Manifest,
@@ -45,13 +45,12 @@ from catalog.summary import Summary, summarise
 from contracts.build import build_market
 from contracts.errors import RopewalkError, StoreError, UsageError
 from contracts.findings import Finding, Kind, Severity, findings_table
-from contracts.tables import COVERAGE, MARKET_TABLES, RUNS, TABLES, make_table
+from contracts.tables import COVERAGE, FINDINGS, MARKET_TABLES, RUNS, make_table
 
 PUBLISHED: Final = "published"
 HELD_BACK: Final = "held back"
 # Tables that tell of tonight even where a market's prices are held back.
 _TOLD_TONIGHT = ("findings", "rejects", "files")
-_NO_MARKET = "_desk"
 
 
 @dataclass(frozen=True)
@@ -71,7 +70,6 @@ class Night:
     dask_address: str
     files_taken_in: int
     intake: int
-    data_date: str | None = None
 
 
 def begin(desk_path: Path, raw: Path | None, store: Path | None, command: str, rehash: bool = False) -> Night:
@@ -236,9 +234,9 @@ def finish(night: Night, results: list[dict[str, Any]]) -> Summary:
     late = late_markets(desk, verdicts)
     desk_findings = [*_desk_findings(memory, desk, staging, files), *late]
     for table, market, data in (
-        (_table("findings"), _NO_MARKET, findings_table(desk_findings)),
-        (COVERAGE, _NO_MARKET, coverage_table(desk, verdicts)),
-        (RUNS, _NO_MARKET, runs_table(places, run)),
+        (FINDINGS, DESK_WIDE, findings_table(desk_findings)),
+        (COVERAGE, DESK_WIDE, coverage_table(desk, verdicts)),
+        (RUNS, DESK_WIDE, runs_table(places, run)),
     ):
         stored = write_table(staging, table, market, data, metadata)
         files[stored.path] = stored
@@ -261,10 +259,6 @@ def finish(night: Night, results: list[dict[str, Any]]) -> Summary:
 
 def _now() -> str:
     return datetime.datetime.now(datetime.UTC).isoformat()
-
-
-def _table(name: str) -> Any:
-    return next(table for table in TABLES if table.name == name)
 
 
 def _judge(

@@ -20,14 +20,14 @@ from contracts.checks.shocks import check_shocks
 from contracts.checks.stale import find_stale_runs
 from contracts.deliveries import delivery_of
 from contracts.errors import IntakeError
-from contracts.findings import Finding, Kind, Severity, Waiver, findings_table, waive
+from contracts.findings import Action, Finding, Kind, Severity, Waiver, findings_table, waive
 from contracts.intake import FileRows, RawFile, parse_rows, split_file
 from contracts.markets import Market
 from contracts.panel import Panel, lay_panel
 from contracts.quality import Gates, Quality
 from contracts.repairs import Clean, DeclaredRepair, clean_panel
 from contracts.rolls import NEVER, Held, lay_rolls
-from contracts.sessions import day_of, last_trade_day
+from contracts.sessions import day_number, day_of, last_trade_day
 from contracts.splice import Series, carry_forward, check_identities, splice
 from contracts.trend import impact_of_gap, impact_of_price
 from contracts.written import (
@@ -41,7 +41,7 @@ from contracts.written import (
 
 # Gates look back so many sessions.
 RECENT_SESSIONS = 60
-_TELLS_OF_SETTLE = frozenset({"repaired", "masked"})
+_REPLACED = frozenset({Action.REPAIRED, Action.MASKED})
 
 
 # Path, contract (None where its rows say it) and message of a file of which nothing can be read.
@@ -203,8 +203,8 @@ def _weigh(
     first_nearbys = [one for one in laid if one.held.nearby == 1 and one.series is not None]
     weighed = []
     for finding in findings:
-        if finding.field == "settle" and finding.action in _TELLS_OF_SETTLE and finding.session is not None:
-            session = int(np.searchsorted(panel.sessions, (finding.session - day_of(0)).days))
+        if finding.field == "settle" and finding.action in _REPLACED and finding.session is not None:
+            session = int(np.searchsorted(panel.sessions, day_number(finding.session)))
             contract = panel.contracts.index(finding.contract or "")
             finding = replace(
                 finding, impact_sessions=_price_impact(panel, clean, first_nearbys, session, contract, look_backs)
@@ -304,7 +304,7 @@ def _blocking(findings: list[Finding], panel: Panel, laid: list[Laid]) -> list[s
         if finding.session is not None and finding.contract is not None:
             if finding.session < since or finding.contract not in panel.contracts:
                 continue
-            session = int(np.searchsorted(panel.sessions, (finding.session - day_of(0)).days))
+            session = int(np.searchsorted(panel.sessions, day_number(finding.session)))
             contract = panel.contracts.index(finding.contract)
             around = range(max(0, session - 1), min(len(panel.sessions), session + 1))
             if not any(_weight(one.held, at, contract) for one in laid for at in around):

@@ -2,8 +2,8 @@
 
 Belongs here: which markets, seeds and samples are measured. Does not belong here: printing.
 
-TUNING are the seeds that thresholds may be chosen by, REPORTED those whose figures are published and floored in
-`test_power.py`. They are different draws of markets and of faults, and nothing may be tuned on the reported ones.
+The seed "tuning" is the one thresholds may be chosen by, "reported" the one whose figures are published and floored in
+`test_power.py`. They give different draws of markets and of faults, and nothing may be tuned on the reported one.
 """
 
 from collections.abc import Iterable
@@ -12,7 +12,7 @@ import numpy as np
 
 from tests.detectors.chain import run_chain
 from tests.detectors.curves import grow
-from tests.detectors.faults import PRICE_FAULTS, Planted
+from tests.detectors.faults import PRICE_FAULTS, Fault, Planted
 from tests.detectors.hampel import count_alarms
 from tests.detectors.mix import plant_cells, plant_whole
 from tests.detectors.score import Tally, tally_history, tally_last
@@ -21,14 +21,15 @@ from tests.detectors.terms import MARKETS, terms_of
 SEEDS = {"tuning": 11, "reported": 2027}
 ALL = tuple(terms.code for terms in MARKETS)
 _LOOK_BACK = 300
-# Kinds that can show on the session they happen on.
+# Kinds that show on the session they begin on; a stale price shows on its sixth.
 AT_ONCE = frozenset(PRICE_FAULTS) | {
-    "volume_implausible", "off_tick", "range_broken", "settle_outside_range",
+    "stale_price", "volume_implausible", "off_tick", "range_broken", "settle_outside_range", "contract_missing",
 }  # fmt: skip
+_SHOWS_AFTER = {"stale_price": 5}
 
 
 def plant(codes: Iterable[str], seeds: str) -> list[Planted]:
-    """The markets of these codes with their faults; `seeds` is "tuning" or "reported"."""
+    """The markets of these codes with their faults; `seeds` is a key of SEEDS."""
     return [plant_cells(grow(terms_of(code), SEEDS[seeds]), SEEDS[seeds]) for code in codes]
 
 
@@ -45,19 +46,24 @@ def measure_histories(markets: list[Planted], seeds: str) -> Tally:
 def measure_last_sessions(markets: list[Planted], seeds: str, sample: int) -> tuple[Tally, Tally]:
     """Online: histories cut so that a fault lies in the last session, and as many whose last session has none.
 
-    Returns the tally of each; `sample` cuts are drawn of each sort.
+    `sample` cuts are drawn of each sort, and a change of scale is added a market. Returns the tally of each sort.
     """
     rng = np.random.default_rng([SEEDS[seeds], 3])
     with_fault, without = Tally(), Tally()
-    faulty = [
-        (planted, fault) for planted in markets for fault in planted.faults
-        if fault.kind in AT_ONCE and fault.first >= planted.grown.days[_LOOK_BACK // 3]
-    ]  # fmt: skip
-    for place in rng.permutation(len(faulty))[:sample]:
-        planted, fault = faulty[place]
-        last = int(np.searchsorted(planted.grown.days, fault.first))
+    cuts: list[tuple[Planted, Fault, int]] = []
+    for planted in markets:
+        days = planted.grown.days
+        for fault in planted.faults:
+            first = int(np.searchsorted(days, fault.first))
+            if fault.kind in AT_ONCE and first >= _LOOK_BACK // 3:
+                cuts.append((planted, fault, first + _SHOWS_AFTER.get(fault.kind, 0)))
+    drawn = [cuts[place] for place in rng.permutation(len(cuts))[:sample]]
+    for planted in markets[: max(1, sample // 10)]:
+        whole = plant_whole(planted.grown, SEEDS[seeds])[0]
+        drawn.append((whole, whole.faults[0], int(np.searchsorted(whole.grown.days, whole.faults[0].first))))
+    for planted, fault, last in drawn:
         cut = planted.cut(max(0, last - _LOOK_BACK + 1), last)
-        tally_last(cut, run_chain(cut), with_fault)
+        tally_last(cut, run_chain(cut), fault, with_fault)
     for _ in range(sample):
         planted = markets[int(rng.integers(len(markets)))]
         days = planted.grown.days
@@ -66,16 +72,16 @@ def measure_last_sessions(markets: list[Planted], seeds: str, sample: int) -> tu
             busy |= (days >= fault.first) & (days <= fault.last)
         last = int(rng.choice(np.flatnonzero(~busy[_LOOK_BACK // 2 :]) + _LOOK_BACK // 2))
         cut = planted.cut(max(0, last - _LOOK_BACK + 1), last)
-        tally_last(cut, run_chain(cut), without)
+        tally_last(cut, run_chain(cut), None, without)
     return with_fault, without
 
 
 def online_precision(with_fault: Tally, without: Tally, histories: Tally) -> float:
-    """Share of right findings on last sessions at the density of faults of the whole histories."""
+    """Share of right findings on last sessions, at the density that faults have in the whole histories."""
     density = sum(count for kind, count in histories.planted.items() if kind in AT_ONCE) / max(1, histories.sessions)
     right = sum(with_fault.right.values()) / max(1, with_fault.sessions)
-    false = sum(without.false.values()) / max(1, without.sessions)
     beside = sum(with_fault.false.values()) / max(1, with_fault.sessions)
+    false = sum(without.false.values()) / max(1, without.sessions)
     alarms = density * (right + beside) + (1 - density) * false
     return density * right / alarms if alarms else 1.0
 

@@ -132,7 +132,9 @@ def _volatility(rng: np.random.Generator, terms: Terms, count: int) -> np.ndarra
     for day in range(count):
         state = 0.97 * state + 0.11 * draws[day]
         path[day] = state
-    return terms.vol * np.exp(np.clip(path - 0.1, -1.0, 1.2))
+    # So that a near contract's ordinary day, near end included, is `vol`.
+    near = np.hypot(1 + 0.6 * terms.near, 0.8 * terms.near) * 1.22
+    return terms.vol / near * np.exp(np.clip(path, -1.0, 1.2))
 
 
 def _fat(rng: np.random.Generator, *shape: int) -> np.ndarray:
@@ -191,7 +193,7 @@ def _lone_events(
     rng: np.random.Generator, terms: Terms, x: np.ndarray, left: np.ndarray, alive: np.ndarray, day_vol: np.ndarray,
     surge: np.ndarray, events: list[Event],
 ) -> np.ndarray:  # fmt: skip
-    """Squeezes into expiry and lone moves, put into x and the volume's surge; returns where the range is behind them."""
+    """Put squeezes into expiry and lone moves into x and the volume's surge; returns where the range is behind them."""
     count, width = x.shape
     wide = np.zeros(x.shape, dtype=bool)
     size = max(1.0, terms.vol / 0.015) if terms.vol > 0.002 else 0.08
@@ -289,6 +291,10 @@ def _settles(
         for day in range(1, len(held)):
             keep = stands[day] & alive[day - 1]
             settle[day] = np.where(keep, settle[day - 1], settle[day])
+            if limit:
+                # What catches up after standing still is held by the limit too.
+                bounded = np.clip(settle[day], settle[day - 1] - limit, settle[day - 1] + limit)
+                settle[day] = np.where(alive[day - 1], np.round(bounded / tick) * tick, settle[day])
     return settle
 
 

@@ -9,7 +9,7 @@ from dataclasses import dataclass, field, replace
 
 import numpy as np
 
-from tests.detectors.curves import HIGH, LOW, OPEN, SETTLE, Grown
+from tests.detectors.curves import HIGH, INTEREST, LOW, OPEN, SETTLE, Grown
 
 # The kinds by which a wrong settle may reasonably be called.
 WRONG_PRICE = frozenset({
@@ -57,7 +57,9 @@ _ACCEPTED: dict[str, frozenset[str]] = {
     "range_broken": WRONG_PRICE,
     "sessions_missing": frozenset({"session_missing", "market_silent"}),
     "market_silent": frozenset({"session_missing", "sessions_missing"}),
+    "contract_missing": frozenset({"file_late"}),
     "ended_early": frozenset({"contract_missing", "file_late"}),
+    "open_interest_lag_wrong": frozenset({"open_interest_implausible"}),
     "outside_listing": frozenset({"not_a_session"}),
 }
 
@@ -108,7 +110,10 @@ class Planted:
         strays = [(int(columns[c]), d, row) for c, d, row in self.strays if low <= d <= high and live[c]]
         faults = [fault for fault in self.faults if fault.first <= high and fault.last >= low]
         closed = [day for day in self.closed if low <= day <= high]
-        return Planted(smaller, self.values[:, kept, live].copy(), faults, strays, closed, self.lag)
+        values = self.values[:, kept, live].copy()
+        if self.lag:
+            values[INTEREST, -self.lag :] = np.nan
+        return Planted(smaller, values, faults, strays, closed, self.lag)
 
 
 class Planter:
@@ -153,9 +158,9 @@ class Planter:
 
     def note(
         self, kind: str, form: str, session: int, contract: int | None, length: int = 1, field: str = "settle",
-        size: float = 0.0,
+        size: float = 0.0, day: int | None = None,
     ) -> None:  # fmt: skip
-        """Record a fault and keep others away from it."""
+        """Record a fault and keep others away from it; `day` where it shows on another day than the session's."""
         days, last = self.grown.days, session + length - 1
         truth: tuple[float, ...] = ()
         if contract is None:
@@ -164,7 +169,8 @@ class Planter:
             self.taken[max(0, session - 3) : last + 4, contract] = True
             truth = tuple(self.grown.values[SETTLE, session : last + 1, contract].tolist())
         name = None if contract is None else self.grown.contracts[contract]
-        self.planted.faults.append(Fault(kind, form, name, int(days[session]), int(days[last]), field, truth, size))
+        first, end = (int(days[session]), int(days[last])) if day is None else (day, day)
+        self.planted.faults.append(Fault(kind, form, name, first, end, field, truth, size))
 
     def on_tick(self, price: float) -> float:
         return float(np.round(np.round(price / self.tick) * self.tick, self.grown.decimals))
@@ -185,7 +191,6 @@ def price_jump(planter: Planter, session: int, contract: int) -> float:
     """A wrong distance of 4% to 15% of the price, or of the market's level where that may be nought."""
     terms = planter.grown.terms
     base = terms.level if terms.may_be_negative else abs(planter.truth(session, contract))
-    # A rate market moves 0.06% a day around 96; four percent of its distance from 100 is what a slip there looks like.
     return float(planter.rng.choice([-1, 1]) * planter.rng.uniform(0.04, 0.15)) * base
 
 

@@ -13,20 +13,20 @@ from tests.detectors.faults import Plant, Planted, Planter
 CELLS: tuple[tuple[Plant, float], ...] = (
     (planting.decimal_shift, 1.0), (planting.reverting_spike, 1.6), (planting.curve_break, 1.0),
     (planting.digits_swapped, 1.2), (planting.sign_flipped, 0.8), (planting.neighbours_price, 1.2),
-    (planting.not_positive, 0.6), (planting.limit_exceeded, 1.2), (planting.stale_price, 1.4),
+    (planting.not_positive, 0.6), (planting.limit_exceeded, 1.6), (planting.stale_price, 1.4),
     (planting.curve_kinked, 1.0), (rows.off_tick, 0.8), (rows.range_broken, 0.8), (rows.settle_outside_range, 0.8),
     (rows.volume_implausible, 0.8), (rows.open_interest_implausible, 0.8), (rows.session_missing, 0.5),
-    (rows.sessions_missing, 0.4), (rows.market_silent, 0.12), (rows.contract_missing, 0.8), (rows.ended_early, 0.7),
+    (rows.sessions_missing, 0.4), (rows.market_silent, 0.4), (rows.contract_missing, 0.8), (rows.ended_early, 0.7),
     (rows.calendar_disagrees, 0.5), (rows.not_a_session, 0.6), (rows.outside_listing, 0.7),
 )  # fmt: skip
 WHOLE: tuple[Plant, ...] = (rows.scale_changed, rows.open_interest_lag_wrong)
 _FIRST = 70
-_APART = 12
+_APART = 15
 _WHOLE_SESSIONS = 420
 
 
 def plant_cells(grown: Grown, seed: int) -> Planted:
-    """Faults of every kind but those of the whole history, one every dozen sessions or so of the market."""
+    """Faults of every kind but those of the whole history, one every fifteen sessions or so of the market."""
     rng = np.random.default_rng([seed, 1, *grown.terms.code.encode()])
     planter = Planter(grown, rng)
     weights = np.array([weight for _, weight in CELLS])
@@ -36,7 +36,7 @@ def plant_cells(grown: Grown, seed: int) -> Planted:
             plant = CELLS[int(rng.choice(len(CELLS), p=weights / weights.sum()))][0]
             if plant(planter, session):
                 break
-        session += int(rng.integers(_APART - 5, _APART + 6))
+        session += int(rng.integers(_APART - 6, _APART + 7))
     planter.planted.faults.sort(key=lambda fault: (fault.first, fault.contract or ""))
     return planter.planted
 

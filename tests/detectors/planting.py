@@ -56,7 +56,7 @@ def curve_break(p: Planter, session: int) -> bool:
 
 
 def digits_swapped(p: Planter, session: int) -> bool:
-    """Two neighbouring figures of the settle's text change places; at least 8 ticks and 1% away from the truth."""
+    """Two neighbouring figures of the settle's text change places; at least 8 ticks and half a day's move away."""
     contract = p.pick(session)
     if contract is None:
         return False
@@ -71,7 +71,7 @@ def digits_swapped(p: Planter, session: int) -> bool:
         wrong = float(swapped) * (1 if truth >= 0 else -1)
         # A power of ten or nought would be another fault.
         near = 0.1 < abs(wrong / truth) < 9.0 if truth else False
-        if near and abs(wrong - truth) >= max(8 * p.tick, 0.01 * base):
+        if near and abs(wrong - truth) >= max(8 * p.tick, 0.5 * p.grown.terms.vol * base):
             options.append(wrong)
     if not options:
         return False
@@ -100,7 +100,7 @@ def sign_flipped(p: Planter, session: int) -> bool:
 
 
 def neighbours_price(p: Planter, session: int) -> bool:
-    """Another delivery's whole row under this one's name; its settle is at least 6 ticks and 0.5% away."""
+    """Another delivery's whole row under this one's name, at least 6 ticks and a quarter of a day's move away."""
     contract = p.pick(session)
     if contract is None:
         return False
@@ -111,7 +111,7 @@ def neighbours_price(p: Planter, session: int) -> bool:
         other for other in (contract - 2, contract - 1, contract + 1, contract + 2)
         if 0 <= other < values.shape[2] and values[VOLUME, session, other] > 0
         and not p.taken[session, other]
-        and abs(values[SETTLE, session, other] - truth) >= max(6 * p.tick, 0.005 * base)
+        and abs(values[SETTLE, session, other] - truth) >= max(6 * p.tick, 0.25 * p.grown.terms.vol * base)
     ]  # fmt: skip
     if not others:
         return False

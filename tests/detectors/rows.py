@@ -154,34 +154,26 @@ def not_a_session(p: Planter, session: int) -> bool:
     if day in days or not any(d > day for d in days):
         return False
     p.planted.strays.append((contract, day, p.planted.values[:, session, contract].copy()))
-    p.note("not_a_session", "Saturday", session, contract)
-    _move_last(p, day)
+    p.note("not_a_session", "Saturday", session, contract, day=day)
     return True
 
 
 def outside_listing(p: Planter, session: int) -> bool:
-    """A contract has a row after its last trading day."""
+    """A contract has a row after its last trading day, or sixteen years before it."""
     ends = p.grown.ends
     columns = np.flatnonzero((ends >= session) & (ends < session + 40) & (ends + 8 < len(p.grown.days)))
     if not len(columns):
         return False
     contract = int(columns[0])
     end = int(ends[contract])
-    day = int(p.grown.days[end + int(p.rng.integers(1, 6))])
     row = p.planted.values[:, end, contract].copy()
     if not np.isfinite(row[SETTLE]) or p.taken[end - 1 : end + 1, contract].any():
         return False
+    is_early = bool(p.rng.random() < 0.25)
+    day = int(p.grown.days[end]) - 16 * 366 if is_early else int(p.grown.days[end + int(p.rng.integers(1, 6))])
     p.planted.strays.append((contract, day, row))
-    p.note("outside_listing", "after last trade", end, contract)
-    _move_last(p, day)
+    p.note("outside_listing", "years early" if is_early else "after last trade", end, contract, day=day)
     return True
-
-
-def _move_last(p: Planter, day: int) -> None:
-    """The fault just noted shows on another day."""
-    from dataclasses import replace
-
-    p.planted.faults[-1] = replace(p.planted.faults[-1], first=day, last=day)
 
 
 def scale_changed(p: Planter, session: int) -> bool:

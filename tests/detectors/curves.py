@@ -32,7 +32,7 @@ class Event:
     contracts: tuple[int, ...]
 
 
-@dataclass
+@dataclass(repr=False)
 class Grown:
     """A market as it truly was.
 

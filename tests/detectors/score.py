@@ -30,7 +30,7 @@ _LONG_DAYS = 5
 _REFUSED = "unreadable_rows"
 
 
-@dataclass
+@dataclass(repr=False)
 class Tally:
     """Counts over any number of histories.
 
@@ -57,8 +57,12 @@ class Tally:
     sessions: int = 0
     rows: int = 0
 
+    def __repr__(self) -> str:
+        return f"<recall {self.recall:.4f}, precision {self.precision:.4f}, false {dict(self.false)}>"
+
     @property
     def recall(self) -> float:
+        """Share of all planted faults that were found."""
         return sum(self.found.values()) / max(1, sum(self.planted.values()))
 
     def recall_of(self, kind: str) -> float:

@@ -94,7 +94,7 @@ MARKETS = (
     Terms("BRAT", 0.005, 96.5, 0.0006, QUARTERLY, 16, 0.0, 0.2, 0.25, 0.3, noise=0.04, base=300000, depth=3.0),
     Terms("BVOL", 0.05, 19.0, 0.03, MONTHLY, 8, 0.0, 6.0, 1.5, 0.1, noise=0.05, base=80000, depth=1.2, day=18),
     Terms(
-        "BPWR", 0.05, 8.0, 0.08, MONTHLY, 8, 0.3, 2.5, 0.8, 0.2, noise=0.06, base=8000, depth=0.8, may_be_negative=True,
+        "BPWR", 0.05, 20.0, 0.04, MONTHLY, 8, 0.3, 2.5, 0.8, 0.2, noise=0.06, base=8000, depth=0.8, may_be_negative=True,
         day=24, offset=-1,
     ),
     Terms("BRBR", 0.1, 170.0, 0.015, MONTHLY, 9, 0.01, 0.8, 0.3, noise=0.04, base=800, depth=0.9, idle="still", day=22),
@@ -109,7 +109,7 @@ MARKETS = (
 )  # fmt: skip
 
 # A subset with something of everything, for the everyday run.
-FEW = ("BWHA", "BCOP", "BPWR", "BIDX", "BRBR", "BMIL")
+FEW = ("BWHA", "BGLD", "BPWR", "BIDX", "BRIC")
 
 
 def terms_of(code: str) -> Terms:

@@ -12,6 +12,7 @@ from tests.detectors.curves import HIGH, LOW, OPEN, SETTLE, VOLUME, grow
 from tests.detectors.faults import NAMES, Fault, Planted
 from tests.detectors.hampel import alarms
 from tests.detectors.mix import plant_cells, plant_whole
+from tests.detectors.report import gather, say
 from tests.detectors.score import Tally, tally_history
 from tests.detectors.terms import FEW, terms_of
 
@@ -78,7 +79,7 @@ def test_values_differ_from_the_truth_on_faults_and_nowhere_else(code: str) -> N
     on_days = {"not_a_session", "outside_listing", "calendar_disagrees"}
     for fault in planted.faults:
         days = (grown.days >= fault.first) & (grown.days <= fault.last)
-        columns = [grown.contracts.index(fault.contract)] if fault.contract else list(range(len(grown.contracts)))
+        columns = np.array([fault.contract in (None, name) for name in grown.contracts])
         cells = np.ix_(days, columns)
         assert fault.kind in on_days or differs[cells].any(), fault
         spanned[cells] = True
@@ -174,3 +175,15 @@ def test_a_cut_market_ends_on_the_wanted_session_and_knows_no_later_open_interes
     assert np.isnan(cut.values[5, -1]).all()
     assert np.isfinite(cut.values[5, -2]).any()
     assert all(fault.first <= cut.grown.days[-1] for fault in cut.faults)
+
+
+def test_the_report_prints_every_kind_planted_the_power_curve_and_the_textbook_filter(
+    capsys: pytest.CaptureFixture[str],
+) -> None:
+    result = gather("tuning", ("BBND",), sample=2, last_sessions=1)
+    say(result, misses=3)
+    text = capsys.readouterr().out
+    assert [kind for kind in result["kinds"] if f"  {kind} " not in text] == []
+    assert "tuning seed (11)" in text
+    assert "15 %" in text
+    assert "textbook filter (Hampel, window 11) at 8 scaled MADs" in text

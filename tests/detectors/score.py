@@ -35,7 +35,8 @@ class Tally:
     """Counts over any number of histories.
 
     planted, found, named: by kind of fault; right, false: serious findings by kind; false_rows, missed: the false ones
-    and the faults not found; altered: settles of true events that were replaced; replaced_truths: all true settles
+    and the faults not found; altered: settles of true events (shocks, limits, squeezes,
+    lone moves, negative settles, contracts that do not trade) that were replaced; replaced_truths: all true settles
     that were; off_ticks, off_share: how far repaired settles lie from the truth; masked, left: wrong settles of price
     faults that were masked, and that were left standing.
     """
@@ -169,6 +170,10 @@ def _tally_repairs(planted: Planted, outcome: Outcome, tally: Tally) -> None:
         truth = float(grown.values[3, session, contract])
         if planted.values[3, session, contract] == truth:
             tally.replaced_truths += 1
+            if truth <= 0:
+                natures.setdefault((contract, session), "negative settle")
+            elif not grown.values[4, session, contract] > 0:
+                natures.setdefault((contract, session), "idle contract")
             if (contract, session) in natures:
                 tally.altered.append(f"{natures[contract, session]}: {name} day {day}: {truth!r} became {clean!r}")
         elif status == "masked":

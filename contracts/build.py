@@ -14,10 +14,12 @@ import pyarrow as pa
 from contracts.arrivals import Arrived, settle_arrivals
 from contracts.checks.arrived import account_for_rows, check_days, check_files, check_meetings
 from contracts.checks.gaps import check_gaps
+from contracts.checks.lag import check_lag
 from contracts.checks.rolled import check_rolls
 from contracts.checks.rows import check_rows
 from contracts.checks.shocks import check_shocks
 from contracts.checks.stale import find_stale_runs
+from contracts.checks.volumes import check_volumes
 from contracts.deliveries import delivery_of
 from contracts.errors import IntakeError
 from contracts.findings import Action, Finding, Kind, Severity, Waiver, findings_table, waive
@@ -105,11 +107,13 @@ def build_market(inputs: Inputs) -> Built:
     findings += check_files(market.code, files, is_old)
     findings += check_meetings(market.code, parsed, arrived, files, inputs.gates)
     findings += check_days(panel, _left_out(panel, arrived))
-    findings += check_rows(panel, clean.prices)
+    findings += check_rows(panel, clean.prices, clean.levels)
     findings += clean.findings
     findings += _tell_stale(panel, clean, inputs.quality)
-    findings += check_shocks(panel, clean.settle)
+    findings += check_shocks(panel, clean.settle * clean.levels)
     findings += check_gaps(panel)
+    findings += check_volumes(panel)
+    findings += check_lag(panel)
     traded = clean.traded(panel)
     laid = lay_plans(traded, clean)
     for one in laid:

@@ -64,17 +64,27 @@ class Kind(StrEnum):
     REVERTING_SPIKE = "reverting_spike"  # stands alone for a session and comes back
     CURVE_BREAK = "curve_break"  # stands alone against the curve, not (yet) seen to come back
     STALE_PRICE = "stale_price"  # unchanged while the rest of the curve moves
+    SCALE_CHANGED = "scale_changed"  # on another power of ten from a session on, undeclared
     LONE_MOVE = "lone_move"  # stands alone, but its own range and volume bear it out
     MARKET_SHOCK = "market_shock"  # the whole curve moved far out of its ordinary size
     # the gaps
     SESSION_MISSING = "session_missing"  # no contract has a bar
+    SESSIONS_MISSING = "sessions_missing"  # no contract has a bar on several sessions in a row
+    MARKET_SILENT = "market_silent"  # no contract has a bar for more than ten sessions in a row
     CONTRACT_MISSING = "contract_missing"  # a contract lacks bars between bars
+    ENDED_EARLY = "ended_early"  # a contract's bars stop well before its last trading session
+    # the volumes
+    VOLUME_IMPLAUSIBLE = "volume_implausible"  # many times its past, its open interest and its bar
+    OPEN_INTEREST_IMPLAUSIBLE = "open_interest_implausible"  # stands alone between the sessions about it
+    OPEN_INTEREST_LAG_WRONG = "open_interest_lag_wrong"  # changes with the volume of another session than its own
     # the rolls and the series
     ROLL_BY_DEADLINE = "roll_forced"  # the backstop came before the trigger
     ROLL_POSTPONED = "roll_postponed"  # waited for two usable settles
     ROLL_MEASURED_STALE = "roll_measured_stale"  # measured on an earlier session than it should be
     ROLL_UNMEASURED = "roll_unmeasured"  # no session has both settles: the series is cut
     ROLL_PENDING = "roll_pending"  # decided, takes effect after the data's end
+    THIN_INCOMING = "thin_incoming"  # rolled into a contract that hardly trades
+    AFTER_FIRST_NOTICE = "after_first_notice"  # held on sessions on which delivery may be called
     FORCE_UNUSED = "force_unused"  # a person's decision found nothing to decide
     RATIO_UNDEFINED = "ratio_undefined"  # a leg at or below zero
     # the declarations

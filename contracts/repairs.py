@@ -13,6 +13,7 @@ from pydantic import AfterValidator, Field
 
 from contracts.arrivals import Bars
 from contracts.checks.prices import Ruling, Verdict, judge_settles
+from contracts.checks.scale import check_scale, find_scale_changes, lay_levels, put_on_one_scale
 from contracts.declared import Declared
 from contracts.findings import Action, Finding, Kind, Severity
 from contracts.intake import scale_prices
@@ -60,6 +61,7 @@ class Clean:
     is_repaired: np.ndarray
     is_masked: np.ndarray
     usable: np.ndarray
+    levels: np.ndarray
     verdicts: tuple[Verdict, ...]
     findings: tuple[Finding, ...]
 
@@ -79,9 +81,16 @@ def clean_panel(panel: Panel, bars: Bars, repairs: tuple[DeclaredRepair, ...], q
     """Make the declared repairs, then replace or mask what the checks refute."""
     values = panel.values.copy()
     declared, findings = _make_declared(panel, bars, values, repairs)
+    changes = find_scale_changes(panel, values[_SETTLE])
+    findings += check_scale(panel, changes)
+    # One contract on another scale than its curve is a misplaced decimal; a whole market's scale is for a person to say.
+    own = lay_levels(panel.shape, [change for change in changes if change.contract is not None])
+    levels = lay_levels(panel.shape, [change for change in changes if change.contract is None])
+    is_moved = (own != 1.0) & ~np.isnan(values[_SETTLE])
+    values = put_on_one_scale(values, own)
     settle = values[_SETTLE]
-    verdicts = judge_settles(panel, settle, declared, quality)
-    is_repaired, is_masked = declared.copy(), np.zeros(panel.shape, dtype=bool)
+    verdicts = _judge(panel, values, levels, declared, quality)
+    is_repaired, is_masked = declared | is_moved, np.zeros(panel.shape, dtype=bool)
     for verdict in verdicts:
         findings.append(_tell(panel, settle, verdict))
         if verdict.ruling is not Ruling.REFUTED:
@@ -96,12 +105,27 @@ def clean_panel(panel: Panel, bars: Bars, repairs: tuple[DeclaredRepair, ...], q
             is_repaired[at] = not math.isnan(verdict.expected)
             is_masked[at] = math.isnan(verdict.expected)
     prices = values[: len(PRICE_FIELDS)]
-    _drop_misfits(prices, panel.market.may_be_negative, panel.market.tick_size)
+    level = put_on_one_scale(values, levels)[: len(PRICE_FIELDS)]
+    _drop_misfits(level, panel.market.may_be_negative, panel.market.tick_size)
+    prices[np.isnan(level)] = np.nan
     usable = ~np.isnan(panel.field("settle")) & ~is_masked & (~is_repaired | declared)
     return Clean(
         prices, values[BAR_FIELDS.index("volume")], values[BAR_FIELDS.index("open_interest")],
-        is_repaired, is_masked, usable, tuple(verdicts), tuple(findings),
+        is_repaired, is_masked, usable, levels, tuple(verdicts), tuple(findings),
     )  # fmt: skip
+
+
+def _judge(
+    panel: Panel, values: np.ndarray, levels: np.ndarray, declared: np.ndarray, quality: Quality
+) -> list[Verdict]:
+    """The verdicts on settles, judged on one scale and told on the scale they were reported on."""
+    level = put_on_one_scale(values, levels)
+    verdicts = judge_settles(replace(panel, values=level), level[_SETTLE], declared, quality)
+    at = [levels[verdict.session, verdict.contract] for verdict in verdicts]
+    return [
+        verdict if one == 1.0 else replace(verdict, expected=round(verdict.expected / one, 10))
+        for verdict, one in zip(verdicts, at, strict=True)
+    ]
 
 
 def _make_declared(

@@ -107,7 +107,7 @@ def build_market(inputs: Inputs) -> Built:
     findings += check_files(market.code, files, is_old)
     findings += check_meetings(market.code, parsed, arrived, files, inputs.gates)
     findings += check_days(panel, _left_out(panel, arrived))
-    findings += check_rows(panel, clean.prices, clean.levels)
+    findings += check_rows(panel, clean.prices, clean.levels, clean.is_repaired & ~clean.usable)
     findings += clean.findings
     findings += _tell_stale(panel, clean, inputs.quality)
     findings += check_shocks(panel, clean.settle * clean.levels)

@@ -18,16 +18,20 @@ _TICK_TOLERANCE = 1e-6
 _LONGEST_WAY_BACK = 10
 
 
-def check_rows(panel: Panel, clean_prices: np.ndarray, levels: np.ndarray) -> list[Finding]:
+def check_rows(panel: Panel, clean_prices: np.ndarray, levels: np.ndarray, is_replaced: np.ndarray) -> list[Finding]:
     """All findings of this family; `clean_prices` (4, T, N) says which open, high and low were kept.
 
-    `levels` (T, N) put prices on one scale where that changed undeclared.
+    `levels` (T, N) put prices on one scale where that changed undeclared; `is_replaced` (T, N) are settles that are
+    estimates, against which no change is measured.
     """
+    settle = np.where(is_replaced, np.nan, clean_prices[PRICE_FIELDS.index("settle")])
+    # On which of two scales the limit was declared nobody can know.
+    is_one_scale = bool((levels == 1.0).all())
     return [
         *_off_tick(panel, levels),
         *_broken_ranges(panel, clean_prices),
         *_outside_range(panel),
-        *_limits(panel, clean_prices[PRICE_FIELDS.index("settle")] * levels),
+        *(_limits(panel, settle) if is_one_scale else ()),
     ]
 
 

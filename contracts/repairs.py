@@ -83,7 +83,7 @@ def clean_panel(panel: Panel, bars: Bars, repairs: tuple[DeclaredRepair, ...], q
     declared, findings = _make_declared(panel, bars, values, repairs)
     changes = find_scale_changes(panel, values[_SETTLE])
     findings += check_scale(panel, changes)
-    # One contract on another scale than its curve is a misplaced decimal; a whole market's scale is for a person to say.
+    # One contract off the curve's scale is a misplaced decimal; a whole market's scale is for a person to say.
     own = lay_levels(panel.shape, [change for change in changes if change.contract is not None])
     levels = lay_levels(panel.shape, [change for change in changes if change.contract is None])
     is_moved = (own != 1.0) & ~np.isnan(values[_SETTLE])

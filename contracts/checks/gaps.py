@@ -3,9 +3,9 @@
 Belongs here: gaps between bars, and bars that stop too soon. Does not belong here: files of a whole market that are
 late (`catalog/`), series rows that carry a price over a gap (`splice.py`).
 
-A contract that trades has a bar; one that does not trade has one only where its exchange prints idle rows. So a lacking
-bar is a fault where the contract traded on nearly all of the twenty sessions before and the twenty after, and its
-volumes leave a chance of at most three in a thousand that a session sees no trade: the mean of exp(-volume) over the ten
+A contract that trades has a bar; one that does not has one only where its exchange prints idle rows. So a lacking bar
+is a fault where the contract traded on nearly all of the twenty sessions before and the twenty after, and its volumes
+leave a chance of at most three in a thousand that a session sees no trade: the mean of exp(-volume) over the ten
 nearest sessions, which is that chance were trades Poisson about each volume. Elsewhere it is a fact, told once a
 contract: common practice, no source.
 """

@@ -135,8 +135,11 @@ def _limits(panel: Panel, settle: np.ndarray) -> list[Finding]:
             f"{limit:.10g}; a fact, kept; was the limit another?"
         )
         found.append(
-            Finding(Kind.LIMIT_EXCEEDED, Severity.NOTE, message, market, session=day, score=float(count), threshold=limit)
-        )
+            Finding(
+                Kind.LIMIT_EXCEEDED, Severity.NOTE, message, market, session=day, score=float(count),
+                threshold=0.5 * float(alive[session]),
+            )
+        )  # fmt: skip
     for session, contract in np.argwhere(beyond & ~together[:, None]):
         if _comes_late_or_back(panel, settle, change, beyond, int(session), int(contract)):
             continue

@@ -25,12 +25,14 @@ _LEAST_TRADED = 0.6
 
 @dataclass(frozen=True)
 class StaleRun:
-    """A run of unchanged settles: first and last session, contract, and how far the curve moved meanwhile."""
+    """A run of unchanged settles: first and last session, contract, how far the curve moved meanwhile, and the
+    settles that would have moved with it."""
 
     first: int
     last: int
     contract: int
     moved: float
+    path: tuple[float, ...]
 
 
 def find_stale_runs(panel: Panel, settle: np.ndarray, quality: Quality) -> list[StaleRun]:
@@ -53,5 +55,7 @@ def find_stale_runs(panel: Panel, settle: np.ndarray, quality: Quality) -> list[
                 continue
             if not (volume[first:end, contract] <= 0).mean() <= 1 - _LEAST_TRADED:
                 continue
-            runs.append(StaleRun(int(first), int(end) - 1, int(contract), float(np.nansum(common[first:end]))))
+            path = np.cumsum(np.nan_to_num(common[first:end]))
+            expected = tuple((settle[first, contract] + path).tolist())
+            runs.append(StaleRun(int(first), int(end) - 1, int(contract), float(path[-1]), expected))
     return runs

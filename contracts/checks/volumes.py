@@ -28,6 +28,8 @@ _PAST = 10
 _LEAST_PAST = 5
 _NEXT = 3
 _LEAST_VOLUME = 30.0
+# Where a contract hardly trades, its first block says nothing.
+_LEAST_USUAL = 5.0
 _MOST_OF_NEXT = 100.0
 _VOLUME_SCORE = 10.0
 _VOLUME_SCORE_ONLINE = 9.0
@@ -79,8 +81,8 @@ def _volumes(panel: Panel, contract: int, rows: _Rows) -> list[Finding]:
         past = past[~np.isnan(past)]
         if len(past) < _LEAST_PAST:
             continue
-        usual = max(float(np.median(past)), 1.0)
-        if volume[at] < _VOLUME_SCORE * usual:
+        usual = float(np.median(past))
+        if usual < _LEAST_USUAL or volume[at] < _VOLUME_SCORE * usual:
             continue
         score, is_online = _score_volume(panel, rows, at, past)
         threshold = _VOLUME_SCORE_ONLINE if is_online else _VOLUME_SCORE

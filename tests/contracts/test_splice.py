@@ -10,7 +10,7 @@ from contracts.repairs import DeclaredRepair, clean_panel
 from contracts.rolls import Held, lay_rolls
 from contracts.sessions import day_of
 from contracts.splice import Series, carry_forward, check_identities, splice
-from contracts.trend import impact_of_gap, impact_of_price, sign_score
+from contracts.trend import impact_of_gap, impact_of_prices, sign_score
 from tests.contracts.small import MARKET, make_bars_of, make_panel, weekdays
 
 CONTRACTS = ("NWHT-2024-03", "NWHT-2024-05")
@@ -113,8 +113,8 @@ def test_sign_score_adds_the_signs_of_the_look_backs() -> None:
 def test_impact_counts_the_sessions_whose_score_would_differ() -> None:
     """A steady rise; one price ten too high turns its own down-look-backs and the ones that start from it."""
     prices = np.arange(20.0)
-    assert impact_of_price(prices, 10, 10.0, (1, 2)) == 2
-    assert impact_of_price(prices, 10, 0.1, (1, 2)) == 0
+    assert impact_of_prices(prices, np.array([10]), np.array([10.0]), (1, 2)) == 2
+    assert impact_of_prices(prices, np.array([10]), np.array([0.1]), (1, 2)) == 0
     assert impact_of_gap(prices, 10, 5.0, (1, 2)) == 0
     assert impact_of_gap(prices, 10, -5.0, (1, 2)) == 2
 

@@ -3,7 +3,7 @@
 Belongs here: gathering and wording the outcome. Does not belong here: deciding it (`night.py`, `gates.py`).
 """
 
-from dataclasses import asdict, dataclass
+from dataclasses import asdict, dataclass, field
 from typing import Any
 
 from catalog.store import Manifest
@@ -39,6 +39,7 @@ class Summary:
     rows: int
     unclaimed: int
     late: tuple[str, ...]
+    cleaning: dict[str, dict[str, Any]] = field(default_factory=dict)
 
     @property
     def exit_code(self) -> int:
@@ -75,7 +76,27 @@ class Summary:
         if turned:
             told.append("  worst by the sessions whose trend-sign score it would have turned:")
         told += [f"    {finding.impact_sessions:4d}  {finding.message}" for finding in turned]
+        turned_markets = {market: _worst_plan(plans) for market, plans in self.cleaning.items()}
+        if any(one["turned"] for _, one in turned_markets.values()):
+            told.append("  without cleaning the trend-sign score of a first nearby would differ:")
+        for market, (plan, one) in turned_markets.items():
+            if one["turned"]:
+                told.append(f"    {market}: {_without_cleaning(plan, one)}")
         return told
+
+
+def _worst_plan(plans: dict[str, Any]) -> tuple[str, dict[str, Any]]:
+    """The plan that cleaning did most for, the first of several."""
+    name = max(plans, key=lambda plan: plans[plan]["turned"])
+    return name, plans[name]
+
+
+def _without_cleaning(plan: str, one: dict[str, Any]) -> str:
+    text = f"on {one['turned']:,} of {one['sessions']:,} sessions (plan {plan})"
+    worst = one["worst"]
+    if worst is None:
+        return text
+    return f"{text}, worst on {worst['session']}: {worst['reported']:+d} in place of {worst['clean']:+d}"
 
 
 def summarise(
@@ -99,4 +120,5 @@ def summarise(
         rows=sum(int(result["rows"]) for result in results),
         unclaimed=int(manifest.summary.get("unclaimed", 0)),
         late=tuple(manifest.summary.get("late", ())),
+        cleaning={code: v.facts["cleaning"] for code, v in manifest.markets.items() if v.facts.get("cleaning")},
     )

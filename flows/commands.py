@@ -29,7 +29,6 @@ _ROLL_COLUMNS = (
     "plan", "nearby", "effective_on", "outgoing", "incoming", "weight_after", "outgoing_settle",
     "incoming_settle", "gap", "ratio", "trigger", "decided_on", "measured_on", "impact_sessions",
 )  # fmt: skip
-_FINDING_COLUMNS = ("impact_sessions", "severity", "action", "waived_until", "message", "finding")
 
 
 @click.group(cls=Ropewalk, context_settings={"max_content_width": 100})
@@ -228,27 +227,28 @@ def findings(
 ) -> Exit:
     """Print the quality log, most harmful first.
 
-    The order is by impact: the number of sessions whose trend-sign score would differ had the reported price
-    stood.
+    Each finding says what, where, why it is believed, what was done and what it would have cost. The order is
+    by impact: the number of sessions whose trend-sign score would differ had the reported price stood. With a
+    MARKET the log ends with what its score would have been without any cleaning.
     """
     day = None if since is None else _read_day(since, "--since")
-    from catalog.listings import list_findings
+    from catalog.listings import list_findings, read_cleaning
     from catalog.places import Places
+    from flows.notes import word_cleaning, word_findings
 
     places = Places(asked.where().store)
     shown = limit if limit is not None or asked.as_json else _FINDINGS_SHOWN
     columns, rows, total = list_findings(places, market, day, kind, severity, shown)
+    cleaning = read_cleaning(places, market)
+    told = [dict(zip(columns, row, strict=True)) for row in rows]
     if asked.as_json:
-        say_json({"findings": [dict(zip(columns, row, strict=True)) for row in rows], "total": total})
+        say_json({"findings": told, "total": total, "cleaning": cleaning})
         return Exit.DONE
-    if not rows:
-        say(["no findings"])
-        return Exit.DONE
-    is_any_waived = any(row[columns.index("waived_until")] is not None for row in rows)
-    names = tuple(name for name in _FINDING_COLUMNS if is_any_waived or name != "waived_until")
-    say_table(names, _pick(columns, rows, names))
+    say(word_findings(told) or ["no findings"])
     if total > len(rows):
         say(["", f"the first {len(rows):,} of {total:,}; --limit {total} shows all"])
+    if market is not None and told:
+        say(["", *word_cleaning(market, cleaning.get(market, {}))])
     return Exit.DONE
 
 

@@ -29,7 +29,7 @@ _LEAST_FINISHED = 4
 def check_gaps(panel: Panel) -> list[Finding]:
     """Empty sessions, bars that contracts lack, contracts that are behind and contracts that ended early."""
     has_bar = panel.bar >= 0
-    empty = ~has_bar.any(axis=1)
+    empty: np.ndarray = np.logical_not(has_bar.any(axis=1))
     trade = _Trade(panel, has_bar, empty)
     return [
         *_empty_sessions(panel, empty),
@@ -138,7 +138,7 @@ def _late_contracts(panel: Panel, trade: _Trade) -> list[Finding]:
     """Contracts that still trade by the market's calendar and lack the newest sessions that others have."""
     newest = len(trade.has_bar) - 1
     found = []
-    for contract in np.flatnonzero((trade.last >= 0) & (trade.last < newest) & (panel.last_trade > newest)):
+    for contract in np.flatnonzero((trade.last >= 0) & (trade.last < newest) & (panel.last_trade > newest)).tolist():
         last = int(trade.last[contract])
         label, count = panel.contracts[contract], newest - last
         newest_day = day_of(panel.sessions[newest])
@@ -182,10 +182,10 @@ def _ended_early(panel: Panel, trade: _Trade) -> list[Finding]:
         found.append(
             Finding(
                 Kind.ENDED_EARLY, Severity.REVIEW, message, market, session=day, field="settle", score=float(usual),
-                threshold=float(_EARLY),
+                threshold=float(_EARLY + 1),
             )
         )  # fmt: skip
-    for contract, count in zip(finished, early, strict=True):
+    for contract, count in zip(finished.tolist(), early.tolist(), strict=True):
         if count <= usual + _EARLY:
             continue
         last = int(trade.last[contract])
@@ -199,7 +199,7 @@ def _ended_early(panel: Panel, trade: _Trade) -> list[Finding]:
         found.append(
             Finding(
                 Kind.ENDED_EARLY, Severity.REVIEW if is_regular else Severity.NOTE, message, market, label, day,
-                "settle", score=float(count), threshold=float(usual + _EARLY),
+                "settle", score=float(count), threshold=float(usual + _EARLY + 1),
             )
         )  # fmt: skip
     return found

@@ -60,7 +60,7 @@ def find_scale_changes(panel: Panel, settle: np.ndarray) -> list[ScaleChange]:
         alike = (np.abs(steps - power[:, None]) <= _MARKET_TOLERANCE).sum(axis=1)
     is_whole = (power != 0) & (alike >= _LEAST_SHARE * np.maximum(live, 1))
     back = -1
-    for row in np.flatnonzero(is_whole & (live == 1)):
+    for row in np.flatnonzero(is_whole & (live == 1)).tolist():
         # One contract is no market unless it stays.
         is_whole[row] = row > back and _stays(middle, row, int(power[row]))
         back = row if is_whole[row] else row + _LEAST_RUN

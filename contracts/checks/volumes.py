@@ -76,7 +76,7 @@ def _volumes(panel: Panel, contract: int, rows: _Rows) -> list[Finding]:
         # A cheap look first: nothing a few times the row before is a hundred times the rows before.
         far = (volume >= _LEAST_VOLUME) & (volume > 3.0 * np.fmax(before, 0.0))
     found = []
-    for at in np.flatnonzero(far):
+    for at in np.flatnonzero(far).tolist():
         past = volume[max(0, at - _PAST) : at]
         past = past[~np.isnan(past)]
         if len(past) < _LEAST_PAST:
@@ -124,7 +124,7 @@ def _interests(panel: Panel, contract: int, rows: _Rows) -> list[Finding]:
         far = np.flatnonzero(np.maximum(away, 1.0 / away) >= 2.0) + 1
     left = panel.last_trade[contract] - rows.session[known]
     found = []
-    for at in far[far >= _LEAST_PAST]:
+    for at in far[far >= _LEAST_PAST].tolist():
         value = float(interest[at])
         before = float(np.median(interest[at - 3 : at]))
         after = interest[at + 1 : at + 4]

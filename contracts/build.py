@@ -53,7 +53,7 @@ class Inputs:
     """All that decides a market's tables: the same inputs give the same bytes.
 
     `files` are in any order; `is_old` marks those with a newer version under the same path; `failures` are
-    of files that could not even be unpacked.
+    of files that could not even be unpacked. With `until`, bars of later sessions are left out.
     """
 
     market: Market
@@ -65,6 +65,7 @@ class Inputs:
     quality: Quality = field(default_factory=Quality)
     gates: Gates = field(default_factory=Gates)
     look_backs: tuple[int, ...] = (5, 10, 21, 42)
+    until: datetime.date | None = None
 
 
 @dataclass(frozen=True, eq=False)
@@ -95,6 +96,8 @@ def build_market(inputs: Inputs) -> Built:
     parsed = parse_rows(files, market)
     arrived = settle_arrivals(parsed, files, is_old)
     account_for_rows(files, is_old, parsed, arrived)
+    if inputs.until is not None:
+        arrived = arrived.until(day_number(inputs.until))
     if not len(arrived.bars.line):
         first = f"; {failures[0][2]}" if failures else ""
         raise ValueError(f"{market.code}: no row of its {len(inputs.files)} files can be read{first}")

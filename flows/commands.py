@@ -13,6 +13,7 @@ from typing import TYPE_CHECKING, Any
 import click
 
 from contracts.errors import UsageError
+from flows.changes import changes
 from flows.exits import Exit
 from flows.propose import propose
 from flows.render import complain, say, say_json, say_table
@@ -301,7 +302,9 @@ def verify(asked: Asked, deep: bool, repoint: bool, snapshot: str | None) -> Exi
         from catalog.declarations import load_desk
         from catalog.deep import rederive
 
-        problems += rederive(places, load_desk(where.desk), report.snapshot)
+        # An older snapshot, or a store named alone, is held against the desk that made it.
+        is_own = snapshot is None and (asked.desk is not None or asked.store is None)
+        problems += rederive(places, load_desk(where.desk) if is_own else None, report.snapshot)
     if asked.as_json:
         say_json(
             {
@@ -350,6 +353,7 @@ def sql(asked: Asked, query: str | None) -> Exit:
 
 
 main.add_command(propose)
+main.add_command(changes)
 
 if __name__ == "__main__":
     main()

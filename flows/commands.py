@@ -190,12 +190,13 @@ def trace(asked: Asked, market: str, session: str, plan: str | None, nearby: int
     day = _read_day(session, "SESSION")
     from catalog.places import Places
     from catalog.trace import trace_price
+    from catalog.trace_text import trace_lines
 
     found = trace_price(Places(asked.where().store), market, day, plan, nearby, snapshot)
     if asked.as_json:
         say_json(found.as_json())
     else:
-        say(found.lines())
+        say(trace_lines(found))
     return Exit.DONE
 
 

@@ -19,6 +19,7 @@ from flows.propose import propose
 from flows.render import complain, say, say_json, say_table
 from flows.settings import Where
 from flows.shell import Asked, Ropewalk, command, show_version
+from flows.study import study
 
 if TYPE_CHECKING:
     from catalog.summary import Summary
@@ -355,6 +356,7 @@ def sql(asked: Asked, query: str | None) -> Exit:
 
 main.add_command(propose)
 main.add_command(changes)
+main.add_command(study)
 
 if __name__ == "__main__":
     main()

@@ -37,7 +37,7 @@ def queries(store: Path) -> list[str]:
         "select * from session_of('2024-03-01') order by all limit 5",
         "select * from curve_of('NWHT', '2024-03-01') order by all",
         "select * from price_trace('NWHT', 'by_open_interest', 1, '2024-03-01')",
-        "select \"column\", unit from dictionary order by all",
+        'select "column", unit from dictionary order by all',
     ]
 
 

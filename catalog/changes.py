@@ -23,7 +23,7 @@ from catalog.changed_rows import Group, Row, groups_of, reasons_of, rows_of
 from catalog.declarations import Desk
 from catalog.kept_desk import changed_keys, desk_of, market_file
 from catalog.places import Places, table_path
-from catalog.store import Manifest, find_snapshot, read_manifest
+from catalog.store import Manifest, find_snapshot, origin_of, read_manifest
 from contracts.build import build_market
 from contracts.errors import RopewalkError, StoreUnsound, UsageError
 from contracts.tables import BARS, FILES, FINDINGS, MARKET_TABLES, REJECTS, ROLLS, SERIES, TERMS
@@ -171,12 +171,6 @@ class _Comparison:
             tables[table.name] = pq.read_table(pa.BufferReader(content))
         return tables
 
-    def _origin(self, manifest: Manifest, market: str) -> Manifest:
-        """The snapshot in which a market's tables were made: an older one where it is held back."""
-        while (good := manifest.markets[market].last_good_snapshot) is not None:
-            manifest = read_manifest(self.places, good)
-        return manifest
-
     def _desk(self, manifest: Manifest) -> Desk:
         if manifest.name not in self._desks:
             self._desks[manifest.name] = desk_of(self.places, manifest)
@@ -204,7 +198,7 @@ class _Comparison:
         if market not in self.old.markets or market not in self.new.markets:
             yield Step.DESK, None, (f"{market} {'added' if market in self.new.markets else 'removed'}",)
             return
-        old, new = self._origin(self.old, market), self._origin(self.new, market)
+        old, new = (origin_of(self.places, manifest, market) for manifest in (self.old, self.new))
         if table_path("series", market) not in old.files:
             yield Step.FIRST, None, ()
             return

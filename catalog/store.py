@@ -140,6 +140,13 @@ def find_snapshot(places: Places, asked: str) -> str:
     raise UsageError(f"{places.store}: seen {asked!r}; {expected}")
 
 
+def origin_of(places: Places, manifest: Manifest, market: str) -> Manifest:
+    """The snapshot in which a market's tables were made: an older one where it is held back."""
+    while (good := manifest.markets[market].last_good_snapshot) is not None:
+        manifest = read_manifest(places, good)
+    return manifest
+
+
 def next_sequence(places: Places) -> int:
     """The number the next snapshot will have."""
     return max((number for number, _ in _snapshots_there(places)), default=0) + 1

@@ -18,7 +18,7 @@ import pyarrow.parquet as pq
 from catalog.declarations import Desk
 from catalog.kept_desk import desk_of
 from catalog.places import Places, table_path
-from catalog.store import find_snapshot, read_manifest
+from catalog.store import find_snapshot, origin_of, read_manifest
 from catalog.traced_rows import RawRows, RawVersion, Rule, repair_rule, rules_behind
 from contracts.errors import StoreUnsound, UsageError
 from contracts.findings import Kind
@@ -201,9 +201,7 @@ class Tracer:
     @cached_property
     def _desk(self) -> Desk | None:
         """The desk that made the market's tables; None for snapshots from before desks were kept."""
-        made = self.manifest
-        while (good := made.markets[self.market].last_good_snapshot) is not None:
-            made = read_manifest(self.places, good)
+        made = origin_of(self.places, self.manifest, self.market)
         return desk_of(self.places, made) if made.desk_files else None
 
     @cached_property

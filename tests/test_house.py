@@ -12,7 +12,7 @@ ORDER = (
     "errors", "columns", "tables", "lined_up", "deliveries", "declared", "markets", "layouts", "notation", "sessions",
     "calendar_table", "unpack", "intake", "proposal_marks", "proposal_columns", "proposal_text",
     "proposal_paths", "proposal_trial", "proposal_choices", "proposal", "arrivals", "panel", "quality",
-    "findings", "checks", "repairs", "rolls", "checks.rolled", "splice", "trend", "compared", "written",
+    "findings", "checks", "repairs", "rolls", "checks.rolled", "splice", "trend", "compared", "evidence", "written",
     "build",
 )  # fmt: skip
 

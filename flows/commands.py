@@ -16,6 +16,7 @@ from contracts.errors import UsageError
 from flows.changes import changes
 from flows.exits import Exit
 from flows.propose import propose
+from flows.prune import prune
 from flows.render import complain, say, say_json, say_table
 from flows.rolls import rolls
 from flows.settings import Where
@@ -330,6 +331,7 @@ def sql(asked: Asked, query: str | None) -> Exit:
 
 
 main.add_command(propose)
+main.add_command(prune)
 main.add_command(rolls)
 main.add_command(changes)
 main.add_command(study)

@@ -14,6 +14,7 @@ import os
 import random
 import re
 import shutil
+import socket
 import subprocess
 import sys
 from collections import Counter
@@ -45,11 +46,12 @@ def fork(
     job: Callable[[], Any], watch: Callable[[int], "subprocess.Popen[str] | None"] | None = None
 ) -> tuple[int, Any]:
     """Run a job in a child, which begins once `watch` has attached to it; returns its end and its answer."""
-    reader, writer = os.pipe()
+    # The answer goes by a socket, since `write` may be the very call that fails.
+    reader, writer = socket.socketpair()
     ready, go = os.pipe()
     child = os.fork()
     if child == 0:
-        os.close(reader)
+        reader.close()
         os.close(go)
         os.read(ready, 1)
         try:
@@ -57,15 +59,15 @@ def fork(
         except BaseException as error:
             answer = {"error": type(error).__name__, "text": str(error), "expected": isinstance(error, RopewalkError)}
         try:
-            os.write(writer, json.dumps(answer).encode())
+            writer.sendall(json.dumps(answer).encode())
         finally:
             os._exit(0)
-    os.close(writer)
+    writer.close()
     os.close(ready)
     tracer = watch(child) if watch is not None else None
     os.write(go, b"g")
     os.close(go)
-    with open(reader, "rb") as file:
+    with reader, reader.makefile("rb") as file:
         content = file.read()
     ended = os.waitstatus_to_exitcode(os.waitpid(child, 0)[1])
     if tracer is not None:
@@ -206,9 +208,13 @@ def main() -> None:
     options = argparse.ArgumentParser()
     options.add_argument("folder", type=Path)
     options.add_argument("--every", type=int, default=1)
+    options.add_argument("--point", help="One point alone, such as 'write 1 error=EIO'.")
     asked = options.parse_args()
     crash = Crash(asked.folder)
     points = crash.points()
+    if asked.point:
+        name, number, failure = asked.point.split()
+        points = [(name, int(number), failure)]
     outcomes: Counter[str] = Counter()
     for name, number, failure in points[:: asked.every]:
         row = crash.run(name, number, failure)

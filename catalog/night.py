@@ -14,7 +14,7 @@ from typing import Any, Final
 
 import pyarrow as pa
 
-from catalog.archive import keep_texts, take_in
+from catalog.archive import keep_texts, register_digest, take_in
 from catalog.assignment import (
     Assignment,
     FileOfMarket,
@@ -263,6 +263,7 @@ def finish(night: Night, results: list[dict[str, Any]]) -> Summary:
     worst = sorted((row for result in results for row in result["worst"]), key=lambda row: -row["impact_sessions"])
     draft = Manifest(
         sequence=0, name="", parent=current_snapshot(places), files=files, desk=desk.digest,
+        arrivals=register_digest(places, night.intake),
         desk_files=keep_texts(places, {name: text.encode() for name, text in desk.texts.items()}), code=code_digest(),
         packages=package_versions(), intake=night.intake, markets=verdicts,
         summary={

@@ -86,6 +86,11 @@ class Places:
         return self.store / "catalog.duckdb"
 
     @property
+    def catalog_hashes(self) -> Path:
+        """SHA-256 of the catalog file by the snapshot it shows: of the newest, and of the one before it."""
+        return self.store / "catalog.json"
+
+    @property
     def lock(self) -> Path:
         """The file whose lock the one writer holds."""
         return self.store / "lock"

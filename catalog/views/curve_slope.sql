@@ -31,9 +31,10 @@ from (
         from (select * from $series where nearby = 1) as near
         left join (select * from $series where nearby = 2) as far
             on near.market = far.market and near.plan = far.plan and near.session = far.session
+        -- On near's market, the one a question names: on far's, every market's terms would be read.
         left join $terms as near_out on near.market = near_out.market and near.contract = near_out.contract
         left join $terms as near_in on near.market = near_in.market and near.incoming = near_in.contract
-        left join $terms as far_out on far.market = far_out.market and far.contract = far_out.contract
-        left join $terms as far_in on far.market = far_in.market and far.incoming = far_in.contract
+        left join $terms as far_out on near.market = far_out.market and far.contract = far_out.contract
+        left join $terms as far_in on near.market = far_in.market and far.incoming = far_in.contract
     )
 )

@@ -97,9 +97,7 @@ def test_slope_is_the_log_difference_a_year_and_roll_yield_what_the_farther_gain
 
 
 def test_a_dearer_nearer_contract_has_a_roll_yield_above_zero_and_a_slope_below(places: Places) -> None:
-    ((*_, roll_yield, slope, _),) = slope_of(
-        places, series_row(1, S[0], FEB, 110.0), series_row(2, S[0], MAR, 88.0)
-    )
+    ((*_, roll_yield, slope, _),) = slope_of(places, series_row(1, S[0], FEB, 110.0), series_row(2, S[0], MAR, 88.0))
     assert roll_yield == 0.25
     assert slope == pytest.approx(-math.log(1.25) * 365 / 40)
 
@@ -181,9 +179,7 @@ def maturities_of(places: Places, *bars: dict[str, Any]) -> Rows:
 
 def test_price_lies_on_the_line_between_the_contracts_around_the_day(places: Places) -> None:
     """30 days ahead is February's own last trading session, 60 three quarters on to March, 90 two thirds to May."""
-    rows = maturities_of(
-        places, bar_row(S[0], FEB, 100.0), bar_row(S[0], MAR, 110.0), bar_row(S[0], MAY, 116.0)
-    )
+    rows = maturities_of(places, bar_row(S[0], FEB, 100.0), bar_row(S[0], MAR, 110.0), bar_row(S[0], MAY, 116.0))
     assert rows == [
         (30, FEB, FEB, 100.0, 100.0, 0.0, 100.0),
         (60, FEB, MAR, 100.0, 110.0, 0.75, 107.5),
@@ -390,7 +386,11 @@ def test_dictionary_lists_each_derived_column_with_its_type_and_formula(places: 
         ).fetchall()
         assert [(name, unit, meaning.partition(",")[0]) for name, unit, meaning in formulas] == [
             ("roll_yield", "1", "near_settle / far_settle - 1"),
-            ("annualised_slope", "1 per year of 365 calendar days", "ln(far_settle / near_settle) x 365 / days_between"),
+            (
+                "annualised_slope",
+                "1 per year of 365 calendar days",
+                "ln(far_settle / near_settle) x 365 / days_between",
+            ),
         ]
 
 

@@ -126,7 +126,7 @@ def test_where_nearby_2_is_not_held_the_session_stands_with_nulls(places: Places
         series_row(1, S[0], FEB, 100.0),
         series_row(1, S[1], FEB, 100.0),
         series_row(2, S[1], MAR, 125.0),
-        series_row(1, S[2], FEB, 100.0, plan="lone"),
+        series_row(1, S[1], FEB, 100.0, plan="lone"),
     )
     assert rows == [
         (FEB, None, None, None, None, "missing"),

@@ -140,7 +140,8 @@ def how_to_open(places: Places) -> str:
             "Tables: bars, series, rolls, findings, rejects, files, coverage, terms, runs; dictionary says",
             "what their columns mean, snapshot which snapshot it is.",
             f"Views derived from them: {derived}.",
-            "Macros: series_of(market), session_of(day), curve_of(market, day), and each derived view of one market",
-            f"by its name and _of, such as from {DERIVED[0].name}_of('...').",
+            "Macros: series_of(market), session_of(day), curve_of(market, day),",
+            "price_trace(market, plan, nearby, day), and each derived view of one market by its name and _of, such as",
+            f"from {DERIVED[0].name}_of('...').",
         ]
     )

@@ -210,5 +210,5 @@ def test_how_to_open_it_names_every_view_and_macro_that_is_there(places: Places,
         names = {row[0] for row in macros.fetchall() if row[0].removesuffix("_of") not in {view[0] for view in views}}
     assert len(views) == 14
     assert [view for (view,) in views if view not in told] == []
-    assert names == {"session_of", "curve_of"}
+    assert names == {"session_of", "curve_of", "price_trace"}
     assert all(name in told for name in (*names, "series_of", "curve_slope_of('...')"))

@@ -95,6 +95,11 @@ class Places:
         """The log of runs, one JSON object a line, also of those that published nothing."""
         return self.store / "runs.jsonl"
 
+    @property
+    def names(self) -> Path:
+        """Names that people gave snapshots, one JSON object."""
+        return self.store / "names.json"
+
     def archived(self, sha: str) -> Path:
         """Where the archive keeps the raw bytes of this SHA-256."""
         return self.archive / sha[:2] / f"{sha}.zst"

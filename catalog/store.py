@@ -132,12 +132,32 @@ def current_snapshot(places: Places) -> str | None:
 
 
 def find_snapshot(places: Places, asked: str) -> str:
-    """Name of the snapshot with this name or number; raises UsageError where there is none."""
+    """Name of the snapshot with this name, number or given name; raises UsageError where there is none."""
+    given = named_snapshots(places)
     for number, name in _snapshots_there(places):
-        if asked == name or (asked.isdecimal() and int(asked) == number):
+        if asked == name or (asked.isdecimal() and int(asked) == number) or given.get(asked) == name:
             return name
-    expected = f"expected a snapshot that is there, by name or number (newest: {_newest_names(places)})"
+    names = f"; named: {', '.join(sorted(given))}" if given else ""
+    expected = f"expected a snapshot that is there, by name or number (newest: {_newest_names(places)}{names})"
     raise UsageError(f"{places.store}: seen {asked!r}; {expected}")
+
+
+def list_snapshots(places: Places) -> list[str]:
+    """Names of all snapshots, oldest first."""
+    return [name for _, name in _snapshots_there(places)]
+
+
+def named_snapshots(places: Places) -> dict[str, str]:
+    """Snapshots by the names people gave them; raises StoreUnsound where they cannot be read."""
+    try:
+        names = json.loads(places.names.read_bytes())
+    except FileNotFoundError:
+        return {}
+    except (OSError, ValueError) as error:
+        raise StoreUnsound(f"{places.names}: cannot be read: {error}; expected names of snapshots as JSON") from error
+    if not isinstance(names, dict) or not all(isinstance(value, str) for value in names.values()):
+        raise StoreUnsound(f"{places.names}: expected one JSON object of names and snapshots")
+    return names
 
 
 def origin_of(places: Places, manifest: Manifest, market: str) -> Manifest:

@@ -15,6 +15,7 @@ RUNS_SQL = frozenset(
 ALLOWED = {
     ("catalog/catalog_file.py", "build_catalog"): "attaches the new catalog by its quoted path",
     ("catalog/catalog_file.py", "lay_views"): "views and macros from the project's own .sql files, paths quoted",
+    ("catalog/catalog_file.py", "_lay_derived"): "the same of the views derived from them",
     ("catalog/query.py", "open_catalog"): "attaches the catalog and sets the one folder it may read, paths quoted",
     ("catalog/query.py", "run_query"): "runs the query a person typed, first explained within query()",
     ("flows/commands.py", "sql"): "hands the query a person typed to run_query",

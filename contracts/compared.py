@@ -11,9 +11,10 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from contracts.deliveries import delivery_of
 from contracts.panel import Panel
 from contracts.rolls import BACKSTOP, FORCED, NEVER, Held, RollStep
-from contracts.sessions import day_of
+from contracts.sessions import day_number, day_of, first_notice_day
 from contracts.splice import Series
 from contracts.trend import sign_score
 
@@ -35,7 +36,8 @@ class Gaps:
 class Crossing:
     """Sessions from the liquidity crossing to the decision: median, least and most; negative is decided before.
 
-    `rolls` are those with a crossing, `never` those whose incoming contract never overtook for good.
+    `rolls` are those with a crossing, `never` those whose incoming contract never overtook for good up to the
+    outgoing's last trade; where that is after the data's end, a roll without a crossing counts as neither.
     """
 
     rolls: int
@@ -90,7 +92,7 @@ def figures_of(panel: Panel, plan: str, held: Held, series: Series) -> PlanFigur
     rows = np.arange(start, len(panel.sessions))
     main = main_contract(held)[start:]
     volume, interest = panel.field("volume"), known_interest(panel)
-    rolls = whole_rolls(held)
+    rolls = [roll for roll in whole_rolls(held) if roll[-1].weight_after >= 1.0]
     years = max((int(panel.sessions[-1]) - int(panel.sessions[start])) / _DAYS_A_YEAR, 1 / _DAYS_A_YEAR)
     has_notice = bool(panel.market.first_notice)
     return PlanFigures(
@@ -103,7 +105,7 @@ def figures_of(panel: Panel, plan: str, held: Held, series: Series) -> PlanFigur
         most_active_by_volume=_share_most_active(volume, rows, main),
         most_active_by_open_interest=_share_most_active(interest, rows, main),
         volume_held=_share_held(volume, held),
-        after_first_notice=int((rows >= panel.first_notice[main]).sum()) if has_notice else None,
+        after_first_notice=int((panel.sessions[rows] >= _notice_days(panel)[main]).sum()) if has_notice else None,
         in_last_week=int((rows > panel.last_trade[main] - LAST_WEEK).sum()),
         gaps=_gaps(panel, rolls),
         after_volume_crossing=_crossings(panel, volume, rolls),
@@ -114,6 +116,12 @@ def figures_of(panel: Panel, plan: str, held: Held, series: Series) -> PlanFigur
         measured_stale=sum(any(step.is_stale for step in roll) for roll in rolls),
         without_price=int((series.status >= 2).sum()),
     )
+
+
+def _notice_days(panel: Panel) -> np.ndarray:
+    """First notice of each contract as a day number, (N,): the day itself, which may be no session."""
+    days = [first_notice_day(panel.market, delivery_of(name)) for name in panel.contracts]
+    return np.array([day_number(day) if day is not None else np.iinfo(np.int64).max for day in days])
 
 
 def differences(plans: list[tuple[str, Held, Series]], look_backs: tuple[int, ...]) -> list[Difference]:
@@ -176,15 +184,18 @@ def crossing(values: np.ndarray, outgoing: int, incoming: int, until: int) -> in
 
 
 def _crossings(panel: Panel, values: np.ndarray, rolls: list[list[RollStep]]) -> Crossing:
-    after = []
+    after, never = [], 0
     for roll in rolls:
         decision = roll[0].decision
-        crossed = crossing(values, decision.outgoing, roll[-1].incoming, int(panel.last_trade[decision.outgoing]))
+        last = int(panel.last_trade[decision.outgoing])
+        crossed = crossing(values, decision.outgoing, roll[-1].incoming, last)
         if crossed != NEVER:
             after.append(decision.decided - crossed)
+        elif last < len(values):
+            never += 1
     if not after:
-        return Crossing(0, len(rolls), None, None, None)
-    return Crossing(len(after), len(rolls) - len(after), float(np.median(after)), min(after), max(after))
+        return Crossing(0, never, None, None, None)
+    return Crossing(len(after), never, float(np.median(after)), min(after), max(after))
 
 
 def _share_most_active(values: np.ndarray, rows: np.ndarray, main: np.ndarray) -> float | None:

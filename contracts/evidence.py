@@ -57,8 +57,8 @@ class Evidence:
 
     compared: the sessions the trigger looked at up to the decision, and the one before them, oldest first;
     free_since: first session at whose close this roll could have been decided; sessions_to_deadline: from the
-    decision, negative where it has passed; measuring: per step the sessions from the planned one to the one
-    that was measured.
+    decision, negative where it has passed; measuring: per step the sessions from the planned one on which it
+    had to wait, and last the one that was measured (an earlier one where it is stale).
     """
 
     plan: str
@@ -142,9 +142,10 @@ def _all_measuring(panel: Panel, clean: Clean, steps: tuple[RollStep, ...]) -> t
 def _measuring(panel: Panel, clean: Clean, planned: int, step: RollStep) -> tuple[Settles, ...]:
     if step.measured == NEVER:
         return ()
-    first = min(planned, step.measured) if step.is_stale else planned
-    sessions = [*range(first, step.measured + 1)][-_MOST_WAITS:]
     outgoing, incoming = step.decision.outgoing, step.incoming
+    # A stale roll was first tried up to the outgoing's last session, with the contract it was decided for.
+    until = int(panel.last_trade[outgoing]) + 1 if step.is_stale else step.measured
+    sessions = [*[*range(planned, until)][-_MOST_WAITS:], step.measured]
     return tuple(
         Settles(
             _day(panel, session), _number(clean.settle[session, outgoing]), _number(clean.settle[session, incoming]),

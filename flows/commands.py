@@ -208,7 +208,7 @@ def _read_years(text: str | None, has_market: bool) -> tuple[int, int]:
 @click.argument("session")
 @click.option("--plan", metavar="NAME", help="Roll plan.  [default: the first the market declares]")
 @click.option("--nearby", type=click.IntRange(min=1), default=1, show_default=True, metavar="N", help="Which nearby.")
-@click.option("--snapshot", metavar="NAME", help="Snapshot.  [default: the newest]")
+@click.option("--snapshot", metavar="NAME", help="Snapshot, by name or number.  [default: the newest]")
 def trace(asked: Asked, market: str, session: str, plan: str | None, nearby: int, snapshot: str | None) -> Exit:
     """Tell where one published price comes from.
 
@@ -289,7 +289,9 @@ def _pick(columns: list[str], rows: list[tuple[Any, ...]], wanted: tuple[str, ..
 @command(main, "verify", "ropewalk verify --deep")
 @click.option("--deep", is_flag=True, help="Also derive every published number again from archive, desk and code.")
 @click.option("--repoint", is_flag=True, help="First make the catalog again, for a store that was moved or copied.")
-@click.option("--snapshot", metavar="NAME", help="Snapshot.  [default: the newest]")
+@click.option(
+    "--snapshot", "--from", metavar="NAME", help="Snapshot, by name, number or given name.  [default: the newest]"
+)
 def verify(asked: Asked, deep: bool, repoint: bool, snapshot: str | None) -> Exit:
     """Check what is published, to the last byte.
 
@@ -297,11 +299,13 @@ def verify(asked: Asked, deep: bool, repoint: bool, snapshot: str | None) -> Exi
     """
     from catalog import verify as checks
     from catalog.places import Places
+    from catalog.store import find_snapshot
 
     where = asked.where()
     places = Places(where.store)
     if repoint:
         checks.repoint(places)
+    snapshot = None if snapshot is None else find_snapshot(places, snapshot)
     report = checks.verify_store(places, snapshot)
     problems = list(report.problems)
     if deep and report.snapshot is not None:
@@ -333,13 +337,15 @@ def verify(asked: Asked, deep: bool, repoint: bool, snapshot: str | None) -> Exi
 
 @command(main, "sql", 'ropewalk sql "select market, plan, count(*) from series group by all order by all"')
 @click.argument("query", required=False)
-def sql(asked: Asked, query: str | None) -> Exit:
+@click.option("--snapshot", metavar="NAME", help="Ask this one, by name, number or given name.  [default: the newest]")
+def sql(asked: Asked, query: str | None, snapshot: str | None) -> Exit:
     """Run a QUERY on the catalog, or say how to open it.
 
     A query only reads. With none, says how any client opens the catalog.
     """
     from catalog.places import Places
     from catalog.query import how_to_open, open_catalog, run_query
+    from catalog.store import find_snapshot
 
     places = Places(asked.where().store)
     if query is None:
@@ -349,7 +355,8 @@ def sql(asked: Asked, query: str | None) -> Exit:
         else:
             say(told.split("\n"))
         return Exit.DONE
-    with open_catalog(places) as connection:
+    chosen = None if snapshot is None else find_snapshot(places, snapshot)
+    with open_catalog(places, chosen) as connection:
         columns, rows = run_query(connection, query)
     if asked.as_json:
         say_json({"columns": columns, "rows": rows})

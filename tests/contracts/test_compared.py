@@ -112,3 +112,31 @@ def test_a_gap_that_one_plan_measures_otherwise_turns_its_score() -> None:
     falling = replace(series, back_adjusted=series.back_adjusted[::-1].copy())
     (found,) = differences([("up", held, series), ("down", held, falling)], (1,))
     assert (found.scored, found.score_differs, found.score_opposed) == (9, 9, 9)
+
+
+def test_a_notice_day_that_is_no_session_counts_from_the_next_one() -> None:
+    """9 March 2024 is a Saturday: no session of the ten, the last of which is Friday 8, is on or after it."""
+    market = make_market('[first_notice]\nrule = "FREQ=MONTHLY;BYMONTHDAY=9"')
+    settle = np.array([[m, m + 2.5] for m in MARCH])
+    panel = make_panel(market, CONTRACTS, DAYS, settle, volume=np.ones((10, 2)))
+    _, held, series = lay(panel, trigger="calendar")
+    assert figures_of(panel, "held", held, series).after_first_notice == 0
+
+
+def test_a_roll_half_done_at_the_end_of_the_data_is_none_yet() -> None:
+    panel = market_of_two()
+    _, held, series = lay(panel, trigger="volume", steps=20)
+    assert held.steps and held.steps[-1].weight_after < 1.0
+    figures = figures_of(panel, "slow", held, series)
+    assert (figures.rolls, figures.gaps) == (0, None)
+
+
+def test_a_crossing_that_may_still_come_is_not_called_never() -> None:
+    """The incoming is never above within the ten sessions, and the outgoing trades on until session 13."""
+    settle = np.array([[m, m + 2.5] for m in MARCH])
+    volume = np.array([[100.0, 10.0]] * 10)
+    panel = make_panel(make_market(), CONTRACTS, DAYS, settle, volume=volume, open_interest=volume)
+    _, held, series = lay(panel, trigger="calendar", backstop=8)
+    figures = figures_of(panel, "early", held, series)
+    assert figures.rolls == 1
+    assert figures.after_volume_crossing == Crossing(0, 0, None, None, None)

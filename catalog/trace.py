@@ -32,7 +32,8 @@ class Leg:
     """One held contract on the session: its weight, its clean settle, and the raw row it comes from.
 
     `session` is the session of the settle, earlier than the one asked for where it is carried; `rejected` then
-    holds the rows of its file that could not be read since.
+    holds the rows of its file that could not be read since. `scale` is the factor from the prices in the file to the
+    market's present scale, 1 where that never changed.
     """
 
     contract: str
@@ -47,6 +48,7 @@ class Leg:
     text: str | None
     findings: tuple[str, ...]
     rejected: tuple[str, ...] = ()
+    scale: float = 1.0
 
 
 @dataclass(frozen=True)
@@ -166,6 +168,9 @@ def _leg_lines(leg: Leg) -> list[str]:
     if leg.session is None:
         return [f"{leg.contract}: no bar"]
     told = [f"{leg.contract} on {leg.session}: reported {_say(leg.reported)}, used {_say(leg.settle)} ({leg.status})"]
+    if leg.scale != 1.0 and leg.reported is not None:
+        on_scale = _say(leg.reported * leg.scale)
+        told.append(f"  on the market's present scale: {_say(leg.reported)} x {_say(leg.scale)} = {on_scale}")
     told += [f"  {message}" for message in leg.findings]
     if leg.path is not None:
         told += [f"  {leg.path}:{leg.line}", f"  SHA-256 {leg.file}", f"  {leg.text}"]
@@ -288,7 +293,20 @@ def _leg(
     return Leg(
         contract, weight, row["clean_settle"], row["session"], row["settle"], status, path, row["file"], row["line"],
         text, tuple(about), _rejected_since(bars, rejects, row, path) if row["session"] < session else (),
+        _scale_of(bars, row["session"]),
     )  # fmt: skip
+
+
+def _scale_of(bars: pa.Table, session: datetime.date) -> float:
+    """Present price over the price in the file, by a bar of the session that stands as reported."""
+    same_day = bars.filter(
+        (pc.field("session") == pa.scalar(session, pa.date32()))
+        & (pc.field("status") == "reported")
+        & (pc.field("settle") != 0.0)
+    )
+    if not same_day.num_rows:
+        return 1.0
+    return round(float(same_day["clean_settle"][0].as_py()) / float(same_day["settle"][0].as_py()), 12)
 
 
 def _rejected_since(bars: pa.Table, rejects: pa.Table, row: dict[str, Any], path: str | None) -> tuple[str, ...]:

@@ -10,16 +10,28 @@ import pyarrow.parquet as pq
 from catalog.places import Places
 from catalog.store import current_snapshot
 from catalog.summary import Summary
+from contracts.markets import Market
 from tests.integration.tiny import run_night
+from tests.reference.agree import row_differences
+from tests.reference.plain_rolls import lay_plain
+from tests.reference.sample_markets import (
+    NOT_COMPARED,
+    expected_ledger,
+    expected_series,
+    read_market,
+    read_plan,
+    read_rows,
+)
 
 Row = dict[str, Any]
 # Session, open, high, low, settle, volume, open interest, as they stand in a file; "" is no value.
 RawRow = tuple[str, ...]
 
+LOOK_BACKS = (2, 3)
 DESK = """
 raw = "raw"
 store = "published"
-look_backs = [2, 3]
+look_backs = {look_backs}
 [gates]
 carried_share = {carried_share}
 silent_sessions = 10
@@ -48,7 +60,7 @@ def write_one_market(
     desk = folder / "desk"
     for name in ("markets", "layouts", "raw"):
         (desk / name).mkdir(parents=True)
-    (desk / "desk.toml").write_text(DESK.format(carried_share=carried_share))
+    (desk / "desk.toml").write_text(DESK.format(carried_share=carried_share, look_backs=list(LOOK_BACKS)))
     (desk / "layouts" / "plain.toml").write_text(LAYOUT)
     code = market.split('"', 2)[1]
     (desk / "markets" / f"{code.lower()}.toml").write_text(market)
@@ -101,3 +113,24 @@ def business_days(first: str, count: int) -> list[datetime.date]:
     start = datetime.date.fromisoformat(first)
     days = (start + datetime.timedelta(days=number) for number in range(2 * count + 7))
     return [day for day in days if day.weekday() < 5][:count]
+
+
+def differences_from_plain(published: Published, declared: Market) -> list[str]:
+    """Where the published ledgers and series of every plan differ from the plain telling of the published bars."""
+    snapshot, code = published.snapshot, published.code
+    market, days = read_market(snapshot, declared)
+    terms = read_rows(snapshot, "terms", code)
+    found: list[str] = []
+    for name in declared.plans:
+        for nearby, chain in lay_plain(market, read_plan(declared, name, days)).chains.items():
+            label = f"plan {name}, nearby {nearby}"
+            expected = expected_series(market, chain)
+            ledger = expected_ledger(market, chain, terms, expected, LOOK_BACKS)
+            series = list(published.series(name, nearby).values())
+            found += row_differences(ledger, _compared(published.rolls(name, nearby)), f"{label}, ledger")
+            found += row_differences(expected, _compared(series), f"{label}, series")
+    return found
+
+
+def _compared(rows: list[Row]) -> list[Row]:
+    return [{name: value for name, value in row.items() if name not in NOT_COMPARED} for row in rows]

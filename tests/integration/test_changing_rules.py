@@ -236,13 +236,16 @@ def test_plan_with_a_dropped_month_goes_on_to_the_next_of_its_months(metal: Publ
 
 
 def test_plan_whose_next_contract_is_listed_too_late_says_at_each_break_that_it_begins_anew(metal: Published) -> None:
-    """March is listed in May of the year before, when the March before has ended: no session has both settles."""
+    """March is listed in May of the year before, when the March before has ended: no session has both settles.
+
+    Its first bar makes it known, and it is held from the session after that.
+    """
     rows = metal.rolls("one_a_year")
     assert [(row["outgoing"][6:], row["incoming"][6:], str(row["effective_on"])) for row in rows] == [
-        ("2017-03", "2018-03", "2017-05-24"),
-        ("2018-03", "2019-03", "2018-05-24"),
-        ("2019-03", "2020-03", "2019-05-27"),
-        ("2020-03", "2021-03", "2020-05-25"),
+        ("2017-03", "2018-03", "2017-05-25"),
+        ("2018-03", "2019-03", "2018-05-25"),
+        ("2019-03", "2020-03", "2019-05-28"),
+        ("2020-03", "2021-03", "2020-05-26"),
     ]
     assert {(row["measured_on"], row["gap"], row["ratio"]) for row in rows} == {(None, None, None)}
     found = metal.findings("roll_unmeasured")
@@ -250,5 +253,5 @@ def test_plan_whose_next_contract_is_listed_too_late_says_at_each_break_that_it_
         ("2017-03", "block"), ("2018-03", "block"), ("2019-03", "block"), ("2020-03", "block"),
     }  # fmt: skip
     series = metal.series("one_a_year")
-    assert series["2020-05-22"]["back_adjusted"] is None
-    assert series["2020-05-25"]["back_adjusted"] == series["2020-05-25"]["settle"]
+    assert series["2020-05-25"]["back_adjusted"] is None
+    assert series["2020-05-26"]["back_adjusted"] == series["2020-05-26"]["settle"]

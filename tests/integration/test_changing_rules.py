@@ -4,7 +4,6 @@ Each ledger and series is held against the plain telling of tests/reference, and
 """
 
 import datetime
-from pathlib import Path
 
 import pytest
 

@@ -6,7 +6,7 @@ sum w(t-1) P(t) / sum w(t-1) P(t-1) - 1, compounded from 100 on day 4 (formula f
 invented, values computed).
 """
 
-from pathlib import Path
+import itertools
 
 import pytest
 
@@ -76,7 +76,7 @@ def test_weights_held_through_a_session_are_those_after_the_close_before_it(publ
     held = {
         day: 1.0 - row["incoming_weight"] if row["contract"] == "FIFTHS-2024-02" else 0.0 for day, row in series.items()
     }
-    for after_close, session in zip(DAYS[3:], DAYS[4:], strict=False):
+    for after_close, session in itertools.pairwise(DAYS[3:]):
         assert held[session] == pytest.approx(NEAR_WEIGHT_AFTER_CLOSE[after_close], abs=1e-12)
     assert [held[day] for day in DAYS[:5]] == [1.0] * 5
     incoming = {day: row["incoming"] for day, row in series.items()}

@@ -7,6 +7,7 @@ on the 17th (derived: -37.63 + 55.90); June 2020 settled at 25.03 (derived: 20.4
 The sessions before the 17th and after the 21st are invented, as are all other prices of later contracts.
 """
 
+import itertools
 from pathlib import Path
 
 import pytest
@@ -151,7 +152,7 @@ def test_back_adjusted_stands_and_its_differences_are_the_held_positions(publish
     }  # fmt: skip
     days = list(series)
     assert days == DAYS
-    for before, day in zip(days, days[1:], strict=False):
+    for before, day in itertools.pairwise(days):
         difference = series[day]["back_adjusted"] - series[before]["back_adjusted"]
         assert difference == pytest.approx(held[day], abs=1e-12)
         assert series[day]["change"] == pytest.approx(held[day], abs=1e-12)

@@ -4,15 +4,16 @@ Belongs here: cutting texts by session, comparing what was already decided. Does
 """
 
 import datetime
-from collections.abc import Iterator
 from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
+import pyarrow as pa
+import pyarrow.compute as pc
 import pytest
 
 import contracts.build
-from contracts.build import Built, Inputs, Laid, build_market
+from contracts.build import Inputs, Laid, build_market
 from contracts.intake import RawFile, parse_rows, split_file
 from contracts.panel import Panel
 from contracts.repairs import Clean
@@ -34,6 +35,7 @@ SERIES = (
 )  # fmt: skip
 # What a later day may not change of a bar; its line moves where rows after it stood before it in the file.
 REPORTED = ("open", "high", "low", "settle", "volume", "open_interest", "file")
+CLEAN = ("clean_settle", "status")
 # All of a ledger row but the impact, which counts sessions after it.
 LEDGER = (
     "measured_on", "effective_on", "incoming", "weight_before", "weight_after", "outgoing_settle", "incoming_settle",
@@ -105,12 +107,10 @@ def _lines(raw: RawFile, line: np.ndarray, session: np.ndarray) -> Lines:
 
 @dataclass(frozen=True, eq=False)
 class Known:
-    """What a build says: its tables by key, and every decision, whether or not it took effect."""
+    """What a build says: the sessions with any settle, its tables, and every decision, in effect or not."""
 
     sessions: list[datetime.date]
-    bars: dict[tuple[str, datetime.date], Row]
-    series: dict[tuple[str, int, datetime.date], Row]
-    rolls: dict[tuple[Any, ...], Row]
+    tables: dict[str, pa.Table]
     decisions: dict[Chain, list[Decided]]
 
 
@@ -130,22 +130,11 @@ def build_known(inputs: Inputs) -> Known:
 
     with pytest.MonkeyPatch.context() as patch:
         patch.setattr(contracts.build, "lay_plans", remember)
-        built = build_market(inputs)
-    return Known(
-        _priced_sessions(built),
-        {(row["contract"], row["session"]): row for row in built.tables["bars"].to_pylist()},
-        {(row["plan"], row["nearby"], row["session"]): row for row in built.tables["series"].to_pylist()},
-        {
-            (row["plan"], row["nearby"], row["decided_on"], row["outgoing"], row["step"]): row
-            for row in built.tables["rolls"].to_pylist()
-        },
-        decisions,
-    )
-
-
-def _priced_sessions(built: Built) -> list[datetime.date]:
-    bars = built.tables["bars"].select(["session", "status", "settle"]).to_pylist()
-    return sorted({row["session"] for row in bars if row["status"] != "not a session" and row["settle"] is not None})
+        tables = build_market(inputs).tables
+    bars = tables["bars"]
+    priced = bars.filter((pc.field("status") != "not a session") & pc.field("settle").is_valid())
+    sessions = sorted(priced["session"].unique().to_pylist())
+    return Known(sessions, {name: tables[name] for name in ("bars", "series", "rolls")}, decisions)
 
 
 @dataclass(frozen=True)
@@ -170,65 +159,67 @@ def compare_known(code: str, day: datetime.date, then: Known, now: Known) -> Com
     """Hold what was known on a day against what the whole files say of the time up to it."""
     end = then.sessions[-1]
     settled = then.sessions[-1 - WEIGHED_FOR] if len(then.sessions) > WEIGHED_FOR else datetime.date.min
-    wrong = [f"{code} cut at {day}: a bar of {key[1]}" for key in then.bars if key[1] > day]
+    wrong: list[str] = []
+    newest = pc.max(then.tables["bars"]["session"]).as_py()
+    if newest > day:
+        wrong.append(f"{code} cut at {day}: a bar of {newest}")
     open_cells: set[tuple[str, datetime.date]] = set()
-    for key, one, other in _pairs(then.bars, now.bars, end, 1):
-        where = f"{code} cut at {day}: bar {key[0]} {key[1]}"
-        if one is None or other is None:
-            wrong.append(f"{where} is in one build only")
-            continue
-        different = _different(one, other, REPORTED)
-        wrong += [f"{where}: {different}"] if different else []
-        if (one["clean_settle"], one["status"]) != (other["clean_settle"], other["status"]):
+    rows, changed = _changed(then, now, "bars", ("contract", "session"), (*REPORTED, *CLEAN), "session", end)
+    for key, one, other in changed:
+        reported = _different(one, other, REPORTED)
+        cleaned = _different(one, other, CLEAN)
+        if not reported:
             open_cells.add(key)
-            if key[1] <= settled:
-                stood = f"{one['clean_settle']} ({one['status']}), later {other['clean_settle']} ({other['status']})"
-                wrong.append(f"{where}: {stood}")
-    counted = open_rows = 0
+        if reported or key[1] <= settled:
+            wrong.append(f"{code} cut at {day}: bar {key[0]} {key[1]}: {reported or cleaned}")
 
-    def is_open(contracts: set[Any], since: datetime.date, until: datetime.date) -> bool:
-        return any(contract in contracts and since <= session <= until for contract, session in open_cells)
+    def is_open(contracts: set[Any], until: datetime.date) -> bool:
+        return any(contract in contracts and settled <= session <= until for contract, session in open_cells)
 
-    for key, one, other in _pairs(then.series, now.series, end, 2):
-        counted += 1
-        different = _different(one, other, SERIES)
-        if different:
-            held = {row[name] for row in (one, other) if row for name in ("contract", "incoming")}
-            if is_open(held, settled, key[2]):
+    open_rows = 0
+    for table, names, keys, columns, date in (
+        ("series", ("contract", "incoming"), ("plan", "nearby", "session"), SERIES, "session"),
+        (
+            "rolls",
+            ("outgoing", "incoming"),
+            ("plan", "nearby", "decided_on", "outgoing", "step"),
+            LEDGER,
+            "effective_on",
+        ),
+    ):
+        count, changed = _changed(then, now, table, keys, columns, date, end)
+        rows += count
+        for key, one, other in changed:
+            both = [row for row in (one, other) if row is not None]
+            if is_open({row[name] for row in both for name in names}, max(row[date] for row in both)):
                 open_rows += 1
             else:
-                wrong.append(f"{code} cut at {day}: series {key}: {different}")
-    for key, one, other in _pairs(then.rolls, now.rolls, end, 2):
-        if all(row is None or row["effective_on"] > end for row in (one, other)):
-            continue
-        counted += 1
-        one, other = (None if row is None or row["effective_on"] > end else row for row in (one, other))
-        different = _different(one, other, LEDGER)
-        if different:
-            pair = {row[name] for row in (one, other) if row for name in ("outgoing", "incoming")}
-            if is_open(pair, settled, end):
-                open_rows += 1
-            else:
-                wrong.append(f"{code} cut at {day}: ledger {key}: {different}")
+                wrong.append(f"{code} cut at {day}: {table} {key}: {_different(one, other, columns)}")
     for chain, later in now.decisions.items():
         ours, theirs = (sorted(d for d in some if d[0] <= end) for some in (then.decisions.get(chain, []), later))
-        counted += len(ours)
-        for decision in set(ours) ^ set(theirs):
-            if is_open(set(decision[1:3]), settled, end):
+        rows += len(ours)
+        for decision in sorted(set(ours) ^ set(theirs)):
+            if is_open(set(decision[1:3]), end):
                 open_rows += 1
             else:
                 known = "only then" if decision in ours else "only later"
                 wrong.append(f"{code} cut at {day}: plan {chain}: {decision} is decided {known}")
-    return Compared(wrong, counted, len(open_cells), open_rows)
+    return Compared(wrong, rows, len(open_cells), open_rows)
 
 
-def _pairs(
-    then: dict[Any, Row], now: dict[Any, Row], end: datetime.date, place: int
-) -> Iterator[tuple[Any, Row | None, Row | None]]:
-    """Rows of both builds by key, up to the last session of the earlier one; `place` is the date's in the key."""
-    for key in sorted(then.keys() | now.keys(), key=str):
-        if key[place] <= end:
-            yield key, then.get(key), now.get(key)
+def _changed(
+    then: Known, now: Known, table: str, key: tuple[str, ...], columns: tuple[str, ...], date: str, end: datetime.date
+) -> tuple[int, list[tuple[Any, Row | None, Row | None]]]:
+    """Number of rows up to a session, and key and both versions (None where there is none) of those that differ."""
+    names = list(dict.fromkeys((*key, *columns, date)))
+    cut = [
+        known.tables[table].select(names).filter(pc.field(date) <= pa.scalar(end, pa.date32())) for known in (then, now)
+    ]
+    if cut[0].equals(cut[1]):
+        return cut[0].num_rows, []
+    ours, theirs = ({tuple(row[name] for name in key): row for row in rows.to_pylist()} for rows in cut)
+    pairs = [(name, ours.get(name), theirs.get(name)) for name in sorted(ours.keys() | theirs.keys(), key=str)]
+    return cut[0].num_rows, [pair for pair in pairs if pair[1] != pair[2]]
 
 
 def _different(one: Row | None, other: Row | None, columns: tuple[str, ...]) -> str:

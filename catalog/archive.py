@@ -170,6 +170,20 @@ def read_archived(places: Places, sha: str) -> bytes:
     return data
 
 
+def keep_texts(places: Places, texts: dict[str, bytes]) -> dict[str, str]:
+    """Archive texts that came from no raw folder; returns their SHA-256 by name. Raises StoreError."""
+    with store_errors("the archive could not be written"):
+        places.archive.mkdir(parents=True, exist_ok=True)
+        places.arriving.touch()
+    kept = {name: _keep_bytes(places, name, data, rehash=False, is_container=False)[1] for name, data in texts.items()}
+    with store_errors("the archive could not be written"):
+        for folder in sorted({places.archived(sha).parent for sha in kept.values()}):
+            sync_folder(folder)
+        sync_folder(places.archive)
+        places.arriving.unlink()
+    return kept
+
+
 # The raw folder.
 
 

@@ -23,7 +23,7 @@ if TYPE_CHECKING:
 # DuckDB 2.0 writes files that no client before it opens unless it is told to write older ones.
 STORAGE_VERSION = "v1.2.0"
 _VIEWS = Path(__file__).parent / "views"
-_MACROS = ("series_of", "session_of", "curve_of")
+_MACROS = ("series_of", "session_of", "curve_of", "price_trace")
 _TYPES = {
     pa.string(): "varchar",
     pa.date32(): "date",
@@ -82,8 +82,9 @@ def lay_views(connection: "duckdb.DuckDBPyConnection", database: str, facts: Sna
             database=database, name=quote_name(table.name), columns=columns, source=sources[table.name]
         )
         connection.execute(text)
+    about = quote_text(f"snapshot {facts.name}, desk {facts.desk[:12]}, code {facts.code[:12]}")
     for macro in _MACROS:
-        connection.execute(_statement(macro).substitute(database=database, **sources))
+        connection.execute(_statement(macro).substitute(database=database, about=about, **sources))
     connection.execute(_statement("dictionary").substitute(database=database))
     rows = [row for table in TABLES for row in describe_columns(table)]
     # One statement; a hundred would take longer than all the rest of the catalog.

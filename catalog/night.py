@@ -14,7 +14,7 @@ from typing import Any, Final
 
 import pyarrow as pa
 
-from catalog.archive import take_in
+from catalog.archive import keep_texts, take_in
 from catalog.assignment import (
     Assignment,
     FileOfMarket,
@@ -25,7 +25,7 @@ from catalog.assignment import (
     package_versions,
     table_stamp,
 )
-from catalog.declarations import Desk, load_desk
+from catalog.declarations import Desk, desk_from_texts, load_desk
 from catalog.gates import judge_market, silent_sessions
 from catalog.places import DESK_WIDE, Places, table_path
 from catalog.runs import Run, next_run, record_run, runs_table
@@ -104,7 +104,7 @@ def begin(desk_path: Path, raw: Path | None, store: Path | None, command: str, r
     staging = ""
     if not nothing_new:
         staging = str(open_staging(places))
-        _remember(places, assignment, digests, told)
+        _remember(places, desk, assignment, digests, told)
     building = () if nothing_new else tuple(code for code in desk.markets if code not in unchanged)
     return Night(
         str(desk.path), str(raw_path), str(places.store), staging, command, started, building,
@@ -133,9 +133,13 @@ def _memory(places: Places) -> Path:
     return places.intake / "night.json"
 
 
-def _remember(places: Places, assignment: Assignment, digests: dict[str, str], told: list[str]) -> None:
-    """Leave the assignment where every worker can read it; the lock's holder alone writes it."""
+def _remember(places: Places, desk: Desk, assignment: Assignment, digests: dict[str, str], told: list[str]) -> None:
+    """Leave desk and assignment where every worker can read them; the lock's holder alone writes it.
+
+    The desk goes along as text, so that one edited in the middle of a night takes effect on the next.
+    """
     content = {
+        "desk": desk.texts,
         "files": {code: [list(vars(entry).values()) for entry in files] for code, files in assignment.files.items()},
         "findings": [[f.kind, f.severity, f.message, f.detail] for f in assignment.findings],
         "unclaimed": assignment.unclaimed,
@@ -153,6 +157,10 @@ def _recall(places: Places) -> dict[str, Any]:
     return content
 
 
+def _desk_tonight(night: Night, memory: dict[str, Any]) -> Desk:
+    return desk_from_texts(Path(night.desk_path), memory["desk"])
+
+
 def build_one(night: Night, market: str) -> dict[str, Any]:
     """Build one market into the staging folder.
 
@@ -163,8 +171,9 @@ def build_one(night: Night, market: str) -> dict[str, Any]:
     """
     started = time.monotonic()
     places = Places(Path(night.store))
-    desk = load_desk(Path(night.desk_path))
-    entries = tuple(FileOfMarket(*entry) for entry in _recall(places)["files"][market])
+    memory = _recall(places)
+    desk = _desk_tonight(night, memory)
+    entries = tuple(FileOfMarket(*entry) for entry in memory["files"][market])
     result: dict[str, Any] = {"market": market, "files": {}, "facts": {}, "worst": [], "error": None, "rows": 0}
     try:
         if not entries:
@@ -208,15 +217,15 @@ def finish(night: Night, results: list[dict[str, Any]]) -> Summary:
     Raises StoreError where nothing can be published; the last snapshot then stands.
     """
     places = Places(Path(night.store))
-    desk = load_desk(Path(night.desk_path))
     last = _last_manifest(places)
     if night.nothing_new:
         if last is None:
             raise StoreError(f"{places.store}: the snapshot this night was compared with is gone")
-        run = Run(next_run(places), night.command, night.started_at, _now(), "nothing new", len(desk.markets), 0, 0)
+        run = Run(next_run(places), night.command, night.started_at, _now(), "nothing new", len(last.markets), 0, 0)
         record_run(places, run)
         return summarise(last, published_now=False, results=[])
     memory = _recall(places)
+    desk = _desk_tonight(night, memory)
     facts = {code: last.markets[code].facts for code in night.unchanged} if last is not None else {}
     facts |= {result["market"]: result["facts"] for result in results if result["error"] is None}
     verdicts = _judge(desk, facts, results, memory["digests"], last)
@@ -242,7 +251,8 @@ def finish(night: Night, results: list[dict[str, Any]]) -> Summary:
         files[stored.path] = stored
     worst = sorted((row for result in results for row in result["worst"]), key=lambda row: -row["impact_sessions"])
     draft = Manifest(
-        sequence=0, name="", parent=current_snapshot(places), files=files, desk=desk.digest, code=code_digest(),
+        sequence=0, name="", parent=current_snapshot(places), files=files, desk=desk.digest,
+        desk_files=keep_texts(places, {name: text.encode() for name, text in desk.texts.items()}), code=code_digest(),
         packages=package_versions(), intake=night.intake, markets=verdicts,
         summary={
             "files_of_no_market": memory["told"],

@@ -137,6 +137,7 @@ def how_to_open(places: Places) -> str:
             "It shows the snapshot that is newest when it is opened: open it again after a night.",
             "Tables: bars, series, rolls, findings, rejects, files, coverage, terms, runs; dictionary says",
             "what their columns mean, snapshot which snapshot it is.",
-            "Macros: series_of(market), session_of(day), curve_of(market, day).",
+            "Macros: series_of(market), session_of(day), curve_of(market, day),",
+            "price_trace(market, plan, nearby, day).",
         ]
     )

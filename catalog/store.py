@@ -73,7 +73,8 @@ class Verdict(_Stored):
 class Manifest(_Stored):
     """`manifest.json`; the class is the format. The name holds the hash of all the rest of it.
 
-    `publish` sets sequence, name and parent; desk and code are digests, intake the number of the newest one.
+    `publish` sets sequence, name and parent; desk and code are digests, intake the number of the newest one,
+    desk_files the SHA-256 under which the archive keeps each file of the desk.
     """
 
     format: Literal[1] = 1
@@ -82,6 +83,7 @@ class Manifest(_Stored):
     parent: str | None = None
     files: dict[str, StoredFile]
     desk: str
+    desk_files: dict[str, str] = Field(default_factory=dict)
     code: str
     packages: dict[str, str]
     intake: int
@@ -97,7 +99,9 @@ class Manifest(_Stored):
 
     def proper_name(self) -> str:
         """The name this manifest's content gives it: sequence and hash."""
-        content = self.model_dump(mode="json", exclude={"name"})
+        # Snapshots from before desks were archived have no such files, and keep the name they got.
+        absent = set() if self.desk_files else {"desk_files"}
+        content = self.model_dump(mode="json", exclude={"name", *absent})
         text = json.dumps(content, sort_keys=True, separators=(",", ":"), allow_nan=False)
         return f"{self.sequence:06d}-{hashlib.sha256(text.encode()).hexdigest()[:12]}"
 
@@ -125,6 +129,22 @@ def current_snapshot(places: Places) -> str | None:
             f"(newest there: {_newest_names(places)})"
         )
     return name
+
+
+def find_snapshot(places: Places, asked: str) -> str:
+    """Name of the snapshot with this name or number; raises UsageError where there is none."""
+    for number, name in _snapshots_there(places):
+        if asked == name or (asked.isdecimal() and int(asked) == number):
+            return name
+    expected = f"expected a snapshot that is there, by name or number (newest: {_newest_names(places)})"
+    raise UsageError(f"{places.store}: seen {asked!r}; {expected}")
+
+
+def origin_of(places: Places, manifest: Manifest, market: str) -> Manifest:
+    """The snapshot in which a market's tables were made: an older one where it is held back."""
+    while (good := manifest.markets[market].last_good_snapshot) is not None:
+        manifest = read_manifest(places, good)
+    return manifest
 
 
 def next_sequence(places: Places) -> int:

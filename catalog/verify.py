@@ -54,9 +54,11 @@ def verify_store(places: Places, snapshot: str | None = None) -> Report:
     problems = [f"{manifest.name}/{problem}" for problem in check_files(folder, manifest)]
     named = _raw_files_named(folder, manifest)
     problems += _gather(partial(_check_archive, places, named))
+    for sha in sorted(set(manifest.desk_files.values())):
+        problems += _gather(partial(_read_only, places, sha))
     if manifest.name == current:
         problems += _gather(partial(_check_catalog, places, manifest))
-    files_checked = len(manifest.files) + len({file for _, file in named})
+    files_checked = len(manifest.files) + len({*manifest.desk_files.values(), *(file for _, file in named)})
     try:
         connection = open_catalog(places, manifest.name)
     except StoreUnsound as error:

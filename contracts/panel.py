@@ -139,7 +139,7 @@ def plan_ends(panel: Panel, plan: Plan) -> np.ndarray:
     return ends
 
 
-def foreseen(panel: Panel, index: np.ndarray | int, at: np.ndarray) -> np.ndarray:
+def foreseen(panel: Panel, index: np.ndarray | int, at: np.ndarray | int) -> np.ndarray:
     """Indices of sessions as they were counted at the close of others; the two are broadcast.
 
     A closed day that trades all the same moves every later session on by one, and nobody knows of it before it comes.

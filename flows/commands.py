@@ -13,11 +13,14 @@ from typing import TYPE_CHECKING, Any
 import click
 
 from contracts.errors import UsageError
+from flows.changes import changes
 from flows.exits import Exit
 from flows.propose import propose
 from flows.render import complain, say, say_json, say_table
+from flows.rolls import rolls
 from flows.settings import Where
 from flows.shell import Asked, Ropewalk, command, show_version
+from flows.study import study
 
 if TYPE_CHECKING:
     from catalog.summary import Summary
@@ -25,10 +28,6 @@ if TYPE_CHECKING:
 # What a person reads of the quality log in one go; a machine gets all of it.
 _FINDINGS_SHOWN = 50
 _CONTRACT_COLUMNS = ("contract", "last_trade", "first_notice")
-_ROLL_COLUMNS = (
-    "plan", "nearby", "effective_on", "outgoing", "incoming", "weight_after", "outgoing_settle",
-    "incoming_settle", "gap", "ratio", "trigger", "decided_on", "measured_on", "impact_sessions",
-)  # fmt: skip
 _FINDING_COLUMNS = ("impact_sessions", "severity", "action", "waived_until", "message", "finding")
 
 
@@ -189,12 +188,13 @@ def trace(asked: Asked, market: str, session: str, plan: str | None, nearby: int
     day = _read_day(session, "SESSION")
     from catalog.places import Places
     from catalog.trace import trace_price
+    from catalog.trace_text import trace_lines
 
     found = trace_price(Places(asked.where().store), market, day, plan, nearby, snapshot)
     if asked.as_json:
         say_json(found.as_json())
     else:
-        say(found.lines())
+        say(trace_lines(found))
     return Exit.DONE
 
 
@@ -252,28 +252,6 @@ def findings(
     return Exit.DONE
 
 
-@command(main, "rolls", "ropewalk rolls NWHT --plan by_open_interest")
-@click.argument("market")
-@click.option("--plan", metavar="NAME", help="Only this roll plan.")
-@click.option("--nearby", type=click.IntRange(min=1), metavar="N", help="Only this nearby.")
-def rolls(asked: Asked, market: str, plan: str | None, nearby: int | None) -> Exit:
-    """Print the roll ledger of a MARKET.
-
-    Every roll with its two prices and its gap, in the order of plan, nearby and day.
-    """
-    from catalog.listings import list_rolls
-    from catalog.places import Places
-
-    columns, rows = list_rolls(Places(asked.where().store), market, plan, nearby)
-    if asked.as_json:
-        say_json({"rolls": [dict(zip(columns, row, strict=True)) for row in rows]})
-    elif rows:
-        say_table(_ROLL_COLUMNS, _pick(columns, rows, _ROLL_COLUMNS))
-    else:
-        say(["no rolls"])
-    return Exit.DONE
-
-
 def _pick(columns: list[str], rows: list[tuple[Any, ...]], wanted: tuple[str, ...]) -> list[tuple[Any, ...]]:
     places = [columns.index(name) for name in wanted]
     return [tuple(row[at] for at in places) for row in rows]
@@ -301,7 +279,9 @@ def verify(asked: Asked, deep: bool, repoint: bool, snapshot: str | None) -> Exi
         from catalog.declarations import load_desk
         from catalog.deep import rederive
 
-        problems += rederive(places, load_desk(where.desk), report.snapshot)
+        # An older snapshot, or a store named alone, is held against the desk that made it.
+        is_own = snapshot is None and (asked.desk is not None or asked.store is None)
+        problems += rederive(places, load_desk(where.desk) if is_own else None, report.snapshot)
     if asked.as_json:
         say_json(
             {
@@ -350,6 +330,9 @@ def sql(asked: Asked, query: str | None) -> Exit:
 
 
 main.add_command(propose)
+main.add_command(rolls)
+main.add_command(changes)
+main.add_command(study)
 
 if __name__ == "__main__":
     main()

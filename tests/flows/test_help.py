@@ -21,7 +21,7 @@ HEAVY = (
     "exchange_calendars",
     "catalog",
 )
-COMMANDS = ("build", "desk", "findings", "nightly", "propose", "rolls", "sql", "trace", "verify")
+COMMANDS = ("build", "changes", "desk", "findings", "nightly", "propose", "rolls", "sql", "study", "trace", "verify")
 
 
 def test_these_are_the_commands() -> None:

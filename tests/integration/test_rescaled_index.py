@@ -9,6 +9,7 @@ import datetime
 import pytest
 
 from catalog.trace import trace_price
+from catalog.trace_text import trace_lines
 from tests.integration.one_market import Published, RawRow, write_one_market
 
 # Thirty days before the third Friday of the month after delivery (or before the business day preceding it, where that
@@ -101,9 +102,10 @@ def test_trace_shows_the_text_of_the_file_and_the_scale(published: Published) ->
     (leg,) = told.legs
     assert leg.text == "2007-03-23,138.7,141.20,136.20,138.7,500,1000"
     assert (leg.reported, leg.settle, leg.scale) == (138.7, 13.87, 0.1)
-    lines = told.lines()
+    lines = trace_lines(told)
     assert "VX-2007-05 on 2007-03-23: reported 138.7, used 13.87 (reported)" in lines
     assert "  on the market's present scale: 138.7 x 0.1 = 13.87" in lines
+    assert any("rescaled[0]: prices before 2007-03-26 x 0.1" in line for line in lines)
     after = trace_price(published.places, "VX", datetime.date(2007, 3, 26), "to_the_end")
     assert after.legs[0].scale == 1.0
-    assert not any("scale:" in line for line in after.lines())
+    assert not any("scale:" in line for line in trace_lines(after))

@@ -2,6 +2,7 @@
 
 from pathlib import Path
 
+from catalog.study import list_evidence
 from contracts.calendar_table import contract_days
 from contracts.markets import parse_market
 from tests.integration.one_market import Published, differences_from_plain, settles, write_one_market
@@ -47,3 +48,7 @@ def test_roll_of_the_week_before_stands_when_the_holiday_has_traded(tmp_path: Pa
     assert differences_from_plain(now, declared) == []
     (march, _) = contract_days(declared, 2024, 2024)
     assert str(march["deadlines"]["five_before"]) == "2024-03-06"
+    # And so it is printed, for a person to decide it again: one session off, and not two.
+    ((told,), (told_then,)) = (list_evidence(one.places, "STORM")[1] for one in (now, then))
+    assert (told.sessions_to_deadline, str(told.deadline_on)) == (1, "2024-03-06")
+    assert (told_then.sessions_to_deadline, told_then.decided_on) == (1, told.decided_on)

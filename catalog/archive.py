@@ -148,6 +148,14 @@ def read_register(places: Places) -> tuple[Arrival, ...]:
     return _parse_register(places)[0]
 
 
+def register_digest(places: Places, intake: int) -> str:
+    """SHA-256 of the register's lines up to an intake; raises StoreUnsound where it is damaged."""
+    arrivals, whole = _parse_register(places)
+    count = sum(arrival.taken_in <= intake for arrival in arrivals)
+    lines = places.register.read_bytes()[:whole].splitlines(keepends=True) if count else []
+    return hashlib.sha256(b"".join(lines[:count])).hexdigest()
+
+
 def read_archived(places: Places, sha: str) -> bytes:
     """The raw bytes with this SHA-256; raises StoreUnsound where they are gone or no longer hash to it."""
     if _SHA.fullmatch(sha) is None:

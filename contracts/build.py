@@ -14,7 +14,7 @@ import pyarrow as pa
 from contracts.arrivals import Arrived, settle_arrivals
 from contracts.checks.arrived import account_for_rows, check_days, check_files, check_meetings
 from contracts.checks.gaps import check_gaps
-from contracts.checks.rolled import check_rolls
+from contracts.checks.rolled import check_back_adjusted, check_rolls
 from contracts.checks.rows import check_rows
 from contracts.checks.shocks import check_shocks
 from contracts.checks.stale import find_stale_runs
@@ -146,6 +146,8 @@ def build_market(inputs: Inputs) -> Built:
     laid = lay_plans(traded, clean)
     for one in laid:
         findings += check_rolls(panel, one.name, market.plans[one.name], one.held)
+        if one.series is not None:
+            findings += check_back_adjusted(panel, one.name, one.held, one.series.settle, one.series.back_adjusted)
     findings = _weigh(findings, panel, clean, laid, inputs.look_backs)
     findings = waive(findings, inputs.waivers, market.code, data_date)
     counts = _counts(findings)

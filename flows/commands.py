@@ -5,6 +5,7 @@ frame around a command (`shell.py`), any computation. Heavy modules are imported
 """
 
 import datetime
+import os
 import re
 from collections.abc import Sized
 from dataclasses import replace
@@ -16,6 +17,7 @@ from contracts.errors import UsageError
 from flows.changes import changes
 from flows.exits import Exit
 from flows.propose import propose
+from flows.prune import prune
 from flows.render import complain, say, say_json, say_table
 from flows.rolls import rolls
 from flows.settings import Where
@@ -53,17 +55,43 @@ _rehash = click.option(
 )
 
 
+_waive_gate = click.option(
+    "--waive-gate",
+    nargs=2,
+    multiple=True,
+    metavar="MARKET REASON",
+    help="Publish MARKET tonight though its gate would hold it back; reason and person are recorded.",
+)
+
+
+def _with_waived(where: Where, waive_gate: tuple[tuple[str, str], ...]) -> Where:
+    if any(not why.strip() for _, why in waive_gate):
+        raise UsageError("--waive-gate: seen an empty reason; expected why the market may go out")
+    return replace(where, waived=tuple((market, why, _person()) for market, why in waive_gate))
+
+
+def _person() -> str:
+    import getpass
+
+    try:
+        return getpass.getuser()
+    except (OSError, KeyError):
+        # A container may run under a number that has no name.
+        return f"user {os.getuid()}"
+
+
 @command(main, "nightly", "ropewalk nightly --desk /srv/desk")
 @_jobs
 @_rehash
-def nightly(asked: Asked, jobs: int | None, rehash: bool) -> Exit:
+@_waive_gate
+def nightly(asked: Asked, jobs: int | None, rehash: bool, waive_gate: tuple[tuple[str, str], ...]) -> Exit:
     """Run one night under Prefect: take in, build, check, publish.
 
     Reports to the Prefect API that Prefect's settings name. Where none is named, an own server is started for
     the length of the run; its records stay in Prefect's home folder. Where the API cannot be reached, the
     same work is done unwatched.
     """
-    where = replace(_checked(asked), rehash=rehash)
+    where = _with_waived(replace(_checked(asked), rehash=rehash), waive_gate)
     from flows.nightly import run_watched
 
     told = run_watched(where, jobs)
@@ -80,13 +108,14 @@ def nightly(asked: Asked, jobs: int | None, rehash: bool) -> Exit:
 @command(main, "build", "ropewalk build --desk /srv/desk --jobs 4")
 @_jobs
 @_rehash
-def build(asked: Asked, jobs: int | None, rehash: bool) -> Exit:
+@_waive_gate
+def build(asked: Asked, jobs: int | None, rehash: bool, waive_gate: tuple[tuple[str, str], ...]) -> Exit:
     """Do the work of one night without a scheduler.
 
     Takes in, builds, checks, publishes. What carries the markets is declared in desk.toml: [run] workers =
     "threads", "processes" or "dask".
     """
-    where = replace(_checked(asked), rehash=rehash)
+    where = _with_waived(replace(_checked(asked), rehash=rehash), waive_gate)
     from flows.work import pool_builder, run_night
 
     return _tell_summary(run_night(where, "build", pool_builder(jobs)), asked.as_json)
@@ -330,6 +359,7 @@ def sql(asked: Asked, query: str | None) -> Exit:
 
 
 main.add_command(propose)
+main.add_command(prune)
 main.add_command(rolls)
 main.add_command(changes)
 main.add_command(study)

@@ -43,7 +43,7 @@ def test_readme_names_every_view(sample_store: Path) -> None:
     with duckdb.connect(str(sample_store / "catalog.duckdb"), read_only=True) as connection:
         views = {row[0] for row in connection.sql("select view_name from duckdb_views() where not internal").fetchall()}
     section = README.split("## What you get")[1].split("## Query it")[0]
-    assert views - {"snapshot"} <= set(re.findall(r"`([a-z]+)`", section))
+    assert views - {"snapshot"} <= set(re.findall(r"`([a-z_]+)`", section))
 
 
 def test_readme_shows_the_study_as_the_command_prints_it(sample_store: Path) -> None:

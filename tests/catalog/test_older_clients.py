@@ -13,6 +13,8 @@ from pathlib import Path
 import duckdb
 import pytest
 
+from contracts.tables import DERIVED
+
 VERSIONS = ("1.2.2", "1.4.4", "1.5.4", "2.0.1")
 
 ASK = """
@@ -37,6 +39,7 @@ def queries(store: Path) -> list[str]:
         "select * from session_of('2024-03-01') order by all limit 5",
         "select * from curve_of('NWHT', '2024-03-01') order by all",
         "select * from price_trace('NWHT', 'by_open_interest', 1, '2024-03-01')",
+        *(f"select * from {view.name}_of('NWHT') order by all limit 30" for view in DERIVED),
         'select "column", unit from dictionary order by all',
     ]
 

@@ -7,6 +7,7 @@ the words (`trace_text.py`).
 
 import datetime
 import difflib
+import math
 from dataclasses import dataclass, field
 from functools import cached_property
 from typing import Any
@@ -33,7 +34,8 @@ class Leg:
 
     `session` is the session of the settle, earlier than the one asked for where it is carried; `rejected` then
     holds the rows of its file that could not be read since. `versions` are all texts the raw row ever had;
-    `repair` is the key that declares a person's repair of it.
+    `repair` is the key that declares a person's repair of it, `scale` what its prices were declared to be multiplied
+    by to stand on the market's present scale.
     """
 
     contract: str
@@ -50,6 +52,7 @@ class Leg:
     rejected: tuple[str, ...] = ()
     versions: tuple[RawVersion, ...] = ()
     repair: Rule | None = None
+    scale: float = 1.0
 
 
 @dataclass(frozen=True)
@@ -249,7 +252,14 @@ class Tracer:
             contract, weight, row["clean_settle"], row["session"], row["settle"], status, path, row["file"],
             row["line"], text, tuple(about), self._rejected_since(row, path) if row["session"] < session else (),
             versions, repair_rule(self._desk, contract, row["session"]) if self._desk is not None else None,
+            self._scale_on(row["session"]),
         )  # fmt: skip
+
+    def _scale_on(self, session: datetime.date) -> float:
+        if self._desk is None:
+            return 1.0
+        changes = self._desk.markets[self.market].rescaled
+        return math.prod(change.multiply for change in changes if session < change.before)
 
     def _rejected_since(self, row: dict[str, Any], path: str | None) -> tuple[str, ...]:
         """Rows of the bar's file that could not be read, between it and the file's next bar."""

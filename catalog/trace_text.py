@@ -84,6 +84,9 @@ def _leg_lines(leg: Leg) -> list[str]:
     if leg.session is None:
         return [f"{leg.contract}: no bar"]
     told = [f"{leg.contract} on {leg.session}: reported {_say(leg.reported)}, used {_say(leg.settle)} ({leg.status})"]
+    if leg.scale != 1.0 and leg.reported is not None:
+        on_scale = _say(leg.reported * leg.scale)
+        told.append(f"  on the market's present scale: {_say(leg.reported)} x {_say(leg.scale)} = {on_scale}")
     told += [f"  {message}" for message in leg.findings]
     if leg.repair is not None:
         told.append(f"  declared in {_rule(leg.repair)}")

@@ -12,7 +12,7 @@ import numpy as np
 from contracts.compared import known_interest
 from contracts.deliveries import delivery_of
 from contracts.markets import Incoming, Plan, Trigger
-from contracts.panel import Panel, deadlines
+from contracts.panel import Panel, foreseen, plan_ends
 from contracts.repairs import Clean
 from contracts.rolls import NEVER, Held, RollStep
 from contracts.sessions import day_of
@@ -57,8 +57,9 @@ class Evidence:
 
     compared: the sessions the trigger looked at up to the decision, and the one before them, oldest first;
     free_since: first session at whose close this roll could have been decided; sessions_to_deadline: from the
-    decision, negative where it has passed; measuring: per step the sessions from the planned one on which it
-    had to wait, and last the one that was measured (an earlier one where it is stale).
+    decision, as they were counted at its close, negative where it has passed; measuring: per step the sessions
+    from the planned one on which it had to wait, and last the one that was measured (an earlier one where it is
+    stale).
     """
 
     plan: str
@@ -82,7 +83,7 @@ def gather_evidence(panel: Panel, clean: Clean, name: str, plan: Plan, held: Hel
     if held.nearby != 1:
         raise ValueError("a farther nearby rolls with nearby 1")
     volume, interest = panel.field("volume"), known_interest(panel)
-    ends = deadlines(panel, plan)
+    ends = plan_ends(panel, plan)
     found = []
     free = held.start
     for decision in held.decisions:
@@ -93,13 +94,15 @@ def gather_evidence(panel: Panel, clean: Clean, name: str, plan: Plan, held: Hel
         window = range(max(0, at - plan.confirm), at + 1)
         compared = tuple(_compare(panel, volume, interest, session, outgoing, decision.incoming) for session in window)
         force = next((f.effective for f in plan.force if f.outgoing == panel.contracts[outgoing]), None)
-        deadline = int(ends[outgoing])
+        deadline = int(foreseen(panel, ends[outgoing], at)) - plan.backstop
+        # Nobody counted on a closed day that was to trade after the decision.
+        scheduled = np.delete(panel.sessions, panel.disagreeing[panel.disagreeing > at])
         found.append(
             Evidence(
                 name, panel.contracts[outgoing], panel.contracts[decision.incoming], decision.trigger, _day(panel, at),
                 _day(panel, decision.planned) if decision.planned < len(panel.sessions) else None, _day(panel, free),
                 compared, _candidates(panel, plan, volume, interest, at, outgoing),
-                _day(panel, deadline) if 0 <= deadline < len(panel.sessions) else None, deadline - at, force, steps,
+                day_of(scheduled[deadline]) if 0 <= deadline < len(scheduled) else None, deadline - at, force, steps,
                 _all_measuring(panel, clean, steps),
             )
         )  # fmt: skip

@@ -62,6 +62,10 @@ class Kind(StrEnum):
     # the prices
     DECIMAL_SHIFT = "decimal_shift"  # a power of ten away from the curve
     REVERTING_SPIKE = "reverting_spike"  # stands alone for a session and comes back
+    DIGITS_SWAPPED = "digits_swapped"  # two neighbouring digits changed about
+    SIGN_FLIPPED = "sign_flipped"  # the price with the other sign
+    NEIGHBOURS_PRICE = "neighbours_price"  # another contract's row under this one's name
+    CURVE_KINKED = "curve_kinked"  # drifted off its neighbours without a jump
     CURVE_BREAK = "curve_break"  # stands alone against the curve, not (yet) seen to come back
     STALE_PRICE = "stale_price"  # unchanged while the rest of the curve moves
     LONE_MOVE = "lone_move"  # stands alone, but its own range and volume bear it out

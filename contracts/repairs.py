@@ -187,7 +187,21 @@ _SAYS = {
     Kind.CURVE_BREAK: "stands {distance:+.10g} from where the curve puts it",
     Kind.LONE_MOVE: "moved {distance:+.10g} against the curve, borne out by its own range and volume",
     Kind.NOT_POSITIVE: "is not above zero, which this market's price cannot be",
+    Kind.SIGN_FLIPPED: "has the wrong sign",
+    Kind.DIGITS_SWAPPED: "has two digits changed about, {distance:+.10g} from where the curve puts it",
 }
+
+
+def _say(panel: Panel, verdict: Verdict, price: float) -> str:
+    """What is said against the settle, or for it."""
+    if verdict.kind is Kind.DECIMAL_SHIFT:
+        size = f"{10 ** abs(verdict.power)}"
+        return f"is {size} times too large" if verdict.power > 0 else f"is 1/{size} of what it should be"
+    if verdict.kind is Kind.NEIGHBOURS_PRICE:
+        return f"and its whole row are those of {panel.contracts[verdict.other]}"
+    if verdict.kind is Kind.LONE_MOVE and price <= 0:
+        return "lies at or below zero, as this market's price may"
+    return _SAYS[verdict.kind].format(distance=round(price - verdict.expected, 10))
 
 
 def _tell(panel: Panel, settle: np.ndarray, verdict: Verdict) -> Finding:
@@ -196,23 +210,21 @@ def _tell(panel: Panel, settle: np.ndarray, verdict: Verdict) -> Finding:
     label, day = panel.contracts[verdict.contract], day_of(panel.sessions[verdict.session])
     price = float(settle[at])
     is_known = not math.isnan(verdict.expected)
-    if verdict.kind is Kind.DECIMAL_SHIFT:
-        size = f"{10 ** abs(verdict.power)}"
-        says = f"is {size} times too large" if verdict.power > 0 else f"is 1/{size} of what it should be"
-    elif verdict.kind is Kind.LONE_MOVE and price <= 0:
-        says = "lies at or below zero, as this market's price may"
-    else:
-        says = _SAYS[verdict.kind].format(distance=round(price - verdict.expected, 10))
+    says = _say(panel, verdict, price)
     if verdict.ruling is Ruling.KEPT:
         action, done = Action.KEPT, "kept"
         severity = Severity.NOTE if verdict.kind is Kind.LONE_MOVE else Severity.REVIEW
     elif is_known:
-        action, done, severity = Action.REPAIRED, f"repaired to {verdict.expected:.10g}", Severity.REVIEW
+        action, severity = Action.REPAIRED, Severity.REVIEW
+        done = f"repaired to {verdict.expected:.10g} from its neighbours' moves, within about {2 * verdict.error:.2g}"
     else:
         action, done, severity = Action.MASKED, "masked, for the curve cannot say", Severity.REVIEW
     return Finding(
         verdict.kind, severity, f"{label}, {day}: settle {price:.10g} {says}; {done}", panel.market.code, label, day,
-        "settle", price, verdict.expected if is_known else None,
-        None if math.isnan(verdict.score) else verdict.score, None, action,
-        verdict.expected if action is Action.REPAIRED else None,
+        "settle", price, verdict.expected if is_known else None, _known(verdict.score), _known(verdict.threshold),
+        action, verdict.expected if action is Action.REPAIRED else None,
     )  # fmt: skip
+
+
+def _known(value: float) -> float | None:
+    return None if math.isnan(value) else value

@@ -1,0 +1,80 @@
+"""What a bar's own range and volume say of its settle.
+
+Belongs here: one bar, beside the bars of its contract's past and of its neighbours. Does not belong here: the curve
+(`curve.py`), the judgment (`prices.py`).
+
+A true lone move trades its way: its range reaches from near where the curve puts the contract to the settle. A wrong
+settle lies outside a range that stands where the curve puts it. A wrong row stands off as a whole, no wider and no
+busier than usual. Common practice, no source; the limits below were chosen on the tuning seeds of the bench.
+"""
+
+from enum import Enum
+
+import numpy as np
+
+from contracts.panel import Panel
+
+# Distances as shares of the settle's distance from what is expected.
+_TOUCHES = 0.15
+_LEFT_BEHIND = 0.5
+_STAYED = 0.3
+_TRADED_ACROSS = 0.6
+_PERHAPS_ACROSS = 0.78
+# Against its own past 20 and its neighbours' ratio on the session.
+_WIDER = 1.8
+_BUSIER = 2.5
+_PAST = 20
+_NEIGHBOURS = 3
+
+
+class Bar(Enum):
+    """What the bar says."""
+
+    SILENT = "silent"  # no trade, no range, or something in between
+    AGAINST = "against"  # the range stands where the curve puts the contract, the settle outside
+    BEHIND = "behind"  # the range reaches from there to the settle
+    APART = "apart"  # the whole bar stands off with the settle
+
+
+def hear_bar(panel: Panel, session: int, contract: int, price: float, expected: float) -> Bar:
+    """What the bar says of a settle at `price` where the curve expects another."""
+    low, high = (float(panel.field(name)[session, contract]) for name in ("low", "high"))
+    if not panel.field("volume")[session, contract] > 0 or low > high:
+        return Bar.SILENT
+    half = 0.5 * panel.market.tick_size
+    if np.isnan(low) or np.isnan(high):
+        # One side alone bears a move out if it is the side moved to, and reaches the settle.
+        reaches = low - half <= price if price < expected else price <= high + half
+        return Bar.BEHIND if reaches else Bar.SILENT
+    distance = abs(price - expected)
+    outside = max(low - half - price, price - high - half, 0.0) / distance
+    away = max(low - half - expected, expected - high - half, 0.0) / distance
+    if outside > _TOUCHES:
+        return Bar.AGAINST if outside >= _LEFT_BEHIND and away <= _STAYED else Bar.SILENT
+    if away <= _TRADED_ACROSS:
+        return Bar.BEHIND
+    if away <= _PERHAPS_ACROSS:
+        width = panel.field("high") - panel.field("low")
+        if _out_of_usual(width, session, contract) > _WIDER:
+            return Bar.BEHIND
+        if _out_of_usual(panel.field("volume"), session, contract) > _BUSIER:
+            return Bar.BEHIND
+    return Bar.APART
+
+
+def _out_of_usual(values: np.ndarray, session: int, contract: int) -> float:
+    """A value's ratio to the median of its contract's past, over the median of that ratio of its neighbours."""
+    columns = range(max(0, contract - _NEIGHBOURS), min(values.shape[1], contract + _NEIGHBOURS + 1))
+    ratios: list[float] = []
+    own = 1.0
+    for column in columns:
+        past = values[max(0, session - _PAST) : session, column]
+        past = past[past > 0]
+        now = float(values[session, column])
+        if len(past) < _PAST // 4 or not now > 0:
+            continue
+        if column == contract:
+            own = now / float(np.median(past))
+        else:
+            ratios.append(now / float(np.median(past)))
+    return own / float(np.median(ratios)) if ratios else own

@@ -1,0 +1,94 @@
+"""Forms a slip of the pen or of a program takes, by which a wrong settle tells what it should have been.
+
+Belongs here: one function a form, from a settle and what is expected of it. Does not belong here: what follows from it
+(`prices.py`). Common practice, no source.
+"""
+
+import math
+
+import numpy as np
+
+from contracts.panel import Panel
+
+# log10 distance from a whole power of ten that still counts as one (about 15%).
+_POWER_TOLERANCE = 0.06
+_LEAST_TICKS = 20
+# A form must explain all but this share of the distance.
+_LEFT_OVER = 0.2
+_WITHIN_SCALES = 2.5
+_WITHIN_TICKS = 1.5
+_LEAST_VOLUME = 5.0
+_LEAST_INTEREST = 50.0
+_REACH = 6
+
+
+def power_of_ten(price: float, level: float, tick: float) -> int:
+    """The whole power of ten between a price and the level it should have; 0 for none."""
+    if price * level <= 0 or max(abs(price), abs(level)) < _LEAST_TICKS * tick:
+        return 0
+    exponent = math.log10(price / level)
+    power = round(exponent)
+    return power if abs(exponent - power) <= _POWER_TOLERANCE else 0
+
+
+def is_sign_flipped(price: float, level: float, scale: float, tick: float) -> bool:
+    """Whether the price with the other sign is what is expected, and far enough from nought to tell."""
+    return abs(level) >= _LEAST_TICKS * tick and price * level < 0 and _explains(-price, price, level, scale, tick)
+
+
+def has_digits_swapped(price: float, level: float, scale: float, tick: float) -> bool:
+    """Whether two neighbouring digits of the price, changed about, give what is expected."""
+    if price == 0:
+        return False
+    decimals = len(f"{tick:.10f}".rstrip("0").partition(".")[2])
+    text = f"{abs(price):.{decimals}f}"
+    for place in range(len(text) - 1):
+        pair = text[place : place + 2]
+        if "." in pair or pair[0] == pair[1]:
+            continue
+        swapped = math.copysign(float(text[:place] + pair[::-1] + text[place + 2 :]), price)
+        if _explains(swapped, price, level, scale, tick):
+            return True
+    return False
+
+
+def _explains(meant: float, price: float, level: float, scale: float, tick: float) -> bool:
+    off = abs(meant - level)
+    return off <= max(_WITHIN_SCALES * scale, _WITHIN_TICKS * tick) and off <= _LEFT_OVER * abs(price - level)
+
+
+def find_twins(panel: Panel) -> list[tuple[int, int, int]]:
+    """Pairs of contracts with one and the same row on a session: (session, contract, contract), the earlier first.
+
+    Alike are settle, range, volume and open interest, and so much was traded or held that it is no accident.
+    """
+    settle, volume = panel.field("settle"), panel.field("volume")
+    interest, high, low = (panel.field(name) for name in ("open_interest", "high", "low"))
+    found: list[tuple[int, int, int]] = []
+    for step in range(1, min(_REACH, settle.shape[1] - 1) + 1):
+        same = (settle[:, :-step] == settle[:, step:]) & (volume[:, :-step] == volume[:, step:])
+        for session, contract in np.argwhere(same & (volume[:, step:] > 0)):
+            other = contract + step
+            pairs = [(part[session, contract], part[session, other]) for part in (interest, high, low)]
+            if all(a == b or (a != a and b != b) for a, b in pairs) and (
+                volume[session, contract] >= _LEAST_VOLUME or interest[session, contract] >= _LEAST_INTEREST
+            ):
+                found.append((int(session), int(contract), int(other)))
+    return found
+
+
+def copy_of_twins(panel: Panel, session: int, contracts: tuple[int, int], off: tuple[float, float]) -> int:
+    """Which of two contracts with one row it does not belong to: the one whose open interest jumped more.
+
+    Where that cannot be said, the one whose settle is further off, `off` in scales.
+    """
+    interest = panel.field("open_interest")
+    jumps = []
+    for contract in contracts:
+        past = interest[max(0, session - 3) : session, contract]
+        past = past[past > 0]
+        now = float(interest[session, contract])
+        jumps.append(abs(math.log(now / float(past[-1]))) if len(past) and now > 0 else math.nan)
+    if not math.isnan(jumps[0] + jumps[1]) and abs(jumps[0] - jumps[1]) > 0.1:
+        return contracts[int(jumps[1] > jumps[0])]
+    return contracts[int(off[1] > off[0])]

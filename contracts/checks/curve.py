@@ -41,7 +41,7 @@ _GUESSES = np.array([0.4, 0.3, 0.2, 0.2, 0.3, 0.4, 0.5])
 _HARDLY = 0.01
 _MOST_OF_OTHERS = 0.8
 _LONGEST_HELD_BACK = 30
-_LEAST_FOR_COMMON = 5
+_LEAST_FOR_COMMON = 4
 _MOST_UNREST = 4.0
 _NEAR_EXPIRY = 15
 _WIDER_NEAR_EXPIRY = 1.5
@@ -136,7 +136,9 @@ class Curve:
         moves = np.where(self.is_bound & ~self.is_locked, np.nan, change)
         self.common = np.cumsum(np.nan_to_num(row_medians(self._packed(moves))))
         locked = np.bincount(self.row[self.is_locked], minlength=len(self.rows))
-        self.is_limit_row = 2 * locked > np.bincount(self.row, minlength=len(self.rows))
+        live = np.bincount(self.row, minlength=len(self.rows))
+        self.has_common = live >= _LEAST_FOR_COMMON
+        self.is_limit_row = 2 * locked > live
         others, trust = self._moves(np.arange(len(self.row)), before)
         known = ~np.isnan(others) & has_before
         learns = known & (trust == 1.0) & ~self.is_bound
@@ -152,7 +154,7 @@ class Curve:
         self.error = np.hypot(mean, _ROUNDING * tick)
         distance = change - self._foretell(others, trust, known)
         self.distance = self._shorten(distance, change)
-        self.is_alone = ~known[:-1].any(axis=0)
+        self.is_alone = ~known.any(axis=0)
         magnitude = np.abs(self.distance)
         packed = self._packed(magnitude)
         middle = row_medians(packed)
@@ -207,7 +209,7 @@ class Curve:
             inside &= earlier >= 0
             found[number] = np.where(inside, self.price[other] - self.price[earlier], np.nan)
             trust[number, self.is_bound[other] | self.is_bound[earlier]] = _HARDLY
-        found[-1] = self.common[row] - self.common[base_row]
+        found[-1] = np.where(self.has_common[row], self.common[row] - self.common[base_row], np.nan)
         trust[-1, self.is_limit_row[row] | self.is_limit_row[base_row]] = _HARDLY
         return found, trust
 
@@ -281,7 +283,7 @@ class Curve:
         is_free = ~(self.is_bound[cells] & (cells >= 0) | self.is_bound[bases] & (bases >= 0))
         weight = np.where(is_free, 1.0, _HARDLY) * (self.error[which, cell] * np.maximum(1, np.abs(steps) / 3)) ** -2.0
         error = self.error[which, cell]
-        if len(live) >= _LEAST_FOR_COMMON:
+        if self.has_common[row]:
             told = np.append(told, self.sensitivity[-1, cell] * (self.common[row] - self.common[since]))
             is_limit = self.is_limit_row[row] or self.is_limit_row[since]
             weight = np.append(weight, (_HARDLY if is_limit else 1.0) * self.error[-1, cell] ** -2.0)

@@ -269,11 +269,11 @@ def _judge(court: _Court, row: int, contract: int) -> Verdict | None:
             # The contract's last settle was the wrong one: this one stands where its neighbours do.
             return rule(Kind.CURVE_BREAK, Ruling.KEPT, factor)
         return rule(Kind.DECIMAL_SHIFT, Ruling.REFUTED, factor, power)
-    if is_flipped:
+    if is_flipped and came_back is not False:
         return rule(Kind.SIGN_FLIPPED, Ruling.REFUTED, factor)
-    if price <= 0 < level and came_back is None and heard is not Bar.AGAINST:
+    if price <= 0 < level and not (heard is Bar.AGAINST and came_back):
         # Only a market that may be negative comes here, and there it is a fact however strange.
-        return rule(Kind.LONE_MOVE, Ruling.KEPT)
+        return rule(Kind.CURVE_BREAK if heard is Bar.AGAINST else Kind.LONE_MOVE, Ruling.KEPT, factor)
     if not standing.is_known:
         return None
     if has_digits_swapped(price, level, scale, tick) and (came_back is not False or heard is Bar.AGAINST):

@@ -25,6 +25,8 @@ _WIDER = 1.8
 _BUSIER = 2.5
 _PAST = 20
 _NEIGHBOURS = 3
+# Fewer lots than these see too little of a session to speak against a settle.
+_LEAST_LOTS = 10
 
 
 class Bar(Enum):
@@ -50,7 +52,11 @@ def hear_bar(panel: Panel, session: int, contract: int, price: float, expected: 
     outside = max(low - half - price, price - high - half, 0.0) / distance
     away = max(low - half - expected, expected - high - half, 0.0) / distance
     if outside > _TOUCHES:
-        return Bar.AGAINST if outside >= _LEFT_BEHIND and away <= _STAYED else Bar.SILENT
+        speaks = outside >= _LEFT_BEHIND and away <= _STAYED and panel.field("volume")[session, contract] >= _LEAST_LOTS
+        return Bar.AGAINST if speaks else Bar.SILENT
+    shifted = _shift(panel, session, contract, "low" if price > expected else "high")
+    if not np.isnan(shifted):
+        away = shifted / (price - expected)
     if away <= _TRADED_ACROSS:
         return Bar.BEHIND
     if away <= _PERHAPS_ACROSS:
@@ -60,6 +66,23 @@ def hear_bar(panel: Panel, session: int, contract: int, price: float, expected: 
         if _out_of_usual(panel.field("volume"), session, contract) > _BUSIER:
             return Bar.BEHIND
     return Bar.APART
+
+
+def _shift(panel: Panel, session: int, contract: int, side: str) -> float:
+    """How far the low or high stands from where its neighbours' stand, each seen from its last settle.
+
+    The end of the bar that a true lone move leaves behind is where it is in the other contracts. NaN where fewer than
+    two neighbours traded.
+    """
+    if session == 0:
+        return float("nan")
+    columns = slice(max(0, contract - _NEIGHBOURS), contract + _NEIGHBOURS + 1)
+    reach = panel.field(side)[session, columns] - panel.field("settle")[session - 1, columns]
+    reach = np.where(panel.field("volume")[session, columns] >= _LEAST_LOTS, reach, np.nan)
+    own = contract - columns.start
+    others = np.delete(reach, own)
+    others = others[~np.isnan(others)]
+    return float(reach[own] - np.median(others)) if len(others) >= 2 else float("nan")
 
 
 def _out_of_usual(values: np.ndarray, session: int, contract: int) -> float:

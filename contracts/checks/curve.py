@@ -42,11 +42,14 @@ _HARDLY = 0.01
 _MOST_OF_OTHERS = 0.8
 _LONGEST_HELD_BACK = 30
 _LEAST_FOR_COMMON = 4
+_FEW_WITNESSES = 3
 _MOST_UNREST = 4.0
 _NEAR_EXPIRY = 15
 _WIDER_NEAR_EXPIRY = 1.5
-_OF_MOVE = 0.06
+_OF_MOVE = 0.03
 _OF_SPREAD = 0.7
+_FITS_WINDOW = 20
+_FITS_SHARE = 0.2
 
 
 @dataclass(frozen=True)
@@ -167,6 +170,9 @@ class Curve:
         count = self._past_sums((~np.isnan(magnitude)).astype(float))
         guess = _NEWLY_LISTED * np.nan_to_num(self.typical)[self.row]
         self.noise = 1.25 * (self._past_sums(clipped) + _PRIOR * guess) / (count + _PRIOR)
+        # Once more, without what lies far outside: one wrong settle shall not blunt the next sixty sessions.
+        clipped = np.minimum(clipped, 2.5 * self.noise)
+        self.noise = 1.25 * (self._past_sums(clipped) + _PRIOR * np.minimum(guess, self.noise)) / (count + _PRIOR)
         self.magnitude_by_contract = magnitude[self.by_contract]
 
     def _find_held_back(self, change: np.ndarray) -> None:
@@ -295,8 +301,19 @@ class Curve:
         kept = np.where(off <= _LEFT_OUT * np.maximum(error, self.tick), weight, 0.0)
         total = float(kept.sum())
         move = float((kept * told).sum() / total) if total > 0 else middle
-        spread = MAD_SCALE * float(weighted_medians(off[:, None], weight[:, None])[0])
+        if len(told) > _FEW_WITNESSES:
+            spread = MAD_SCALE * float(weighted_medians(off[:, None], weight[:, None])[0])
+        else:
+            # Of two or three witnesses none can be outvoted: one that disagrees makes all of them doubtful.
+            spread = math.sqrt(float((weight * off**2).sum() / weight.sum()))
         return Foretold(move, spread, len(others))
+
+    def is_often_still(self, row: int, contract: int) -> bool:
+        """Whether the contract stood still on many of its last sessions: its settles follow the curve by fits."""
+        cell = self._nearest_cell(row, contract)
+        place = self.place[cell]
+        past = self.by_contract[max(self.start[cell], place - _FITS_WINDOW) : place]
+        return len(past) > 0 and float(self.is_bound[past].mean()) >= _FITS_SHARE
 
     def _nearest_cell(self, row: int, contract: int) -> int:
         """The contract's cell on a row or, where the row has none that can be, its last one before."""
@@ -323,5 +340,5 @@ class Curve:
         own = max(own, 0.5 * self.tick) * self.unrest[row]
         if self.panel.last_trade[contract] - self.rows[row] <= _NEAR_EXPIRY:
             own *= _WIDER_NEAR_EXPIRY
-        own = math.hypot(own, _OF_MOVE * told.move) * math.sqrt(min(row - since, LONGEST_LOOK_BACK))
+        own = math.hypot(own, _OF_MOVE * told.move) * math.sqrt(row - since)
         return max(own, _OF_SPREAD * told.spread)

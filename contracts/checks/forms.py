@@ -17,6 +17,7 @@ _LEAST_TICKS = 20
 _LEFT_OVER = 0.2
 _WITHIN_SCALES = 2.5
 _WITHIN_TICKS = 1.5
+_MOST_WEIGHT = 2.5
 _LEAST_VOLUME = 5.0
 _LEAST_INTEREST = 50.0
 _REACH = 6
@@ -36,20 +37,28 @@ def is_sign_flipped(price: float, level: float, scale: float, tick: float) -> bo
     return abs(level) >= _LEAST_TICKS * tick and price * level < 0 and _explains(-price, price, level, scale, tick)
 
 
-def has_digits_swapped(price: float, level: float, scale: float, tick: float) -> bool:
-    """Whether two neighbouring digits of the price, changed about, give what is expected."""
-    if price == 0:
-        return False
+def digits_swapped_weight(price: float, level: float, scale: float, tick: float) -> float:
+    """How much it says that two neighbouring digits of the price, changed about, give what is expected; 0 if none do.
+
+    1 where chance would do as much, one more for each tenth part of it.
+    """
     decimals = len(f"{tick:.10f}".rstrip("0").partition(".")[2])
     text = f"{abs(price):.{decimals}f}"
+    distance = abs(price - level)
+    reached, is_explained = set(), False
     for place in range(len(text) - 1):
         pair = text[place : place + 2]
         if "." in pair or pair[0] == pair[1]:
             continue
         swapped = math.copysign(float(text[:place] + pair[::-1] + text[place + 2 :]), price)
-        if _explains(swapped, price, level, scale, tick):
-            return True
-    return False
+        if abs(swapped - price) <= 2 * distance:
+            reached.add(swapped)
+        is_explained |= _explains(swapped, price, level, scale, tick)
+    if not is_explained:
+        return 0.0
+    # Values that would have passed, among all those as far from the settle as twice the distance.
+    chance = len(reached) * 2 * min(max(_WITHIN_SCALES * scale, _WITHIN_TICKS * tick), _LEFT_OVER * distance)
+    return min(_MOST_WEIGHT, 1.0 + max(0.0, -math.log10(chance / (4 * distance))))
 
 
 def _explains(meant: float, price: float, level: float, scale: float, tick: float) -> bool:

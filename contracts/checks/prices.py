@@ -8,8 +8,10 @@ witness, is held against `refuted_score`; the distance times the same factors ag
 
 - its own range stands where the curve puts the contract and the settle outside of it: 1.6
 - it is back where the curve expects it within three sessions: 1.4
-- it has the form of a slip (a power of ten, the other sign, two digits changed about, another contract's row): 2.0
+- it has the form of a slip (a power of ten, the other sign, another contract's row): 2.0;
+  two digits changed about: up to 2.5, by how seldom chance would do it
 - it moved by more than the daily limit: 1.3
+- the contract follows the curve by fits and starts, standing still on many sessions: 0.5
 - its whole bar stands off as well, or nothing traded: 1.0
 
 A settle whose range reaches to it from where the curve puts it is a fact, however strange, and so is what moved by
@@ -26,7 +28,7 @@ import numpy as np
 
 from contracts.checks.bars import Bar, hear_bar
 from contracts.checks.curve import LONGEST_LOOK_BACK, Curve
-from contracts.checks.forms import copy_of_twins, find_twins, has_digits_swapped, is_sign_flipped, power_of_ten
+from contracts.checks.forms import copy_of_twins, digits_swapped_weight, find_twins, is_sign_flipped, power_of_ten
 from contracts.findings import Kind
 from contracts.panel import Panel
 from contracts.quality import Quality
@@ -34,7 +36,10 @@ from contracts.quality import Quality
 _LONGEST_LOOK_AHEAD = 3
 # A distance that shrinks to this share of itself has come back.
 _CAME_BACK = 0.4
-_OWN_BAR, _BACK, _FORM, _LIMIT = 1.6, 1.4, 2.0, 1.3
+_OWN_BAR, _BACK, _FORM, _LIMIT, _BY_FITS = 1.6, 1.4, 2.0, 1.3, 0.5
+_TELLING = 1.5
+# A contract that stood still for so many sessions may catch up to anywhere.
+_LATE = 3
 # Scales and ticks from which a cell is looked at closely, as a share of the thresholds: the product of two factors.
 _LOOKED_AT = 0.4
 # What neither came back nor is refuted by its bar is told from so many times the threshold.
@@ -79,6 +84,7 @@ class _Standing:
     distance: float
     scale: float
     is_known: bool
+    is_late: bool
 
     @property
     def off(self) -> float:
@@ -134,9 +140,12 @@ class _Court:
         """
         curve = self.curve
         told = curve.foretell(row, contract, since)
-        price = float(curve.reported[row, contract])
-        expected = float(curve.clean[since, contract]) + told.move
-        distance = price - expected
+        price, last = float(curve.reported[row, contract]), float(curve.clean[since, contract])
+        expected = last + told.move
+        distance, scale = price - expected, curve.scale(row, contract, since, told)
+        if told.count == 1 and abs(price - last) < 0.5 * abs(told.move):
+            # Of two contracts the one that leapt is the strange one.
+            distance = 0.0
         anchor = self._anchor(since, contract)
         if anchor >= 0:
             other = curve.foretell(row, contract, anchor)
@@ -145,8 +154,17 @@ class _Court:
                 if seen * distance <= 0:
                     distance = 0.0
                 elif abs(seen) < abs(distance):
-                    distance = seen
-        return _Standing(since, expected, distance, curve.scale(row, contract, since, told), told.count >= 2)
+                    distance, scale = seen, curve.scale(row, contract, anchor, other)
+        return _Standing(since, expected, distance, scale, told.count >= 2, since - anchor >= _LATE and anchor >= 0)
+
+    def is_return(self, row: int, contract: int, standing: _Standing) -> bool:
+        """Whether the settle stands where the curve puts it since the session before the last: that one was wrong."""
+        before = self.curve.last_clean(standing.since, contract)
+        if before < 0:
+            return False
+        told = self.curve.foretell(row, contract, before)
+        off = float(self.curve.reported[row, contract]) - (float(self.curve.clean[before, contract]) + told.move)
+        return abs(off) <= _CAME_BACK * abs(standing.distance)
 
     def _anchor(self, since: int, contract: int) -> int:
         """The row before what kept the contract from standing where the curve puts it; -1 where nothing did."""
@@ -247,9 +265,10 @@ def _judge(court: _Court, row: int, contract: int) -> Verdict | None:
     heard = hear_bar(court.panel, session, contract, price, level)
     power = power_of_ten(price, level, tick)
     is_flipped = is_sign_flipped(price, level, scale, tick)
-    factor = 1.0
-    if power or is_flipped or (standing.is_known and has_digits_swapped(price, level, scale, tick)):
-        factor *= _FORM
+    swapped = digits_swapped_weight(price, level, scale, tick) if standing.is_known else 0.0
+    factor = _FORM if power or is_flipped else max(1.0, swapped)
+    if curve.is_often_still(row, contract):
+        factor *= _BY_FITS
     if heard is Bar.AGAINST:
         factor *= _OWN_BAR
     came_back = court.comes_back(row, contract, standing) if standing.is_known else None
@@ -274,16 +293,19 @@ def _judge(court: _Court, row: int, contract: int) -> Verdict | None:
     if price <= 0 < level and not (heard is Bar.AGAINST and came_back):
         # Only a market that may be negative comes here, and there it is a fact however strange.
         return rule(Kind.CURVE_BREAK if heard is Bar.AGAINST else Kind.LONE_MOVE, Ruling.KEPT, factor)
-    if not standing.is_known:
+    if not (standing.is_known or heard is Bar.AGAINST):
         return None
-    if has_digits_swapped(price, level, scale, tick) and (came_back is not False or heard is Bar.AGAINST):
+    is_final = session >= court.panel.last_trade[contract] - 1
+    may_stand = heard is not Bar.AGAINST and (is_final or (came_back is None and standing.is_late))
+    if swapped > _TELLING and (came_back is not False or heard is Bar.AGAINST) and not may_stand:
         return rule(Kind.DIGITS_SWAPPED, Ruling.REFUTED, factor)
-    if came_back:
+    if came_back and not may_stand:
         return rule(Kind.REVERTING_SPIKE, Ruling.REFUTED, factor)
-    is_open = came_back is None and session < court.panel.last_trade[contract]
-    if heard is Bar.AGAINST or is_open:
+    if heard is Bar.AGAINST or (came_back is None and not may_stand):
         return rule(Kind.CURVE_BREAK, Ruling.REFUTED, factor)
-    if standing.off * factor < _KEPT_FROM * quality.refuted_score:
+    if is_final or (since, contract) in court.kept:
+        return rule(Kind.LONE_MOVE, Ruling.KEPT)
+    if standing.is_late or standing.off * factor < _KEPT_FROM * quality.refuted_score or court.is_return(row, contract, standing):
         return None
     return rule(Kind.CURVE_BREAK, Ruling.KEPT, factor)
 

@@ -38,8 +38,11 @@ class Bar(Enum):
     APART = "apart"  # the whole bar stands off with the settle
 
 
-def hear_bar(panel: Panel, session: int, contract: int, price: float, expected: float) -> Bar:
-    """What the bar says of a settle at `price` where the curve expects another."""
+def hear_bar(panel: Panel, session: int, contract: int, price: float, expected: float, last: float) -> Bar:
+    """What the bar says of a settle at `price` where the curve expects another.
+
+    `last` is the clean settle of the session before, NaN for none.
+    """
     low, high = (float(panel.field(name)[session, contract]) for name in ("low", "high"))
     if not panel.field("volume")[session, contract] > 0 or low > high:
         return Bar.SILENT
@@ -54,7 +57,7 @@ def hear_bar(panel: Panel, session: int, contract: int, price: float, expected: 
     if outside > _TOUCHES:
         speaks = outside >= _LEFT_BEHIND and away <= _STAYED and panel.field("volume")[session, contract] >= _LEAST_LOTS
         return Bar.AGAINST if speaks else Bar.SILENT
-    shifted = _shift(panel, session, contract, "low" if price > expected else "high")
+    shifted = _shift(panel, session, contract, "low" if price > expected else "high", last)
     if not np.isnan(shifted):
         away = shifted / (price - expected)
     if away <= _TRADED_ACROSS:
@@ -68,7 +71,7 @@ def hear_bar(panel: Panel, session: int, contract: int, price: float, expected: 
     return Bar.APART
 
 
-def _shift(panel: Panel, session: int, contract: int, side: str) -> float:
+def _shift(panel: Panel, session: int, contract: int, side: str, last: float) -> float:
     """How far the low or high stands from where its neighbours' stand, each seen from its last settle.
 
     The end of the bar that a true lone move leaves behind is where it is in the other contracts. NaN where fewer than
@@ -79,10 +82,11 @@ def _shift(panel: Panel, session: int, contract: int, side: str) -> float:
     columns = slice(max(0, contract - _NEIGHBOURS), contract + _NEIGHBOURS + 1)
     reach = panel.field(side)[session, columns] - panel.field("settle")[session - 1, columns]
     reach = np.where(panel.field("volume")[session, columns] >= _LEAST_LOTS, reach, np.nan)
-    own = contract - columns.start
-    others = np.delete(reach, own)
+    others = np.delete(reach, contract - columns.start)
     others = others[~np.isnan(others)]
-    return float(reach[own] - np.median(others)) if len(others) >= 2 else float("nan")
+    if len(others) < 2:
+        return float("nan")
+    return float(panel.field(side)[session, contract] - last - np.median(others))
 
 
 def _out_of_usual(values: np.ndarray, session: int, contract: int) -> float:

@@ -36,8 +36,10 @@ from contracts.quality import Quality
 _LONGEST_LOOK_AHEAD = 3
 # A distance that shrinks to this share of itself has come back.
 _CAME_BACK = 0.4
-_OWN_BAR, _BACK, _FORM, _LIMIT, _BY_FITS = 1.6, 1.4, 2.0, 1.3, 0.5
+_OWN_BAR, _BACK, _FORM, _LIMIT, _BY_FITS = 1.6, 1.2, 2.0, 1.3, 0.5
 _TELLING = 1.5
+# After a lone move that was kept a contract finds its place; it takes so much more to refute what it does then.
+_AFTER_KEPT = 3.0
 # A contract that stood still for so many sessions may catch up to anywhere.
 _LATE = 3
 # Scales and ticks from which a cell is looked at closely, as a share of the thresholds: the product of two factors.
@@ -99,6 +101,8 @@ class _Court:
         self.panel, self.quality, self.tick = panel, quality, panel.market.tick_size
         # Cells that stand alone and were kept: what follows them may be their return.
         self.kept: set[tuple[int, int]] = set()
+        # Cells that were refuted: a run of them is held against the last right settle.
+        self.refuted: set[tuple[int, int]] = set()
         self.twins: dict[tuple[int, int], int] = {}
 
     def candidates(self) -> list[tuple[int, float, int]]:
@@ -142,7 +146,10 @@ class _Court:
         told = curve.foretell(row, contract, since)
         price, last = float(curve.reported[row, contract]), float(curve.clean[since, contract])
         expected = last + told.move
-        distance, scale = price - expected, curve.scale(row, contract, since, told)
+        right = since
+        while (right, contract) in self.refuted and curve.last_clean(right, contract) >= 0:
+            right = curve.last_clean(right, contract)
+        distance, scale = price - expected, curve.scale(row, contract, right, told)
         if told.count == 1 and abs(price - last) < 0.5 * abs(told.move):
             # Of two contracts the one that leapt is the strange one.
             distance = 0.0
@@ -156,6 +163,13 @@ class _Court:
                 elif abs(seen) < abs(distance):
                     distance, scale = seen, curve.scale(row, contract, anchor, other)
         return _Standing(since, expected, distance, scale, told.count >= 2, since - anchor >= _LATE and anchor >= 0)
+
+    def goes_on(self, row: int, contract: int, standing: _Standing) -> bool:
+        """Whether the settle stands where the refuted one before it stood."""
+        if (standing.since, contract) not in self.refuted:
+            return False
+        was = float(self.curve.reported[standing.since, contract] - self.curve.clean[standing.since, contract])
+        return abs(standing.distance - was) <= _CAME_BACK * abs(was)
 
     def is_return(self, row: int, contract: int, standing: _Standing) -> bool:
         """Whether the settle stands where the curve puts it since the session before the last: that one was wrong."""
@@ -227,6 +241,7 @@ def judge_settles(panel: Panel, settle: np.ndarray, exempt: np.ndarray, quality:
             court.kept.add(cell)
         else:
             curve.clean[row, contract] = verdict.expected
+            court.refuted.add(cell)
             following = np.flatnonzero(~np.isnan(curve.reported[row + 1 : row + 1 + LONGEST_LOOK_BACK, contract]))
             if len(following):
                 heapq.heappush(waiting, (row + 1 + int(following[0]), -math.inf, contract))
@@ -262,7 +277,8 @@ def _judge(court: _Court, row: int, contract: int) -> Verdict | None:
     strongest = _OWN_BAR * _FORM * _BACK
     if standing.off * strongest < quality.refuted_score or distance * strongest < quality.refuted_ticks * tick:
         return None
-    heard = hear_bar(court.panel, session, contract, price, level)
+    before = float(curve.clean[since, contract])
+    heard = hear_bar(court.panel, session, contract, price, level, before if since == row - 1 else math.nan)
     power = power_of_ten(price, level, tick)
     is_flipped = is_sign_flipped(price, level, scale, tick)
     swapped = digits_swapped_weight(price, level, scale, tick) if standing.is_known else 0.0
@@ -274,7 +290,7 @@ def _judge(court: _Court, row: int, contract: int) -> Verdict | None:
     came_back = court.comes_back(row, contract, standing) if standing.is_known else None
     if came_back:
         factor *= _BACK
-    limit, before = court.panel.market.daily_limit, float(curve.clean[since, contract])
+    limit = court.panel.market.daily_limit
     moved = abs(price - before)
     if limit is not None and since == row - 1 and moved > limit + 0.5 * tick:
         factor *= _LIMIT
@@ -297,11 +313,15 @@ def _judge(court: _Court, row: int, contract: int) -> Verdict | None:
         return None
     is_final = session >= court.panel.last_trade[contract] - 1
     may_stand = heard is not Bar.AGAINST and (is_final or (came_back is None and standing.is_late))
+    if (since, contract) in court.kept and standing.off * factor < _AFTER_KEPT * quality.refuted_score:
+        may_stand = heard is not Bar.AGAINST
     if swapped > _TELLING and (came_back is not False or heard is Bar.AGAINST) and not may_stand:
         return rule(Kind.DIGITS_SWAPPED, Ruling.REFUTED, factor)
     if came_back and not may_stand:
         return rule(Kind.REVERTING_SPIKE, Ruling.REFUTED, factor)
     if heard is Bar.AGAINST or (came_back is None and not may_stand):
+        return rule(Kind.CURVE_BREAK, Ruling.REFUTED, factor)
+    if heard is Bar.SILENT and court.goes_on(row, contract, standing):
         return rule(Kind.CURVE_BREAK, Ruling.REFUTED, factor)
     if is_final or (since, contract) in court.kept:
         return rule(Kind.LONE_MOVE, Ruling.KEPT)

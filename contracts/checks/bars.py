@@ -3,9 +3,9 @@
 Belongs here: one bar, beside the bars of its contract's past and of its neighbours. Does not belong here: the curve
 (`curve.py`), the judgment (`prices.py`).
 
-A true lone move trades its way: its range reaches from near where the curve puts the contract to the settle. A wrong
-settle lies outside a range that stands where the curve puts it. A wrong row stands off as a whole, no wider and no
-busier than usual. Common practice, no source; the limits below were chosen on the tuning seeds of the bench.
+A true lone move trades its way: its range is wide, or its volume large, and reaches from near where the curve puts the
+contract to the settle. A wrong settle lies outside a range that stands where the curve puts it, or inside of one no
+wider than usual. A wrong row stands off as a whole, no wider and no busier than usual. Common practice, no source; the limits below were chosen on the tuning seeds of the bench.
 """
 
 from enum import Enum
@@ -20,9 +20,9 @@ _LEFT_BEHIND = 0.5
 _STAYED = 0.3
 _TRADED_ACROSS = 0.6
 _PERHAPS_ACROSS = 0.78
-# Against its own past 20 and its neighbours' ratio on the session.
-_WIDER = 1.8
-_BUSIER = 2.5
+# Against its own past 20 and its neighbours' ratio on the session; where it traded all the way, less will do.
+_WIDER, _WIDER_AND_ACROSS = 1.8, 1.4
+_BUSIER, _BUSIER_AND_ACROSS = 2.5, 2.0
 _PAST = 20
 _NEIGHBOURS = 3
 # Fewer lots than these see too little of a session to speak against a settle.
@@ -35,6 +35,7 @@ class Bar(Enum):
     SILENT = "silent"  # no trade, no range, or something in between
     AGAINST = "against"  # the range stands where the curve puts the contract, the settle outside
     BEHIND = "behind"  # the range reaches from there to the settle
+    INSIDE = "inside"  # the range reaches both, and is no wider and no busier than usual
     APART = "apart"  # the whole bar stands off with the settle
 
 
@@ -60,15 +61,15 @@ def hear_bar(panel: Panel, session: int, contract: int, price: float, expected: 
     shifted = _shift(panel, session, contract, "low" if price > expected else "high", last)
     if not np.isnan(shifted):
         away = shifted / (price - expected)
-    if away <= _TRADED_ACROSS:
+    across = away <= _TRADED_ACROSS
+    if not across and away > _PERHAPS_ACROSS:
+        return Bar.APART
+    width = panel.field("high") - panel.field("low")
+    is_wide = not _out_of_usual(width, session, contract) <= (_WIDER_AND_ACROSS if across else _WIDER)
+    volume = panel.field("volume")
+    if is_wide or not _out_of_usual(volume, session, contract) <= (_BUSIER_AND_ACROSS if across else _BUSIER):
         return Bar.BEHIND
-    if away <= _PERHAPS_ACROSS:
-        width = panel.field("high") - panel.field("low")
-        if _out_of_usual(width, session, contract) > _WIDER:
-            return Bar.BEHIND
-        if _out_of_usual(panel.field("volume"), session, contract) > _BUSIER:
-            return Bar.BEHIND
-    return Bar.APART
+    return Bar.INSIDE if across else Bar.APART
 
 
 def _shift(panel: Panel, session: int, contract: int, side: str, last: float) -> float:
@@ -90,10 +91,13 @@ def _shift(panel: Panel, session: int, contract: int, side: str, last: float) ->
 
 
 def _out_of_usual(values: np.ndarray, session: int, contract: int) -> float:
-    """A value's ratio to the median of its contract's past, over the median of that ratio of its neighbours."""
+    """A value's ratio to the median of its contract's past, over the median of that ratio of its neighbours.
+
+    NaN where the contract has too little of a past to tell.
+    """
     columns = range(max(0, contract - _NEIGHBOURS), min(values.shape[1], contract + _NEIGHBOURS + 1))
     ratios: list[float] = []
-    own = 1.0
+    own = float("nan")
     for column in columns:
         past = values[max(0, session - _PAST) : session, column]
         past = past[past > 0]

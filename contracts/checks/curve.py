@@ -127,6 +127,15 @@ class Curve:
         with np.errstate(invalid="ignore", divide="ignore"):
             return np.where(count > 0, (summed[last] - summed[first]) / count, values)
 
+    def _past_median(self, values: np.ndarray) -> np.ndarray:
+        """Median over the last 60 rows before each row; a row without a value counts as the one before it; (R,)."""
+        filled = np.where(np.isnan(values), 0.0, values)
+        last = np.maximum.accumulate(np.where(np.isnan(values), 0, np.arange(len(values))))
+        padded = np.concatenate((np.full(_WINDOW, np.nan), filled[last]))
+        windows = np.lib.stride_tricks.sliding_window_view(padded, _WINDOW)[: len(values)]
+        result = row_medians(windows)
+        return np.where(np.isnan(result), filled, result)
+
     def _measure(self) -> None:
         """Sensitivities, weights and distances of all cells."""
         tick, before, has_before = self.tick, self.before, self.before >= 0
@@ -161,7 +170,7 @@ class Curve:
         magnitude = np.abs(self.distance)
         packed = self._packed(magnitude)
         middle = row_medians(packed)
-        self.typical = self._past_mean(middle)
+        self.typical = self._past_median(middle)
         # How far the whole curve is out of its ordinary shape, by row.
         ratio = middle / np.maximum(self.typical, _ROUNDING * tick)
         is_curve = np.count_nonzero(~np.isnan(packed), axis=1) >= _LEAST_FOR_COMMON

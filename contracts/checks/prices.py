@@ -12,6 +12,7 @@ witness, is held against `refuted_score`; the distance times the same factors ag
   two digits changed about: up to 2.5, by how seldom chance would do it
 - it moved by more than the daily limit: 1.3
 - the contract follows the curve by fits and starts, standing still on many sessions: 0.5
+- the refuted settle before it stood off as far: at least 2.0
 - its whole bar stands off as well, or nothing traded: 1.0
 
 A settle whose range reaches to it from where the curve puts it is a fact, however strange, and so is what moved by
@@ -40,13 +41,17 @@ _OWN_BAR, _BACK, _FORM, _LIMIT, _BY_FITS = 1.6, 1.2, 2.0, 1.3, 0.5
 _TELLING = 1.5
 # After a lone move that was kept a contract finds its place; it takes so much more to refute what it does then.
 _AFTER_KEPT = 3.0
+_LEAPT = 4.0
 # A contract that stood still for so many sessions may catch up to anywhere.
 _LATE = 3
+# Into expiry contracts are squeezed; what cannot be refuted there is told as a fact.
+_INTO_EXPIRY = 15
 # Scales and ticks from which a cell is looked at closely, as a share of the thresholds: the product of two factors.
 _LOOKED_AT = 0.4
 # What neither came back nor is refuted by its bar is told from so many times the threshold.
-_KEPT_FROM = 1.5
+_KEPT_FROM = 2.5
 _LONGEST_HELD_BACK = 30
+_LONGEST_SHIFT = 60
 
 
 class Ruling(StrEnum):
@@ -103,6 +108,8 @@ class _Court:
         self.kept: set[tuple[int, int]] = set()
         # Cells that were refuted: a run of them is held against the last right settle.
         self.refuted: set[tuple[int, int]] = set()
+        # The last break of each contract that was kept: its row and distance.
+        self.shifts: dict[int, tuple[int, float]] = {}
         self.twins: dict[tuple[int, int], int] = {}
 
     def candidates(self) -> list[tuple[int, float, int]]:
@@ -153,6 +160,8 @@ class _Court:
         if told.count == 1 and abs(price - last) < 0.5 * abs(told.move):
             # Of two contracts the one that leapt is the strange one.
             distance = 0.0
+        # ... and where the other hardly moved it is known.
+        is_known = told.count >= 2 or (told.count == 1 and abs(price - last) > _LEAPT * abs(told.move))
         anchor = self._anchor(since, contract)
         if anchor >= 0:
             other = curve.foretell(row, contract, anchor)
@@ -162,7 +171,7 @@ class _Court:
                     distance = 0.0
                 elif abs(seen) < abs(distance):
                     distance, scale = seen, curve.scale(row, contract, anchor, other)
-        return _Standing(since, expected, distance, scale, told.count >= 2, since - anchor >= _LATE and anchor >= 0)
+        return _Standing(since, expected, distance, scale, is_known, since - anchor >= _LATE and anchor >= 0)
 
     def goes_on(self, row: int, contract: int, standing: _Standing) -> bool:
         """Whether the settle stands where the refuted one before it stood."""
@@ -172,7 +181,10 @@ class _Court:
         return abs(standing.distance - was) <= _CAME_BACK * abs(was)
 
     def is_return(self, row: int, contract: int, standing: _Standing) -> bool:
-        """Whether the settle stands where the curve puts it since the session before the last: that one was wrong."""
+        """Whether the settle only comes back: from the last, which stood off, or from a break that was kept."""
+        row_before, distance = self.shifts.get(contract, (-_LONGEST_SHIFT, 0.0))
+        if row - row_before <= _LONGEST_SHIFT and abs(standing.distance + distance) <= _CAME_BACK * abs(distance):
+            return True
         before = self.curve.last_clean(standing.since, contract)
         if before < 0:
             return False
@@ -204,7 +216,7 @@ class _Court:
             if math.isnan(price):
                 continue
             told = curve.foretell(later, contract, standing.since)
-            if told.count < 2:
+            if told.count == 0:
                 continue
             follows = False
             off = price - (float(curve.clean[standing.since, contract]) + told.move)
@@ -290,6 +302,9 @@ def _judge(court: _Court, row: int, contract: int) -> Verdict | None:
     came_back = court.comes_back(row, contract, standing) if standing.is_known else None
     if came_back:
         factor *= _BACK
+    goes_on = heard is not Bar.APART and heard is not Bar.BEHIND and court.goes_on(row, contract, standing)
+    if goes_on:
+        factor = max(factor, _FORM)
     limit = court.panel.market.daily_limit
     moved = abs(price - before)
     if limit is not None and since == row - 1 and moved > limit + 0.5 * tick:
@@ -311,8 +326,11 @@ def _judge(court: _Court, row: int, contract: int) -> Verdict | None:
         return rule(Kind.CURVE_BREAK if heard is Bar.AGAINST else Kind.LONE_MOVE, Ruling.KEPT, factor)
     if not (standing.is_known or heard is Bar.AGAINST):
         return None
-    is_final = session >= court.panel.last_trade[contract] - 1
-    may_stand = heard is not Bar.AGAINST and (is_final or (came_back is None and standing.is_late))
+    left = int(court.panel.last_trade[contract]) - session
+    is_final = left <= 1
+    may_stand = heard is not Bar.AGAINST and (
+        is_final or (came_back is None and (standing.is_late or heard is Bar.INSIDE))
+    )
     if (since, contract) in court.kept and standing.off * factor < _AFTER_KEPT * quality.refuted_score:
         may_stand = heard is not Bar.AGAINST
     if swapped > _TELLING and (came_back is not False or heard is Bar.AGAINST) and not may_stand:
@@ -321,12 +339,13 @@ def _judge(court: _Court, row: int, contract: int) -> Verdict | None:
         return rule(Kind.REVERTING_SPIKE, Ruling.REFUTED, factor)
     if heard is Bar.AGAINST or (came_back is None and not may_stand):
         return rule(Kind.CURVE_BREAK, Ruling.REFUTED, factor)
-    if heard is Bar.SILENT and court.goes_on(row, contract, standing):
+    if goes_on:
         return rule(Kind.CURVE_BREAK, Ruling.REFUTED, factor)
-    if is_final or (since, contract) in court.kept:
+    if heard is Bar.INSIDE or left <= _INTO_EXPIRY or (since, contract) in court.kept:
         return rule(Kind.LONE_MOVE, Ruling.KEPT)
     if standing.is_late or standing.off * factor < _KEPT_FROM * quality.refuted_score or court.is_return(row, contract, standing):
         return None
+    court.shifts[contract] = (row, standing.distance)
     return rule(Kind.CURVE_BREAK, Ruling.KEPT, factor)
 
 

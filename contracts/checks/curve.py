@@ -48,6 +48,7 @@ _NEAR_EXPIRY = 15
 _WIDER_NEAR_EXPIRY = 1.5
 _OF_MOVE = 0.03
 _OF_SPREAD = 0.7
+_OF_FIRST_MOVES = 0.3
 _FITS_WINDOW = 20
 _FITS_SHARE = 0.2
 
@@ -143,6 +144,7 @@ class Curve:
         self._find_held_back(change)
         size = np.maximum(row_medians(self._packed(np.abs(change))), 2 * tick)
         size = np.where(np.isnan(size), 2 * tick, size)
+        self.size = size
         usual = self._past_mean(size)[self.row]
         size = size[self.row]
         moves = np.where(self.is_bound & ~self.is_locked, np.nan, change)
@@ -344,6 +346,8 @@ class Curve:
         past = past[~np.isnan(past)]
         typical = float(self.typical[row])
         guess = MAD_SCALE * _NEWLY_LISTED * (0.0 if math.isnan(typical) else typical)
+        if row < _LEAST_HISTORY:
+            guess = max(guess, _OF_FIRST_MOVES * float(self.size[row]))
         known = min(len(past), _LEAST_HISTORY) / _LEAST_HISTORY
         own = (known * MAD_SCALE * float(np.median(past)) if len(past) else 0.0) + (1 - known) * guess
         own = max(own, 0.5 * self.tick) * self.unrest[row]

@@ -13,6 +13,7 @@ witness, is held against `refuted_score`; the distance times the same factors ag
 - it moved by more than the daily limit: 1.3
 - the contract follows the curve by fits and starts, standing still on many sessions: 0.5
 - the refuted settle before it stood off as far: at least 2.0
+- it lies in a range that reaches to where the curve puts it and is no wider than usual: 0.8
 - its whole bar stands off as well, or nothing traded: 1.0
 
 A settle whose range reaches to it from where the curve puts it is a fact, however strange, and so is what moved by
@@ -37,8 +38,10 @@ from contracts.quality import Quality
 _LONGEST_LOOK_AHEAD = 3
 # A distance that shrinks to this share of itself has come back.
 _CAME_BACK = 0.4
-_OWN_BAR, _BACK, _FORM, _LIMIT, _BY_FITS = 1.6, 1.2, 2.0, 1.3, 0.5
-_TELLING = 1.5
+_OWN_BAR, _BACK, _FORM, _LIMIT, _BY_FITS, _INSIDE = 1.6, 1.2, 2.0, 1.3, 0.5, 0.8
+_TELLING = 1.25
+# A run needs a beginning of so many times the threshold.
+_STRONG = 1.5
 # After a lone move that was kept a contract finds its place; it takes so much more to refute what it does then.
 _AFTER_KEPT = 3.0
 _LEAPT = 4.0
@@ -107,7 +110,7 @@ class _Court:
         # Cells that stand alone and were kept: what follows them may be their return.
         self.kept: set[tuple[int, int]] = set()
         # Cells that were refuted: a run of them is held against the last right settle.
-        self.refuted: set[tuple[int, int]] = set()
+        self.refuted: dict[tuple[int, int], float] = {}
         # The last break of each contract that was kept: its row and distance.
         self.shifts: dict[int, tuple[int, float]] = {}
         self.twins: dict[tuple[int, int], int] = {}
@@ -175,7 +178,7 @@ class _Court:
 
     def goes_on(self, row: int, contract: int, standing: _Standing) -> bool:
         """Whether the settle stands where the refuted one before it stood."""
-        if (standing.since, contract) not in self.refuted:
+        if self.refuted.get((standing.since, contract), 0.0) < _STRONG * self.quality.refuted_score:
             return False
         was = float(self.curve.reported[standing.since, contract] - self.curve.clean[standing.since, contract])
         return abs(standing.distance - was) <= _CAME_BACK * abs(was)
@@ -253,7 +256,7 @@ def judge_settles(panel: Panel, settle: np.ndarray, exempt: np.ndarray, quality:
             court.kept.add(cell)
         else:
             curve.clean[row, contract] = verdict.expected
-            court.refuted.add(cell)
+            court.refuted[cell] = verdict.score
             following = np.flatnonzero(~np.isnan(curve.reported[row + 1 : row + 1 + LONGEST_LOOK_BACK, contract]))
             if len(following):
                 heapq.heappush(waiting, (row + 1 + int(following[0]), -math.inf, contract))
@@ -299,6 +302,8 @@ def _judge(court: _Court, row: int, contract: int) -> Verdict | None:
         factor *= _BY_FITS
     if heard is Bar.AGAINST:
         factor *= _OWN_BAR
+    elif heard is Bar.INSIDE:
+        factor *= _INSIDE
     came_back = court.comes_back(row, contract, standing) if standing.is_known else None
     if came_back:
         factor *= _BACK
@@ -329,7 +334,9 @@ def _judge(court: _Court, row: int, contract: int) -> Verdict | None:
     left = int(court.panel.last_trade[contract]) - session
     is_final = left <= 1
     may_stand = heard is not Bar.AGAINST and (
-        is_final or (came_back is None and (standing.is_late or heard is Bar.INSIDE))
+        is_final
+        or (came_back is None and (standing.is_late or heard is Bar.INSIDE))
+        or (heard is Bar.INSIDE and left <= _INTO_EXPIRY)
     )
     if (since, contract) in court.kept and standing.off * factor < _AFTER_KEPT * quality.refuted_score:
         may_stand = heard is not Bar.AGAINST

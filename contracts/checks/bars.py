@@ -5,7 +5,8 @@ Belongs here: one bar, beside the bars of its contract's past and of its neighbo
 
 A true lone move trades its way: its range is wide, or its volume large, and reaches from near where the curve puts the
 contract to the settle. A wrong settle lies outside a range that stands where the curve puts it, or inside of one no
-wider than usual. A wrong row stands off as a whole, no wider and no busier than usual. Common practice, no source; the limits below were chosen on the tuning seeds of the bench.
+wider than usual. A wrong row stands off as a whole, no wider and no busier than usual; a bar that carries on from its
+contract's last settle, while the curve moves away, does not: so a squeeze holds a contract up. Common practice, no source; the limits below were chosen on the tuning seeds of the bench.
 """
 
 from enum import Enum
@@ -20,6 +21,7 @@ _LEFT_BEHIND = 0.5
 _STAYED = 0.3
 _TRADED_ACROSS = 0.6
 _PERHAPS_ACROSS = 0.78
+_CARRIES_ON = 0.2
 # Against its own past 20 and its neighbours' ratio on the session; where it traded all the way, less will do.
 _WIDER, _WIDER_AND_ACROSS = 1.8, 1.4
 _BUSIER, _BUSIER_AND_ACROSS = 2.5, 2.0
@@ -34,7 +36,7 @@ class Bar(Enum):
 
     SILENT = "silent"  # no trade, no range, or something in between
     AGAINST = "against"  # the range stands where the curve puts the contract, the settle outside
-    BEHIND = "behind"  # the range reaches from there to the settle
+    BEHIND = "behind"  # the range reaches from there, or from the last settle, to the settle
     INSIDE = "inside"  # the range reaches both, and is no wider and no busier than usual
     APART = "apart"  # the whole bar stands off with the settle
 
@@ -58,6 +60,8 @@ def hear_bar(panel: Panel, session: int, contract: int, price: float, expected: 
     if outside > _TOUCHES:
         speaks = outside >= _LEFT_BEHIND and away <= _STAYED and panel.field("volume")[session, contract] >= _LEAST_LOTS
         return Bar.AGAINST if speaks else Bar.SILENT
+    if away > _TRADED_ACROSS and max(low - last, last - high, 0.0) - half <= _CARRIES_ON * distance:
+        return Bar.BEHIND
     shifted = _shift(panel, session, contract, "low" if price > expected else "high", last)
     if not np.isnan(shifted):
         away = shifted / (price - expected)

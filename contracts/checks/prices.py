@@ -336,7 +336,7 @@ def _judge(court: _Court, row: int, contract: int) -> Verdict | None:
     may_stand = heard is not Bar.AGAINST and (
         is_final
         or (came_back is None and (standing.is_late or heard is Bar.INSIDE))
-        or (heard is Bar.INSIDE and left <= _INTO_EXPIRY)
+        or (left <= _INTO_EXPIRY and (heard is Bar.INSIDE or standing.off * factor < 2 * quality.refuted_score))
     )
     if (since, contract) in court.kept and standing.off * factor < _AFTER_KEPT * quality.refuted_score:
         may_stand = heard is not Bar.AGAINST

@@ -12,6 +12,7 @@ import numpy as np
 from pydantic import AfterValidator, Field
 
 from contracts.arrivals import Bars
+from contracts.checks.kinks import Kink, find_kinks
 from contracts.checks.prices import Ruling, Verdict, judge_settles
 from contracts.declared import Declared
 from contracts.findings import Action, Finding, Kind, Severity
@@ -80,7 +81,8 @@ def clean_panel(panel: Panel, bars: Bars, repairs: tuple[DeclaredRepair, ...], q
     values = panel.values.copy()
     declared, findings = _make_declared(panel, bars, values, repairs)
     settle = values[_SETTLE]
-    verdicts = judge_settles(panel, settle, declared, quality)
+    judged = judge_settles(panel, settle, declared, quality)
+    verdicts = judged.verdicts
     is_repaired, is_masked = declared.copy(), np.zeros(panel.shape, dtype=bool)
     for verdict in verdicts:
         findings.append(_tell(panel, settle, verdict))
@@ -89,6 +91,8 @@ def clean_panel(panel: Panel, bars: Bars, repairs: tuple[DeclaredRepair, ...], q
         at = (verdict.session, verdict.contract)
         if verdict.power:
             _shift_back(values, at, settle[at], verdict.power)
+    for kink in find_kinks(judged.curve, judged.refuted, judged.kept, quality):
+        findings.append(_tell_kink(panel, settle, kink))
     for verdict in verdicts:
         if verdict.ruling is Ruling.REFUTED:
             at = (verdict.session, verdict.contract)
@@ -100,7 +104,7 @@ def clean_panel(panel: Panel, bars: Bars, repairs: tuple[DeclaredRepair, ...], q
     usable = ~np.isnan(panel.field("settle")) & ~is_masked & (~is_repaired | declared)
     return Clean(
         prices, values[BAR_FIELDS.index("volume")], values[BAR_FIELDS.index("open_interest")],
-        is_repaired, is_masked, usable, tuple(verdicts), tuple(findings),
+        is_repaired, is_masked, usable, verdicts, tuple(findings),
     )  # fmt: skip
 
 
@@ -223,6 +227,17 @@ def _tell(panel: Panel, settle: np.ndarray, verdict: Verdict) -> Finding:
         verdict.kind, severity, f"{label}, {day}: settle {price:.10g} {says}; {done}", panel.market.code, label, day,
         "settle", price, verdict.expected if is_known else None, _known(verdict.score), _known(verdict.threshold),
         action, verdict.expected if action is Action.REPAIRED else None,
+    )  # fmt: skip
+
+
+def _tell_kink(panel: Panel, settle: np.ndarray, kink: Kink) -> Finding:
+    """A drift, for a person to look at; no session of it is wrong by itself."""
+    label, day = panel.contracts[kink.contract], day_of(panel.sessions[kink.session])
+    price, drift = float(settle[kink.session, kink.contract]), round(kink.drift, 6)
+    message = f"{label}, {day}: settle {price:.10g} has drifted {drift:+.6g} off its neighbours without a leap; kept"
+    return Finding(
+        Kind.CURVE_KINKED, Severity.REVIEW if kink.is_plain else Severity.NOTE, message, panel.market.code, label, day,
+        "settle", price, round(price - drift, 10), kink.score, kink.threshold,
     )  # fmt: skip
 
 

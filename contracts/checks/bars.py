@@ -9,6 +9,8 @@ wider than usual. A wrong row stands off as a whole, no wider and no busier than
 contract's last settle, while the curve moves away, does not: so a squeeze holds a contract up. Common practice, no source; the limits below were chosen on the tuning seeds of the bench.
 """
 
+import math
+import statistics
 from enum import Enum
 
 import numpy as np
@@ -68,10 +70,12 @@ def hear_bar(panel: Panel, session: int, contract: int, price: float, expected: 
     across = away <= _TRADED_ACROSS
     if not across and away > _PERHAPS_ACROSS:
         return Bar.APART
-    width = panel.field("high") - panel.field("low")
-    is_wide = not _out_of_usual(width, session, contract) <= (_WIDER_AND_ACROSS if across else _WIDER)
-    volume = panel.field("volume")
-    if is_wide or not _out_of_usual(volume, session, contract) <= (_BUSIER_AND_ACROSS if across else _BUSIER):
+    near = slice(max(0, contract - _NEIGHBOURS), contract + _NEIGHBOURS + 1)
+    recent, own = slice(max(0, session - _PAST), session + 1), contract - near.start
+    width = panel.field("high")[recent, near] - panel.field("low")[recent, near]
+    if not _out_of_usual(width, own) <= (_WIDER_AND_ACROSS if across else _WIDER):
+        return Bar.BEHIND
+    if not _out_of_usual(panel.field("volume")[recent, near], own) <= (_BUSIER_AND_ACROSS if across else _BUSIER):
         return Bar.BEHIND
     return Bar.INSIDE if across else Bar.APART
 
@@ -94,22 +98,16 @@ def _shift(panel: Panel, session: int, contract: int, side: str, last: float) ->
     return float(panel.field(side)[session, contract] - last - np.median(others))
 
 
-def _out_of_usual(values: np.ndarray, session: int, contract: int) -> float:
-    """A value's ratio to the median of its contract's past, over the median of that ratio of its neighbours.
+def _out_of_usual(values: np.ndarray, own: int) -> float:
+    """The last value's ratio to the median before it in column `own`, over the median of the other columns' ratios.
 
     NaN where the contract has too little of a past to tell.
     """
-    columns = range(max(0, contract - _NEIGHBOURS), min(values.shape[1], contract + _NEIGHBOURS + 1))
     ratios: list[float] = []
-    own = float("nan")
-    for column in columns:
-        past = values[max(0, session - _PAST) : session, column]
-        past = past[past > 0]
-        now = float(values[session, column])
-        if len(past) < _PAST // 4 or not now > 0:
-            continue
-        if column == contract:
-            own = now / float(np.median(past))
-        else:
-            ratios.append(now / float(np.median(past)))
-    return own / float(np.median(ratios)) if ratios else own
+    for column in range(values.shape[1]):
+        past = [value for value in values[:-1, column].tolist() if value > 0]
+        now = float(values[-1, column])
+        is_known = len(past) >= _PAST // 4 and now > 0
+        ratios.append(now / statistics.median(past) if is_known else math.nan)
+    others = [ratio for place, ratio in enumerate(ratios) if place != own and not math.isnan(ratio)]
+    return ratios[own] / statistics.median(others) if others else ratios[own]

@@ -13,12 +13,14 @@ says since its last session and what it says since its last free one. Clipping, 
 MAD are common practice, no source. All of it is past data, so a night's answer does not change when the next comes.
 """
 
+import bisect
 import math
+import statistics
 from dataclasses import dataclass
 
 import numpy as np
 
-from contracts.checks.robust import MAD_SCALE, row_medians, weighted_medians
+from contracts.checks.robust import MAD_SCALE, row_medians, weighted_median, weighted_medians
 from contracts.panel import Panel
 from contracts.quality import Quality
 
@@ -146,6 +148,7 @@ class Curve:
         size = np.where(np.isnan(size), 2 * tick, size)
         self.size = size
         usual = self._past_mean(size)[self.row]
+        self.usual = usual
         size = size[self.row]
         moves = np.where(self.is_bound & ~self.is_locked, np.nan, change)
         self.common = np.cumsum(np.nan_to_num(row_medians(self._packed(moves))))
@@ -280,51 +283,55 @@ class Curve:
     def foretell(self, row: int, contract: int, since: int) -> Foretold:
         """The contract's move from one row to another, as the clean settles of the nearest contracts foretell it."""
         now, then = self.clean[row], self.clean[since]
-        both = ~(np.isnan(now) | np.isnan(then))
-        both[contract] = False
-        others = np.flatnonzero(both)
-        if not len(others):
-            return Foretold(0.0, 0.0, 0)
-        live = np.flatnonzero(~np.isnan(now))
-        steps = np.searchsorted(live, others) - np.searchsorted(live, contract)
+        live = np.flatnonzero(~np.isnan(now)).tolist()
+        own = bisect.bisect_left(live, contract)
         # Without a clean settle of its own the contract is not counted among the live ones.
-        steps = np.where((steps >= 0) & (np.isnan(now[contract])), steps + 1, steps)
-        if len(others) > self.quality.nearest_contracts:
-            nearest = np.argsort(np.abs(steps), kind="stable")[: self.quality.nearest_contracts]
-            others, steps = others[nearest], steps[nearest]
-        near = np.clip(np.abs(steps), 1, 3)
-        which = np.where(steps < 0, 3 - near, 2 + near)
+        is_live = own < len(live) and live[own] == contract
+        steps = [place - own + (0 if is_live or place < own else 1) for place in range(len(live))]
         cell = self._nearest_cell(row, contract)
-        told = self.sensitivity[which, cell] * (now[others] - then[others])
-        cells, bases = self.cell[row, others], self.cell[since, others]
-        is_free = ~(self.is_bound[cells] & (cells >= 0) | self.is_bound[bases] & (bases >= 0))
-        weight = np.where(is_free, 1.0, _HARDLY) * (self.error[which, cell] * np.maximum(1, np.abs(steps) / 3)) ** -2.0
-        error = self.error[which, cell]
+        told: list[float] = []
+        weights: list[float] = []
+        errors: list[float] = []
+        for step, other in sorted(zip(steps, live, strict=True), key=lambda pair: (abs(pair[0]), pair[0])):
+            base = float(then[other])
+            if step == 0 or math.isnan(base):
+                continue
+            near = min(abs(step), 3)
+            which = 3 - near if step < 0 else 2 + near
+            here, there = self.cell[row, other], self.cell[since, other]
+            is_free = not (here >= 0 and self.is_bound[here] or there >= 0 and self.is_bound[there])
+            error = float(self.error[which, cell])
+            told.append(float(self.sensitivity[which, cell]) * (float(now[other]) - base))
+            weights.append((1.0 if is_free else _HARDLY) * (error * max(1.0, abs(step) / 3)) ** -2.0)
+            errors.append(error)
+            if len(told) == self.quality.nearest_contracts:
+                break
+        count = len(told)
+        if not count:
+            return Foretold(0.0, 0.0, 0)
         if self.has_common[row]:
-            told = np.append(told, self.sensitivity[-1, cell] * (self.common[row] - self.common[since]))
-            is_limit = self.is_limit_row[row] or self.is_limit_row[since]
-            weight = np.append(weight, (_HARDLY if is_limit else 1.0) * self.error[-1, cell] ** -2.0)
-            error = np.append(error, self.error[-1, cell])
-        if len(weight) > 1:
-            weight = np.minimum(weight, _MOST_OF_OTHERS * (weight.sum() - weight.max()))
-        middle = float(weighted_medians(told[:, None], weight[:, None])[0])
-        off = np.abs(told - middle)
-        kept = np.where(off <= _LEFT_OUT * np.maximum(error, self.tick), weight, 0.0)
-        total = float(kept.sum())
-        move = float((kept * told).sum() / total) if total > 0 else middle
-        if len(told) > _FEW_WITNESSES:
-            spread = MAD_SCALE * float(weighted_medians(off[:, None], weight[:, None])[0])
-        else:
-            # Of two or three witnesses none can be outvoted: one that disagrees makes all of them doubtful.
-            spread = math.sqrt(float((weight * off**2).sum() / weight.sum()))
-        return Foretold(move, spread, len(others))
+            told.append(float(self.sensitivity[-1, cell] * (self.common[row] - self.common[since])))
+            errors.append(float(self.error[-1, cell]))
+            weights.append((_HARDLY if self.is_limit_row[row] or self.is_limit_row[since] else 1.0) * errors[-1] ** -2.0)
+        return Foretold(*self._agree(told, weights, errors), count)
 
-    def is_often_still(self, row: int, contract: int) -> bool:
-        """Whether the contract stood still on many of its last sessions: its settles follow the curve by fits."""
-        cell = self._nearest_cell(row, contract)
-        place = self.place[cell]
-        past = self.by_contract[max(self.start[cell], place - _FITS_WINDOW) : place]
-        return len(past) > 0 and float(self.is_bound[past].mean()) >= _FITS_SHARE
+    def _agree(self, told: list[float], weights: list[float], errors: list[float]) -> tuple[float, float]:
+        """Robust weighted mean of what witnesses tell, and how far they disagree."""
+        if len(weights) > 1:
+            most = _MOST_OF_OTHERS * (sum(weights) - max(weights))
+            weights = [min(weight, most) for weight in weights]
+        middle = weighted_median(told, weights)
+        off = [abs(value - middle) for value in told]
+        kept = [
+            weight if away <= _LEFT_OUT * max(error, self.tick) else 0.0
+            for weight, away, error in zip(weights, off, errors, strict=True)
+        ]
+        total = sum(kept)
+        move = sum(k * t for k, t in zip(kept, told, strict=True)) / total if total > 0 else middle
+        if len(told) > _FEW_WITNESSES:
+            return move, MAD_SCALE * weighted_median(off, weights)
+        # Of two or three witnesses none can be outvoted: one that disagrees makes all of them doubtful.
+        return move, math.sqrt(sum(w * o * o for w, o in zip(weights, off, strict=True)) / sum(weights))
 
     def _nearest_cell(self, row: int, contract: int) -> int:
         """The contract's cell on a row or, where the row has none that can be, its last one before."""
@@ -342,16 +349,23 @@ class Curve:
         """
         cell = self._nearest_cell(row, contract)
         place = self.place[cell]
-        past = self.magnitude_by_contract[max(self.start[cell], place - _WINDOW) : place]
-        past = past[~np.isnan(past)]
+        past = self.magnitude_by_contract[max(self.start[cell], place - _WINDOW) : place].tolist()
+        past = [size for size in past if size == size]
         typical = float(self.typical[row])
         guess = MAD_SCALE * _NEWLY_LISTED * (0.0 if math.isnan(typical) else typical)
         if row < _LEAST_HISTORY:
             guess = max(guess, _OF_FIRST_MOVES * float(self.size[row]))
         known = min(len(past), _LEAST_HISTORY) / _LEAST_HISTORY
-        own = (known * MAD_SCALE * float(np.median(past)) if len(past) else 0.0) + (1 - known) * guess
-        own = max(own, 0.5 * self.tick) * self.unrest[row]
+        own = (known * MAD_SCALE * statistics.median(past) if past else 0.0) + (1 - known) * guess
+        own = max(own, 0.5 * self.tick) * float(self.unrest[row])
         if self.panel.last_trade[contract] - self.rows[row] <= _NEAR_EXPIRY:
             own *= _WIDER_NEAR_EXPIRY
         own = math.hypot(own, _OF_MOVE * told.move) * math.sqrt(row - since)
         return max(own, _OF_SPREAD * told.spread)
+
+    def is_often_still(self, row: int, contract: int) -> bool:
+        """Whether the contract stood still on many of its last sessions: its settles follow the curve by fits."""
+        cell = self._nearest_cell(row, contract)
+        place = self.place[cell]
+        past = self.by_contract[max(self.start[cell], place - _FITS_WINDOW) : place]
+        return len(past) > 0 and float(self.is_bound[past].mean()) >= _FITS_SHARE

@@ -71,18 +71,21 @@ def find_twins(panel: Panel) -> list[tuple[int, int, int]]:
 
     Alike are settle, range, volume and open interest, and so much was traded or held that it is no accident.
     """
-    settle, volume = panel.field("settle"), panel.field("volume")
-    interest, high, low = (panel.field(name) for name in ("open_interest", "high", "low"))
+    volume = panel.field("volume")
+    with np.errstate(invalid="ignore"):
+        session, contract = np.nonzero(volume > 0)
+    traded, settle = volume[session, contract], panel.field("settle")[session, contract]
     found: list[tuple[int, int, int]] = []
-    for step in range(1, min(_REACH, settle.shape[1] - 1) + 1):
-        same = (settle[:, :-step] == settle[:, step:]) & (volume[:, :-step] == volume[:, step:])
-        for session, contract in np.argwhere(same & (volume[:, step:] > 0)):
-            other = contract + step
-            pairs = [(part[session, contract], part[session, other]) for part in (interest, high, low)]
-            if all(a == b or (a != a and b != b) for a, b in pairs) and (
-                volume[session, contract] >= _LEAST_VOLUME or interest[session, contract] >= _LEAST_INTEREST
-            ):
-                found.append((int(session), int(contract), int(other)))
+    for step in range(1, _REACH + 1):
+        same = (session[:-step] == session[step:]) & (traded[:-step] == traded[step:])
+        for place in np.flatnonzero(same & (settle[:-step] == settle[step:])).tolist():
+            at, pair = int(session[place]), (int(contract[place]), int(contract[place + step]))
+            interest, *sides = (
+                tuple(panel.field(name)[at, column] for column in pair) for name in ("open_interest", "high", "low")
+            )
+            is_much = traded[place] >= _LEAST_VOLUME or interest[0] >= _LEAST_INTEREST
+            if is_much and all(a == b or (a != a and b != b) for a, b in (interest, *sides)):
+                found.append((at, *pair))
     return found
 
 

@@ -119,7 +119,7 @@ class _Court:
         """Cells worth a closer look: (row, minus the distance in scales, contract)."""
         curve, quality = self.curve, self.quality
         size = np.abs(curve.distance)
-        scale = np.maximum(curve.noise, 0.5 * self.tick)
+        scale = np.maximum(curve.noise, 0.5 * self.tick) * curve.unrest[curve.row]
         with np.errstate(invalid="ignore", divide="ignore"):
             far = (size > _LOOKED_AT * quality.refuted_ticks * self.tick) & (size > _LOOKED_AT * quality.refuted_score * scale)
             # A contract alone is held against itself, for powers of ten and signs only.
@@ -228,12 +228,22 @@ class _Court:
         return follows
 
 
-def judge_settles(panel: Panel, settle: np.ndarray, exempt: np.ndarray, quality: Quality) -> list[Verdict]:
+@dataclass(frozen=True, eq=False)
+class Judgment:
+    """Verdicts in order of session and contract; the curve they rest on; (row, contract) refuted, and kept."""
+
+    verdicts: tuple[Verdict, ...]
+    curve: Curve
+    refuted: frozenset[tuple[int, int]]
+    kept: frozenset[tuple[int, int]]
+
+
+def judge_settles(panel: Panel, settle: np.ndarray, exempt: np.ndarray, quality: Quality) -> Judgment:
     """Weigh every settle that stands alone.
 
     `settle` (T, N) on the present scale, NaN where absent; `exempt` (T, N) marks cells a person has spoken for.
     Sessions are taken in order, each against what is clean before it, so that a run of wrong prices is held against
-    the last right one; within a session the strangest first. Returns verdicts in order of session and contract.
+    the last right one; within a session the strangest first.
     """
     court = _Court(panel, settle, quality)
     curve = court.curve
@@ -260,7 +270,8 @@ def judge_settles(panel: Panel, settle: np.ndarray, exempt: np.ndarray, quality:
             following = np.flatnonzero(~np.isnan(curve.reported[row + 1 : row + 1 + LONGEST_LOOK_BACK, contract]))
             if len(following):
                 heapq.heappush(waiting, (row + 1 + int(following[0]), -math.inf, contract))
-    return sorted(verdicts, key=lambda verdict: (verdict.session, verdict.contract))
+    verdicts.sort(key=lambda verdict: (verdict.session, verdict.contract))
+    return Judgment(tuple(verdicts), curve, frozenset(court.refuted), frozenset(court.kept))
 
 
 def _judge(court: _Court, row: int, contract: int) -> Verdict | None:

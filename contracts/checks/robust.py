@@ -52,3 +52,14 @@ def weighted_medians(values: np.ndarray, weights: np.ndarray) -> np.ndarray:
     reached = summed >= 0.5 * summed[-1]
     found = ordered[reached.argmax(axis=0), np.arange(values.shape[1])]
     return np.where(summed[-1] > 0, found, 0.0)
+
+
+def weighted_median(values: list[float], weights: list[float]) -> float:
+    """Weighted median of a few values: the least up to which half of the weight lies."""
+    half = 0.5 * sum(weights)
+    summed = 0.0
+    for value, weight in sorted(zip(values, weights, strict=True)):
+        summed += weight
+        if summed >= half:
+            return value
+    return max(values)

@@ -25,7 +25,8 @@ from contracts.panel import Panel
 from contracts.quality import Quality
 
 LONGEST_LOOK_BACK = 5
-_OFFSETS = (-3, -2, -1, 1, 2, 3)
+_OFFSETS = (-2, -1, 1, 2)
+_REACH = 2
 _WINDOW = 60
 _CLIPPED_AT = 3.0
 _LEAST_REACH = 0.5
@@ -38,7 +39,7 @@ _ROUNDING = 0.29
 _LEAST_HISTORY = 20
 _NEWLY_LISTED = 3.0
 # Errors to expect of each witness before there is a past, in the curve's ordinary moves; the last is all contracts.
-_GUESSES = np.array([0.4, 0.3, 0.2, 0.2, 0.3, 0.4, 0.5])
+_GUESSES = np.array([0.3, 0.2, 0.2, 0.3, 0.5])
 # Weight of a witness that did not move freely; and the most that one may weigh against all others together.
 _HARDLY = 0.01
 _MOST_OF_OTHERS = 0.8
@@ -287,24 +288,28 @@ class Curve:
         own = bisect.bisect_left(live, contract)
         # Without a clean settle of its own the contract is not counted among the live ones.
         is_live = own < len(live) and live[own] == contract
-        steps = [place - own + (0 if is_live or place < own else 1) for place in range(len(live))]
         cell = self._nearest_cell(row, contract)
         told: list[float] = []
         weights: list[float] = []
         errors: list[float] = []
-        for step, other in sorted(zip(steps, live, strict=True), key=lambda pair: (abs(pair[0]), pair[0])):
-            base = float(then[other])
-            if step == 0 or math.isnan(base):
-                continue
-            near = min(abs(step), 3)
-            which = 3 - near if step < 0 else 2 + near
-            here, there = self.cell[row, other], self.cell[since, other]
-            is_free = not (here >= 0 and self.is_bound[here] or there >= 0 and self.is_bound[there])
-            error = float(self.error[which, cell])
-            told.append(float(self.sensitivity[which, cell]) * (float(now[other]) - base))
-            weights.append((1.0 if is_free else _HARDLY) * (error * max(1.0, abs(step) / 3)) ** -2.0)
-            errors.append(error)
-            if len(told) == self.quality.nearest_contracts:
+        wanted = self.quality.nearest_contracts
+        for step in range(1, len(live) + 1):
+            for place in (own - step, own + step - (not is_live)):
+                if not 0 <= place < len(live) or len(told) == wanted:
+                    continue
+                other = live[place]
+                base = float(then[other])
+                if math.isnan(base):
+                    continue
+                near = min(step, _REACH)
+                which = _REACH - near if place < own else _REACH - 1 + near
+                here, there = self.cell[row, other], self.cell[since, other]
+                is_free = not (here >= 0 and self.is_bound[here] or there >= 0 and self.is_bound[there])
+                error = float(self.error[which, cell])
+                told.append(float(self.sensitivity[which, cell]) * (float(now[other]) - base))
+                weights.append((1.0 if is_free else _HARDLY) * (error * max(1.0, step / _REACH)) ** -2.0)
+                errors.append(error)
+            if len(told) == wanted:
                 break
         count = len(told)
         if not count:

@@ -300,8 +300,7 @@ def _judge(court: _Court, row: int, contract: int) -> Verdict | None:
     if twin >= 0:
         is_off = distance >= max(scale, 2 * tick) and standing.is_known
         return rule(Kind.NEIGHBOURS_PRICE, Ruling.REFUTED if is_off else Ruling.KEPT, _FORM, other=twin)
-    strongest = _OWN_BAR * _FORM * _BACK
-    if standing.off * strongest < quality.refuted_score or distance * strongest < quality.refuted_ticks * tick:
+    if not _suffices(court, standing, _OWN_BAR * _FORM * _BACK):
         return None
     before = float(curve.clean[since, contract])
     heard = hear_bar(court.panel, session, contract, price, level, before if since == row - 1 else math.nan)
@@ -315,9 +314,6 @@ def _judge(court: _Court, row: int, contract: int) -> Verdict | None:
         factor *= _OWN_BAR
     elif heard is Bar.INSIDE:
         factor *= _INSIDE
-    came_back = court.comes_back(row, contract, standing) if standing.is_known else None
-    if came_back:
-        factor *= _BACK
     goes_on = heard is not Bar.APART and heard is not Bar.BEHIND and court.goes_on(row, contract, standing)
     if goes_on:
         factor = max(factor, _FORM)
@@ -325,7 +321,12 @@ def _judge(court: _Court, row: int, contract: int) -> Verdict | None:
     moved = abs(price - before)
     if limit is not None and since == row - 1 and moved > limit + 0.5 * tick:
         factor *= _LIMIT
-    if standing.off * factor < quality.refuted_score or distance * factor < quality.refuted_ticks * tick:
+    if not _suffices(court, standing, factor * _BACK):
+        return None
+    came_back = court.comes_back(row, contract, standing) if standing.is_known else None
+    if came_back:
+        factor *= _BACK
+    if not _suffices(court, standing, factor):
         return None
     is_at_limit = limit is not None and abs(moved - limit) <= 0.5 * tick
     if heard is Bar.BEHIND or is_at_limit:
@@ -365,6 +366,14 @@ def _judge(court: _Court, row: int, contract: int) -> Verdict | None:
         return None
     court.shifts[contract] = (row, standing.distance)
     return rule(Kind.CURVE_BREAK, Ruling.KEPT, factor)
+
+
+def _suffices(court: _Court, standing: _Standing, factor: float) -> bool:
+    """Whether the distance, times what speaks for it, reaches both thresholds."""
+    return (
+        standing.off * factor >= court.quality.refuted_score
+        and abs(standing.distance) * factor >= court.quality.refuted_ticks * court.tick
+    )
 
 
 def _judge_first(court: _Court, row: int, contract: int, is_impossible: bool) -> Verdict | None:

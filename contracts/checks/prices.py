@@ -68,7 +68,8 @@ class Ruling(StrEnum):
 class Verdict:
     """One settle that stands alone: where, of what form, how strongly, and what the curve expects.
 
-    `expected` is NaN where the curve cannot say; `score` is held against `threshold`; `error` is the scale of the
+    `expected` is NaN where the curve cannot say, or where the bar itself speaks for a price that cannot be
+    (`is_borne_out`); `score` is held against `threshold`; `error` is the scale of the
     expected settle's error, in price units; `power` is the power of ten by which the settle is too large (negative:
     too small), 0 for none; `other` the contract whose row it is, -1 for none.
     """
@@ -83,6 +84,7 @@ class Verdict:
     error: float = math.nan
     threshold: float = math.nan
     other: int = -1
+    is_borne_out: bool = False
 
 
 @dataclass(frozen=True)
@@ -293,6 +295,8 @@ def _judge(court: _Court, row: int, contract: int) -> Verdict | None:
         )
 
     if is_impossible:
+        if _is_borne_out(court.panel, session, contract):
+            return _bear_out(session, contract)
         is_flipped = is_sign_flipped(price, level, scale, tick)
         return rule(Kind.SIGN_FLIPPED if is_flipped else Kind.NOT_POSITIVE, Ruling.REFUTED)
     distance = abs(standing.distance)
@@ -376,12 +380,26 @@ def _suffices(court: _Court, standing: _Standing, factor: float) -> bool:
     )
 
 
+def _is_borne_out(panel: Panel, session: int, contract: int) -> bool:
+    """Whether the bar traded down to a settle below zero from above, in a market where none can be.
+
+    That is no slip of the pen: the declaration may be the one that is wrong. A bar of noughts speaks for nothing.
+    """
+    low, high, settle = (float(panel.field(name)[session, contract]) for name in ("low", "high", "settle"))
+    return bool(panel.field("volume")[session, contract] > 0 and low <= settle < 0 < high)
+
+
+def _bear_out(session: int, contract: int) -> Verdict:
+    """The verdict on such a settle: nothing is put in its place."""
+    return Verdict(session, contract, Kind.NOT_POSITIVE, Ruling.REFUTED, math.nan, math.nan, is_borne_out=True)
+
+
 def _judge_first(court: _Court, row: int, contract: int, is_impossible: bool) -> Verdict | None:
     """A settle with no clean one before it can only be held against the one after it."""
     curve, tick = court.curve, court.tick
     session = int(curve.rows[row])
     if is_impossible:
-        return Verdict(session, contract, Kind.NOT_POSITIVE, Ruling.REFUTED, math.nan, math.nan)
+        return _judge_impossible(curve, session, contract, math.nan)
     later = curve.reported[row + 1 : row + 1 + _LONGEST_LOOK_AHEAD, contract]
     later = later[~np.isnan(later)]
     price = float(curve.reported[row, contract])

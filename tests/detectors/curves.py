@@ -32,7 +32,7 @@ class Event:
     contracts: tuple[int, ...]
 
 
-@dataclass
+@dataclass(repr=False)
 class Grown:
     """A market as it truly was.
 
@@ -67,7 +67,8 @@ def grow(terms: Terms, seed: int) -> Grown:
     # Exchanges list a new month some days before or after the old one ends.
     starts[terms.listed :] = np.maximum(0, starts[terms.listed :] + rng.integers(-3, 15, len(starts) - terms.listed))
     live = starts < count
-    names, deliveries = tuple(np.array(names)[live]), [d for d, ok in zip(deliveries, live, strict=True) if ok]
+    names = [name for name, ok in zip(names, live, strict=True) if ok]
+    deliveries = [delivery for delivery, ok in zip(deliveries, live, strict=True) if ok]
     ends, starts = ends[live], starts[live]
     rows = np.arange(count)[:, None]
     alive = (rows >= starts) & (rows <= ends)
@@ -93,7 +94,7 @@ def grow(terms: Terms, seed: int) -> Grown:
     values[: OPEN + 4] = np.round(values[:4], decimals)
     if terms.lag:
         values[INTEREST, -terms.lag :] = np.nan
-    return Grown(terms, market, closed, names, every[:count], values, fair, ends, decimals, events)
+    return Grown(terms, market, closed, tuple(names), every[:count], values, fair, ends, decimals, events)
 
 
 def _holidays(rng: np.random.Generator, terms: Terms) -> list[str]:

@@ -83,7 +83,7 @@ class Fault:
     size: float = 0.0
 
 
-@dataclass
+@dataclass(repr=False)
 class Planted:
     """A market with faults in it: reported values (6, T, N), rows on other days, and what was done."""
 

@@ -162,7 +162,12 @@ def stale_price(p: Planter, session: int) -> bool:
     if whole:
         for place in (OPEN, HIGH, LOW):
             p.planted.values[place, run, contract] = p.grown.values[place, session - 1, contract]
-    p.note("stale_price", f"{length} sessions, {'bar' if whole else 'settle'}", session, contract, length)
+    # The run may truly have begun before: sessions on which the price happened to stand.
+    begun = session
+    while p.truth(begun - 1, contract) == p.truth(begun - 2, contract) and session - begun < 5:
+        begun -= 1
+    form = f"{length} sessions, {'bar' if whole else 'settle'}"
+    p.note("stale_price", form, begun, contract, session - begun + length)
     return True
 
 

@@ -132,7 +132,8 @@ def ended_early(p: Planter, session: int) -> bool:
 
 def calendar_disagrees(p: Planter, session: int) -> bool:
     """The declaration calls a day closed on which the whole market traded."""
-    if p.taken[session - 1 : session + 2].any():
+    # Where rows are absent, fewer than half of the contracts may show, which is no disagreement.
+    if p.taken[session - 1 : session + 2].any() or p.grown.terms.idle == "absent":
         return False
     day = int(p.grown.days[session])
     ends = {int(end) for end in p.grown.ends}

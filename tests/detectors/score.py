@@ -30,12 +30,13 @@ _LONG_DAYS = 5
 _REFUSED = "unreadable_rows"
 
 
-@dataclass
+@dataclass(repr=False)
 class Tally:
     """Counts over any number of histories.
 
     planted, found, named: by kind of fault; right, false: serious findings by kind; false_rows, missed: the false ones
-    and the faults not found; altered: settles of true events that were replaced; replaced_truths: all true settles
+    and the faults not found; altered: settles of true events (shocks, limits, squeezes,
+    lone moves, negative settles, contracts that do not trade) that were replaced; replaced_truths: all true settles
     that were; off_ticks, off_share: how far repaired settles lie from the truth; masked, left: wrong settles of price
     faults that were masked, and that were left standing.
     """
@@ -57,8 +58,12 @@ class Tally:
     sessions: int = 0
     rows: int = 0
 
+    def __repr__(self) -> str:
+        return f"<recall {self.recall:.4f}, precision {self.precision:.4f}, false {dict(self.false)}>"
+
     @property
     def recall(self) -> float:
+        """Share of all planted faults that were found."""
         return sum(self.found.values()) / max(1, sum(self.planted.values()))
 
     def recall_of(self, kind: str) -> float:
@@ -165,6 +170,10 @@ def _tally_repairs(planted: Planted, outcome: Outcome, tally: Tally) -> None:
         truth = float(grown.values[3, session, contract])
         if planted.values[3, session, contract] == truth:
             tally.replaced_truths += 1
+            if truth <= 0:
+                natures.setdefault((contract, session), "negative settle")
+            elif not grown.values[4, session, contract] > 0:
+                natures.setdefault((contract, session), "idle contract")
             if (contract, session) in natures:
                 tally.altered.append(f"{natures[contract, session]}: {name} day {day}: {truth!r} became {clean!r}")
         elif status == "masked":

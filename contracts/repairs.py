@@ -189,7 +189,7 @@ def _drop_misfits(prices: np.ndarray, may_be_negative: bool, tick: float) -> Non
 _SAYS = {
     Kind.REVERTING_SPIKE: "stands {distance:+.10g} from where the curve puts it and comes back",
     Kind.CURVE_BREAK: "stands {distance:+.10g} from where the curve puts it",
-    Kind.LONE_MOVE: "moved {distance:+.10g} against the curve, borne out by its own range and volume",
+    Kind.LONE_MOVE: "moved {distance:+.10g} against the curve",
     Kind.NOT_POSITIVE: "is not above zero, which this market's price cannot be",
     Kind.SIGN_FLIPPED: "has the wrong sign",
     Kind.DIGITS_SWAPPED: "has two digits changed about, {distance:+.10g} from where the curve puts it",
@@ -203,9 +203,8 @@ def _say(panel: Panel, verdict: Verdict, price: float) -> str:
         return f"is {size} times too large" if verdict.power > 0 else f"is 1/{size} of what it should be"
     if verdict.kind is Kind.NEIGHBOURS_PRICE:
         return f"and its whole row are those of {panel.contracts[verdict.other]}"
-    if verdict.kind is Kind.LONE_MOVE and price <= 0:
-        return "lies at or below zero, as this market's price may"
-    return _SAYS[verdict.kind].format(distance=round(price - verdict.expected, 10))
+    says = _SAYS[verdict.kind].format(distance=round(price - verdict.expected, 10))
+    return f"{says}, {verdict.why_kept}" if verdict.why_kept else says
 
 
 def _tell(panel: Panel, settle: np.ndarray, verdict: Verdict) -> Finding:

@@ -71,7 +71,8 @@ class Verdict:
     `expected` is NaN where the curve cannot say, or where the bar itself speaks for a price that cannot be
     (`is_borne_out`); `score` is held against `threshold`; `error` is the scale of the
     expected settle's error, in price units; `power` is the power of ten by which the settle is too large (negative:
-    too small), 0 for none; `other` the contract whose row it is, -1 for none.
+    too small), 0 for none; `other` the contract whose row it is, -1 for none;
+    `why_kept` says in words why a strange settle stands.
     """
 
     session: int
@@ -85,6 +86,7 @@ class Verdict:
     threshold: float = math.nan
     other: int = -1
     is_borne_out: bool = False
+    why_kept: str = ""
 
 
 @dataclass(frozen=True)
@@ -288,10 +290,12 @@ def _judge(court: _Court, row: int, contract: int) -> Verdict | None:
     expected = _on_tick(standing.expected, tick) if standing.is_known else math.nan
     level, scale = standing.expected, standing.scale
 
-    def rule(kind: Kind, ruling: Ruling, factor: float = 1.0, power: int = 0, other: int = -1) -> Verdict:
+    def rule(
+        kind: Kind, ruling: Ruling, factor: float = 1.0, power: int = 0, other: int = -1, why: str = ""
+    ) -> Verdict:  # fmt: skip
         score = factor * abs(price - level) / scale if is_impossible else factor * standing.off
         return Verdict(
-            session, contract, kind, ruling, expected, score, power, scale, quality.refuted_score, other
+            session, contract, kind, ruling, expected, score, power, scale, quality.refuted_score, other, why_kept=why
         )
 
     if is_impossible:
@@ -334,7 +338,8 @@ def _judge(court: _Court, row: int, contract: int) -> Verdict | None:
         return None
     is_at_limit = limit is not None and abs(moved - limit) <= 0.5 * tick
     if heard is Bar.BEHIND or is_at_limit:
-        return rule(Kind.LONE_MOVE, Ruling.KEPT)
+        why = "borne out by its own range and volume" if heard is Bar.BEHIND else "by just the daily limit"
+        return rule(Kind.LONE_MOVE, Ruling.KEPT, why=why)
     if power:
         if _is_nearer(court, row, contract, price, level):
             # The contract's last settle was the wrong one: this one stands where its neighbours do.
@@ -344,7 +349,8 @@ def _judge(court: _Court, row: int, contract: int) -> Verdict | None:
         return rule(Kind.SIGN_FLIPPED, Ruling.REFUTED, factor)
     if price <= 0 < level and not (heard is Bar.AGAINST and came_back):
         # Only a market that may be negative comes here, and there it is a fact however strange.
-        return rule(Kind.CURVE_BREAK if heard is Bar.AGAINST else Kind.LONE_MOVE, Ruling.KEPT, factor)
+        why = "at or below zero, as this market's price may be"
+        return rule(Kind.CURVE_BREAK if heard is Bar.AGAINST else Kind.LONE_MOVE, Ruling.KEPT, factor, why=why)
     if not (standing.is_known or heard is Bar.AGAINST):
         return None
     left = int(court.panel.last_trade[contract]) - session
@@ -364,8 +370,12 @@ def _judge(court: _Court, row: int, contract: int) -> Verdict | None:
         return rule(Kind.CURVE_BREAK, Ruling.REFUTED, factor)
     if goes_on:
         return rule(Kind.CURVE_BREAK, Ruling.REFUTED, factor)
-    if heard is Bar.INSIDE or left <= _INTO_EXPIRY or (since, contract) in court.kept:
-        return rule(Kind.LONE_MOVE, Ruling.KEPT)
+    if heard is Bar.INSIDE:
+        return rule(Kind.LONE_MOVE, Ruling.KEPT, why="within its own ordinary range")
+    if left <= _INTO_EXPIRY:
+        return rule(Kind.LONE_MOVE, Ruling.KEPT, why="near its expiry")
+    if (since, contract) in court.kept:
+        return rule(Kind.LONE_MOVE, Ruling.KEPT, why="after a lone move that was kept")
     if standing.is_late or standing.off * factor < _KEPT_FROM * quality.refuted_score or court.is_return(row, contract, standing):
         return None
     court.shifts[contract] = (row, standing.distance)

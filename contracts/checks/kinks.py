@@ -31,6 +31,7 @@ _OF_NEIGHBOURS = 0.7
 _PLAIN = 3.0
 _NEIGHBOURS = 3
 _TOLD_APART = 130
+_TOLD_AGAIN = 2.0
 # Settles of the window that stood still or alone, in the contract itself, in its neighbours, and in one of few.
 _MOST_DISTURBED, _MOST_DISTURBED_AROUND = 3, 8
 _FEW_CONTRACTS = 4
@@ -55,7 +56,8 @@ def find_kinks(curve: Curve, cells: frozenset[tuple[int, int]], strange: frozens
     """Drifts of a contract against its neighbours, one finding each.
 
     `cells` are the (row, contract) of refuted settles, which do not count; `strange` those that stood alone and were
-    kept. A drift is told on the first session its score reaches `kinked_score`, and not again within 130 settles.
+    kept. A drift is told on the first session its score reaches `kinked_score`, and not again within 130
+    settles unless the score has doubled.
     """
     if not len(curve.row):
         return []
@@ -86,14 +88,15 @@ def find_kinks(curve: Curve, cells: frozenset[tuple[int, int]], strange: frozens
     far = (score >= quality.kinked_score) & (np.abs(drift) >= _LEAST_MOVES * usual)
     far &= (length >= _LEAST_SETTLES) & (left >= _NEAR_EXPIRY)
     found: list[Kink] = []
-    last_told: dict[int, int] = {}
+    last_told: dict[int, tuple[int, float]] = {}
     dense = np.zeros(curve.cell.shape)
     dense[row, column] = np.abs(drift)
     disturbed = _count_disturbed(curve, cells | strange)
     live = np.bincount(curve.row, minlength=len(curve.rows))
     for at in np.flatnonzero(far):
         contract = int(column[at])
-        if at - last_told.get(contract, -_TOLD_APART) < _TOLD_APART:
+        told_at, told_score = last_told.get(contract, (-_TOLD_APART, 0.0))
+        if at - told_at < _TOLD_APART and score[at] < _TOLD_AGAIN * told_score:
             continue
         sign = np.sign(drift[at])
         window = sign * distance[since[at] : at + 1]
@@ -111,7 +114,7 @@ def find_kinks(curve: Curve, cells: frozenset[tuple[int, int]], strange: frozens
         is_clear = own <= _MOST_DISTURBED and counts.sum() - own <= most
         if abs(drift[at]) < _OF_NEIGHBOURS * dense[row[at], near].max():
             continue
-        last_told[contract] = int(at)
+        last_told[contract] = (int(at), float(score[at]))
         found.append(
             Kink(
                 int(curve.rows[row[at]]), contract, float(drift[at]), float(score[at]), quality.kinked_score,

@@ -6,8 +6,8 @@ Does not belong here: what the curve expects (`curve.py`), what is put in its pl
 The score. A settle's distance from what the curve expects, in scales (`curve.py`), times a factor for each further
 witness, is held against `refuted_score`; the distance times the same factors against `refuted_ticks`:
 
-- its own range stands where the curve puts the contract and the settle outside of it: 1.6
-- it is back where the curve expects it within three sessions: 1.4
+- its own range stands where the curve puts the contract and the settle outside of it: 2.0
+- it is back where the curve expects it within three sessions: 1.2
 - it has the form of a slip (a power of ten, the other sign, another contract's row): 2.0;
   two digits changed about: up to 2.5, by how seldom chance would do it
 - it moved by more than the daily limit: 1.3
@@ -38,7 +38,7 @@ from contracts.quality import Quality
 _LONGEST_LOOK_AHEAD = 3
 # A distance that shrinks to this share of itself has come back.
 _CAME_BACK = 0.4
-_OWN_BAR, _BACK, _FORM, _LIMIT, _BY_FITS, _INSIDE = 1.6, 1.2, 2.0, 1.3, 0.5, 0.8
+_OWN_BAR, _BACK, _FORM, _LIMIT, _BY_FITS, _INSIDE = 2.0, 1.2, 2.0, 1.3, 0.5, 0.8
 _TELLING = 1.25
 # A run needs a beginning of so many times the threshold.
 _STRONG = 1.5

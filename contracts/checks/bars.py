@@ -6,7 +6,8 @@ Belongs here: one bar, beside the bars of its contract's past and of its neighbo
 A true lone move trades its way: its range is wide, or its volume large, and reaches from near where the curve puts the
 contract to the settle. A wrong settle lies outside a range that stands where the curve puts it, or inside of one no
 wider than usual. A wrong row stands off as a whole, no wider and no busier than usual; a bar that carries on from its
-contract's last settle, while the curve moves away, does not: so a squeeze holds a contract up. Common practice, no source; the limits below were chosen on the tuning seeds of the bench.
+contract's last settle, while the curve moves away, does not: so a squeeze holds a contract up. Common practice, no
+source; the limits below were chosen on the tuning seeds of the bench.
 """
 
 import math

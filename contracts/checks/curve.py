@@ -3,14 +3,15 @@
 Belongs here: the expected settle of a contract, from its neighbours' moves, and the scale of its ordinary distance
 from it. Does not belong here: deciding whether a settle is wrong (`prices.py`).
 
-The statistic. A contract's move is expected from each of the three nearest contracts on either side: their move times
-a sensitivity, the slope through nought of the contract's past 60 moves on theirs (moves in units of the session's
-median move, so that no session outweighs the others, clipped, and drawn towards 1 by eight ordinary sessions). So near months may move more
-than far ones (Samuelson 1965, from memory), and the new crop less than the old. The six are averaged by the inverse
-square of how well each foretold so far, less those that stand off their median. The distance is the move less that. A
-contract that stood still, or that its daily limit held back, catches up: it may lie anywhere between what the curve
-says since its last session and what it says since its last free one. Clipping, inverse-variance weights and the scaled
-MAD are common practice, no source. All of it is past data, so a night's answer does not change when the next comes.
+The statistic. A contract's move is expected from each of the two nearest contracts on either side, and from the median
+of all: their move times a sensitivity, the slope through nought of the contract's past 60 moves on theirs (in units of
+the session's median move, so that no session outweighs the others, clipped, and drawn towards 1 by eight ordinary
+sessions). So near months may move more than far ones (Samuelson 1965, from memory), and the new crop less than the
+old. The five are averaged by the inverse square of how well each foretold so far, less those that stand off their
+weighted median. The distance is the move less that. A contract that stood still, or that its daily limit held back,
+catches up: it may lie anywhere between what the curve says since its last session and what it says since its last
+free one. Clipping, inverse-variance weights and the scaled MAD are common practice, no source. All of it is past data,
+so a night's answer does not change when the next comes.
 """
 
 import bisect
@@ -212,7 +213,7 @@ class Curve:
         self.anchor[self.by_contract] = self.by_contract[anchor]
 
     def _moves(self, cells: np.ndarray, bases: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-        """Moves of the witnesses from each cell's base to the cell, (7, n), NaN where unknown; and their trust.
+        """Moves of the witnesses from each cell's base to the cell, (5, n), NaN where unknown; and their trust.
 
         The witnesses are the neighbours at each offset and, last, the median of all contracts that moved freely. One
         that stood still or at its limit, or comes from there, is hardly trusted.
@@ -304,7 +305,7 @@ class Curve:
                 near = min(step, _REACH)
                 which = _REACH - near if place < own else _REACH - 1 + near
                 here, there = self.cell[row, other], self.cell[since, other]
-                is_free = not (here >= 0 and self.is_bound[here] or there >= 0 and self.is_bound[there])
+                is_free = not ((here >= 0 and self.is_bound[here]) or (there >= 0 and self.is_bound[there]))
                 error = float(self.error[which, cell])
                 told.append(float(self.sensitivity[which, cell]) * (float(now[other]) - base))
                 weights.append((1.0 if is_free else _HARDLY) * (error * max(1.0, step / _REACH)) ** -2.0)
@@ -317,7 +318,8 @@ class Curve:
         if self.has_common[row]:
             told.append(float(self.sensitivity[-1, cell] * (self.common[row] - self.common[since])))
             errors.append(float(self.error[-1, cell]))
-            weights.append((_HARDLY if self.is_limit_row[row] or self.is_limit_row[since] else 1.0) * errors[-1] ** -2.0)
+            trust = _HARDLY if self.is_limit_row[row] or self.is_limit_row[since] else 1.0
+            weights.append(trust * errors[-1] ** -2.0)
         return Foretold(*self._agree(told, weights, errors), count)
 
     def _agree(self, told: list[float], weights: list[float], errors: list[float]) -> tuple[float, float]:

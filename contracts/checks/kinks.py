@@ -15,7 +15,6 @@ from dataclasses import dataclass
 import numpy as np
 
 from contracts.checks.curve import Curve
-from contracts.panel import Panel
 from contracts.quality import Quality
 
 _WINDOW = 25
@@ -37,6 +36,10 @@ _MOST_DISTURBED, _MOST_DISTURBED_AROUND = 3, 8
 _FEW_CONTRACTS = 4
 
 
+# (row, contract) of settles.
+Cells = frozenset[tuple[int, int]]
+
+
 @dataclass(frozen=True)
 class Kink:
     """A drift: the session it is told on, contract, how far it went in price units, score, threshold.
@@ -52,7 +55,7 @@ class Kink:
     is_plain: bool
 
 
-def find_kinks(curve: Curve, cells: frozenset[tuple[int, int]], strange: frozenset[tuple[int, int]], quality: Quality) -> list[Kink]:
+def find_kinks(curve: Curve, cells: Cells, strange: Cells, quality: Quality) -> list[Kink]:
     """Drifts of a contract against its neighbours, one finding each.
 
     `cells` are the (row, contract) of refuted settles, which do not count; `strange` those that stood alone and were
@@ -70,8 +73,9 @@ def find_kinks(curve: Curve, cells: frozenset[tuple[int, int]], strange: frozens
         cell = curve.cell[at, contract]
         if cell >= 0:
             # The session after comes back from it.
-            first = int(curve.place[cell])
-            distance[first : first + 2] = np.where(column[first : first + 2] == contract, 0.0, distance[first : first + 2])
+            start_at = int(curve.place[cell])
+            both = slice(start_at, start_at + 2)
+            distance[both] = np.where(column[both] == contract, 0.0, distance[both])
     for at, contract in strange:
         if curve.cell[at, contract] >= 0:
             is_strange[curve.place[curve.cell[at, contract]]] = True
@@ -93,7 +97,7 @@ def find_kinks(curve: Curve, cells: frozenset[tuple[int, int]], strange: frozens
     dense[row, column] = np.abs(drift)
     disturbed = _count_disturbed(curve, cells | strange)
     live = np.bincount(curve.row, minlength=len(curve.rows))
-    for at in np.flatnonzero(far):
+    for at in np.flatnonzero(far).tolist():
         contract = int(column[at])
         told_at, told_score = last_told.get(contract, (-_TOLD_APART, 0.0))
         if at - told_at < _TOLD_APART and score[at] < _TOLD_AGAIN * told_score:
@@ -106,10 +110,10 @@ def find_kinks(curve: Curve, cells: frozenset[tuple[int, int]], strange: frozens
         earlier = sign * distance[max(start[at], at - _SET_OFF) : at + 1]
         if -earlier.min() > _SET_OFF_SHARE * abs(drift[at]):
             continue
-        first = max(0, int(row[at]) - _WINDOW)
+        since_row = max(0, int(row[at]) - _WINDOW)
         near = slice(max(0, contract - _NEIGHBOURS), contract + _NEIGHBOURS + 1)
-        counts = disturbed[row[at] + 1, near] - disturbed[first, near]
-        own = int(disturbed[row[at] + 1, contract] - disturbed[first, contract])
+        counts = disturbed[row[at] + 1, near] - disturbed[since_row, near]
+        own = int(disturbed[row[at] + 1, contract] - disturbed[since_row, contract])
         most = 0 if live[row[at]] <= _FEW_CONTRACTS else _MOST_DISTURBED_AROUND
         is_clear = own <= _MOST_DISTURBED and counts.sum() - own <= most
         if abs(drift[at]) < _OF_NEIGHBOURS * dense[row[at], near].max():
@@ -117,17 +121,21 @@ def find_kinks(curve: Curve, cells: frozenset[tuple[int, int]], strange: frozens
         last_told[contract] = (int(at), float(score[at]))
         found.append(
             Kink(
-                int(curve.rows[row[at]]), contract, float(drift[at]), float(score[at]), quality.kinked_score,
+                int(curve.rows[row[at]]),
+                contract,
+                float(drift[at]),
+                float(score[at]),
+                quality.kinked_score,
                 is_clear and score[at] >= _PLAIN * quality.kinked_score and row[at] >= _SET_OFF,
-            )  # fmt: skip
+            )
         )
     return sorted(found, key=lambda kink: (kink.session, kink.contract))
 
 
-def _count_disturbed(curve: Curve, cells: frozenset[tuple[int, int]]) -> np.ndarray:
+def _count_disturbed(curve: Curve, cells: Cells) -> np.ndarray:
     """Settles before each row that stood alone or still, by contract, (R + 1, N)."""
     marked = np.zeros(curve.cell.shape, dtype=np.int32)
     marked[curve.row[curve.is_still], curve.column[curve.is_still]] = 1
     for row, contract in cells:
         marked[row, contract] = 1
-    return np.concatenate((np.zeros((1, marked.shape[1]), np.int32), np.cumsum(marked, axis=0)))
+    return np.vstack((np.zeros_like(marked[:1]), np.cumsum(marked, axis=0)))

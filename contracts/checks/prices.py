@@ -7,7 +7,7 @@ The score. A settle's distance from what the curve expects, in scales (`curve.py
 witness, is held against `refuted_score`; the distance times the same factors against `refuted_ticks`:
 
 - its own range stands where the curve puts the contract and the settle outside of it: 2.0
-- it is back where the curve expects it within three sessions: 1.2
+- it is back where the curve expects it within three sessions: 1.3
 - it has the form of a slip (a power of ten, the other sign, another contract's row): 2.0;
   two digits changed about: up to 2.5, by how seldom chance would do it
 - it moved by more than the daily limit: 1.3
@@ -29,32 +29,22 @@ from enum import StrEnum
 import numpy as np
 
 from contracts.checks.bars import Bar, hear_bar
+from contracts.checks.court import Court, Standing
 from contracts.checks.curve import LONGEST_LOOK_BACK, Curve
-from contracts.checks.forms import copy_of_twins, digits_swapped_weight, find_twins, is_sign_flipped, power_of_ten
+from contracts.checks.forms import digits_swapped_weight, is_sign_flipped, power_of_ten
 from contracts.findings import Kind
 from contracts.panel import Panel
 from contracts.quality import Quality
 
 _LONGEST_LOOK_AHEAD = 3
-# A distance that shrinks to this share of itself has come back.
-_CAME_BACK = 0.4
-_OWN_BAR, _BACK, _FORM, _LIMIT, _BY_FITS, _INSIDE = 2.0, 1.2, 2.0, 1.3, 0.5, 0.8
+_OWN_BAR, _BACK, _FORM, _LIMIT, _BY_FITS, _INSIDE = 2.0, 1.3, 2.0, 1.3, 0.5, 0.8
 _TELLING = 1.25
-# A run needs a beginning of so many times the threshold.
-_STRONG = 1.5
 # After a lone move that was kept a contract finds its place; it takes so much more to refute what it does then.
 _AFTER_KEPT = 3.0
-_LEAPT = 4.0
-# A contract that stood still for so many sessions may catch up to anywhere.
-_LATE = 3
 # Into expiry contracts are squeezed; what cannot be refuted there is told as a fact.
 _INTO_EXPIRY = 15
-# Scales and ticks from which a cell is looked at closely, as a share of the thresholds: the product of two factors.
-_LOOKED_AT = 0.4
 # What neither came back nor is refuted by its bar is told from so many times the threshold.
 _KEPT_FROM = 2.5
-_LONGEST_HELD_BACK = 30
-_LONGEST_SHIFT = 60
 
 
 class Ruling(StrEnum):
@@ -69,10 +59,9 @@ class Verdict:
     """One settle that stands alone: where, of what form, how strongly, and what the curve expects.
 
     `expected` is NaN where the curve cannot say, or where the bar itself speaks for a price that cannot be
-    (`is_borne_out`); `score` is held against `threshold`; `error` is the scale of the
-    expected settle's error, in price units; `power` is the power of ten by which the settle is too large (negative:
-    too small), 0 for none; `other` the contract whose row it is, -1 for none;
-    `why_kept` says in words why a strange settle stands.
+    (`is_borne_out`); `score` is held against `threshold`; `error` is the scale of the expected settle's error, in
+    price units; `power` is the power of ten by which the settle is too large (negative: too small), 0 for none;
+    `other` the contract whose row it is, -1 for none; `why_kept` says in words why a strange settle stands.
     """
 
     session: int
@@ -87,149 +76,6 @@ class Verdict:
     other: int = -1
     is_borne_out: bool = False
     why_kept: str = ""
-
-
-@dataclass(frozen=True)
-class _Standing:
-    """Where a settle stands: distance from what is expected, the scale of it, and whether the curve knows at all."""
-
-    since: int
-    expected: float
-    distance: float
-    scale: float
-    is_known: bool
-    is_late: bool
-
-    @property
-    def off(self) -> float:
-        return abs(self.distance) / self.scale
-
-
-class _Court:
-    """The curve and what was decided so far."""
-
-    def __init__(self, panel: Panel, settle: np.ndarray, quality: Quality) -> None:
-        self.curve = Curve(panel, settle, quality)
-        self.panel, self.quality, self.tick = panel, quality, panel.market.tick_size
-        # Cells that stand alone and were kept: what follows them may be their return.
-        self.kept: set[tuple[int, int]] = set()
-        # Cells that were refuted: a run of them is held against the last right settle.
-        self.refuted: dict[tuple[int, int], float] = {}
-        # The last break of each contract that was kept: its row and distance.
-        self.shifts: dict[int, tuple[int, float]] = {}
-        self.twins: dict[tuple[int, int], int] = {}
-
-    def candidates(self) -> list[tuple[int, float, int]]:
-        """Cells worth a closer look: (row, minus the distance in scales, contract)."""
-        curve, quality = self.curve, self.quality
-        size = np.abs(curve.distance)
-        scale = np.maximum(curve.noise, 0.5 * self.tick) * curve.unrest[curve.row]
-        with np.errstate(invalid="ignore", divide="ignore"):
-            far = (size > _LOOKED_AT * quality.refuted_ticks * self.tick) & (size > _LOOKED_AT * quality.refuted_score * scale)
-            # A contract alone is held against itself, for powers of ten and signs only.
-            ratio = np.abs(curve.price - size * np.sign(curve.distance)) / np.abs(curve.price)
-            far &= ~curve.is_alone | (ratio < 0.5) | (ratio > 2.0)
-        cells = np.flatnonzero(far)
-        return [
-            (int(curve.row[cell]), -float(size[cell] / scale[cell]), int(curve.column[cell])) for cell in cells
-        ]
-
-    def find_copies(self) -> list[tuple[int, float, int]]:
-        """Rows that are another contract's."""
-        curve = self.curve
-        found = []
-        for session, *pair in find_twins(self.panel):
-            row = int(np.searchsorted(curve.rows, session))
-            off = tuple(self._off(row, contract) for contract in pair)
-            copy = copy_of_twins(self.panel, session, (pair[0], pair[1]), (off[0], off[1]))
-            self.twins[row, copy] = pair[0] if copy == pair[1] else pair[1]
-            found.append((row, -math.inf, copy))
-        return found
-
-    def _off(self, row: int, contract: int) -> float:
-        cell = self.curve.cell[row, contract]
-        return abs(float(np.nan_to_num(self.curve.distance[cell]))) / max(float(self.curve.noise[cell]), self.tick)
-
-    def stand(self, row: int, contract: int, since: int) -> _Standing:
-        """Where a settle stands, seen from the contract's last clean one.
-
-        If that one stood still, was held by the limit, or stood alone and was kept, the settle may as well be where
-        the curve puts it since the session before, or anywhere between.
-        """
-        curve = self.curve
-        told = curve.foretell(row, contract, since)
-        price, last = float(curve.reported[row, contract]), float(curve.clean[since, contract])
-        expected = last + told.move
-        right = since
-        while (right, contract) in self.refuted and curve.last_clean(right, contract) >= 0:
-            right = curve.last_clean(right, contract)
-        distance, scale = price - expected, curve.scale(row, contract, right, told)
-        if told.count == 1 and abs(price - last) < 0.5 * abs(told.move):
-            # Of two contracts the one that leapt is the strange one.
-            distance = 0.0
-        # ... and where the other hardly moved it is known.
-        is_known = told.count >= 2 or (told.count == 1 and abs(price - last) > _LEAPT * abs(told.move))
-        anchor = self._anchor(since, contract)
-        if anchor >= 0:
-            other = curve.foretell(row, contract, anchor)
-            seen = price - (float(curve.clean[anchor, contract]) + other.move)
-            if other.count:
-                if seen * distance <= 0:
-                    distance = 0.0
-                elif abs(seen) < abs(distance):
-                    distance, scale = seen, curve.scale(row, contract, anchor, other)
-        return _Standing(since, expected, distance, scale, is_known, since - anchor >= _LATE and anchor >= 0)
-
-    def goes_on(self, row: int, contract: int, standing: _Standing) -> bool:
-        """Whether the settle stands where the refuted one before it stood."""
-        if self.refuted.get((standing.since, contract), 0.0) < _STRONG * self.quality.refuted_score:
-            return False
-        was = float(self.curve.reported[standing.since, contract] - self.curve.clean[standing.since, contract])
-        return abs(standing.distance - was) <= _CAME_BACK * abs(was)
-
-    def is_return(self, row: int, contract: int, standing: _Standing) -> bool:
-        """Whether the settle only comes back: from the last, which stood off, or from a break that was kept."""
-        row_before, distance = self.shifts.get(contract, (-_LONGEST_SHIFT, 0.0))
-        if row - row_before <= _LONGEST_SHIFT and abs(standing.distance + distance) <= _CAME_BACK * abs(distance):
-            return True
-        before = self.curve.last_clean(standing.since, contract)
-        if before < 0:
-            return False
-        told = self.curve.foretell(row, contract, before)
-        off = float(self.curve.reported[row, contract]) - (float(self.curve.clean[before, contract]) + told.move)
-        return abs(off) <= _CAME_BACK * abs(standing.distance)
-
-    def _anchor(self, since: int, contract: int) -> int:
-        """The row before what kept the contract from standing where the curve puts it; -1 where nothing did."""
-        curve = self.curve
-        before = since
-        while (before, contract) in self.kept:
-            before = curve.last_clean(before, contract)
-        if before < 0:
-            return -1
-        cell = int(curve.cell[before, contract])
-        if cell >= 0 and curve.clean[before, contract] == curve.reported[before, contract]:
-            anchor = int(curve.row[curve.anchor[cell]])
-            if since - anchor <= _LONGEST_HELD_BACK and not math.isnan(curve.clean[anchor, contract]):
-                before = anchor
-        return before if before != since else -1
-
-    def comes_back(self, row: int, contract: int, standing: _Standing) -> bool | None:
-        """Whether the contract is back where the curve expects it within three sessions; None where none follows."""
-        curve = self.curve
-        follows: bool | None = None
-        for later in range(row + 1, min(len(curve.rows), row + 1 + _LONGEST_LOOK_AHEAD)):
-            price = float(curve.reported[later, contract])
-            if math.isnan(price):
-                continue
-            told = curve.foretell(later, contract, standing.since)
-            if told.count == 0:
-                continue
-            follows = False
-            off = price - (float(curve.clean[standing.since, contract]) + told.move)
-            if abs(off) <= _CAME_BACK * abs(standing.distance):
-                return True
-        return follows
 
 
 @dataclass(frozen=True, eq=False)
@@ -249,7 +95,7 @@ def judge_settles(panel: Panel, settle: np.ndarray, exempt: np.ndarray, quality:
     Sessions are taken in order, each against what is clean before it, so that a run of wrong prices is held against
     the last right one; within a session the strangest first.
     """
-    court = _Court(panel, settle, quality)
+    court = Court(panel, settle, quality)
     curve = court.curve
     waiting = court.candidates() + court.find_copies()
     waiting += [(int(row), -math.inf, int(contract)) for row, contract in np.argwhere(curve.impossible)]
@@ -278,7 +124,7 @@ def judge_settles(panel: Panel, settle: np.ndarray, exempt: np.ndarray, quality:
     return Judgment(tuple(verdicts), curve, frozenset(court.refuted), frozenset(court.kept))
 
 
-def _judge(court: _Court, row: int, contract: int) -> Verdict | None:
+def _judge(court: Court, row: int, contract: int) -> Verdict | None:
     """Weigh one settle; None where it does not stand alone."""
     curve, quality, tick = court.curve, court.quality, court.tick
     price, session = float(curve.reported[row, contract]), int(curve.rows[row])
@@ -376,13 +222,17 @@ def _judge(court: _Court, row: int, contract: int) -> Verdict | None:
         return rule(Kind.LONE_MOVE, Ruling.KEPT, why="near its expiry")
     if (since, contract) in court.kept:
         return rule(Kind.LONE_MOVE, Ruling.KEPT, why="after a lone move that was kept")
-    if standing.is_late or standing.off * factor < _KEPT_FROM * quality.refuted_score or court.is_return(row, contract, standing):
+    if (
+        standing.is_late
+        or standing.off * factor < _KEPT_FROM * quality.refuted_score
+        or court.is_return(row, contract, standing)
+    ):
         return None
     court.shifts[contract] = (row, standing.distance)
     return rule(Kind.CURVE_BREAK, Ruling.KEPT, factor)
 
 
-def _suffices(court: _Court, standing: _Standing, factor: float) -> bool:
+def _suffices(court: Court, standing: Standing, factor: float) -> bool:
     """Whether the distance, times what speaks for it, reaches both thresholds."""
     return (
         standing.off * factor >= court.quality.refuted_score
@@ -404,12 +254,14 @@ def _bear_out(session: int, contract: int) -> Verdict:
     return Verdict(session, contract, Kind.NOT_POSITIVE, Ruling.REFUTED, math.nan, math.nan, is_borne_out=True)
 
 
-def _judge_first(court: _Court, row: int, contract: int, is_impossible: bool) -> Verdict | None:
+def _judge_first(court: Court, row: int, contract: int, is_impossible: bool) -> Verdict | None:
     """A settle with no clean one before it can only be held against the one after it."""
     curve, tick = court.curve, court.tick
     session = int(curve.rows[row])
     if is_impossible:
-        return _judge_impossible(curve, session, contract, math.nan)
+        if _is_borne_out(court.panel, session, contract):
+            return _bear_out(session, contract)
+        return Verdict(session, contract, Kind.NOT_POSITIVE, Ruling.REFUTED, math.nan, math.nan)
     later = curve.reported[row + 1 : row + 1 + _LONGEST_LOOK_AHEAD, contract]
     later = later[~np.isnan(later)]
     price = float(curve.reported[row, contract])
@@ -424,7 +276,7 @@ def _judge_first(court: _Court, row: int, contract: int, is_impossible: bool) ->
     return Verdict(session, contract, Kind.DECIMAL_SHIFT, Ruling.REFUTED, math.nan, math.nan, power)
 
 
-def _is_nearer(court: _Court, row: int, contract: int, price: float, level: float) -> bool:
+def _is_nearer(court: Court, row: int, contract: int, price: float, level: float) -> bool:
     """Whether the neighbours stand nearer, in decades, to the settle than to what its own past expects."""
     others = court.curve.clean[row].copy()
     others[contract] = np.nan

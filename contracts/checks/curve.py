@@ -205,6 +205,9 @@ class Curve:
         if limit is not None:
             with np.errstate(invalid="ignore"):
                 self.is_locked = np.abs(np.abs(change) - limit) <= 0.5 * self.tick
+        idle = np.bincount(self.row[volume == 0], minlength=len(self.rows)).astype(float)
+        still = np.bincount(self.row[(volume == 0) & self.is_still], minlength=len(self.rows)).astype(float)
+        self.stands_when_idle = self._past_mean(still) > _FITS_SHARE * self._past_mean(idle)
         self.is_bound |= self.is_locked
         held_back = self.is_still | self.is_locked
         free = np.where(held_back[self.by_contract], -1, np.arange(len(self.row)))
@@ -371,7 +374,12 @@ class Curve:
         return max(own, _OF_SPREAD * told.spread)
 
     def is_often_still(self, row: int, contract: int) -> bool:
-        """Whether the contract stood still on many of its last sessions: its settles follow the curve by fits."""
+        """Whether the contract follows the curve by fits: it stood still on many of its last sessions.
+
+        Or it did not trade on this one, in a market whose contracts stand still when they do not.
+        """
+        if self.stands_when_idle[row] and self.panel.field("volume")[self.rows[row], contract] == 0:
+            return True
         cell = self._nearest_cell(row, contract)
         place = self.place[cell]
         past = self.by_contract[max(self.start[cell], place - _FITS_WINDOW) : place]

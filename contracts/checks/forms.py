@@ -21,6 +21,9 @@ _MOST_WEIGHT = 2.5
 _LEAST_VOLUME = 5.0
 _LEAST_INTEREST = 50.0
 _REACH = 6
+_LAST_FEW = 5
+_LEAST_LEAP = 0.1
+_LEAST_LEAP_OF_VOLUME = 1.5
 
 
 def power_of_ten(price: float, level: float, tick: float) -> int:
@@ -90,17 +93,20 @@ def find_twins(panel: Panel) -> list[tuple[int, int, int]]:
 
 
 def copy_of_twins(panel: Panel, session: int, contracts: tuple[int, int], off: tuple[float, float]) -> int:
-    """Which of two contracts with one row it does not belong to: the one whose open interest jumped more.
+    """Which of two contracts with one row it does not belong to: the one whose open interest leapt more.
 
-    Where that cannot be said, the one whose settle is further off, `off` in scales.
+    Where that is not known, volume speaks, if plainly; then the one whose settle is further off, `off` in scales.
     """
-    interest = panel.field("open_interest")
-    jumps = []
-    for contract in contracts:
-        past = interest[max(0, session - 3) : session, contract]
-        past = past[past > 0]
-        now = float(interest[session, contract])
-        jumps.append(abs(math.log(now / float(past[-1]))) if len(past) and now > 0 else math.nan)
-    if not math.isnan(jumps[0] + jumps[1]) and abs(jumps[0] - jumps[1]) > 0.1:
-        return contracts[int(jumps[1] > jumps[0])]
+    for name, least in (("open_interest", _LEAST_LEAP), ("volume", _LEAST_LEAP_OF_VOLUME)):
+        leaps = [_leap(panel.field(name), session, contract) for contract in contracts]
+        if abs(leaps[0] - leaps[1]) > least:
+            return contracts[int(leaps[1] > leaps[0])]
     return contracts[int(off[1] > off[0])]
+
+
+def _leap(values: np.ndarray, session: int, contract: int) -> float:
+    """Natural logarithm of how far a value leapt from its contract's last few, without sign; NaN where unknown."""
+    past = values[max(0, session - _LAST_FEW) : session, contract]
+    past = past[past > 0]
+    now = float(values[session, contract])
+    return abs(math.log(now / float(np.median(past)))) if len(past) and now > 0 else math.nan

@@ -24,6 +24,7 @@ _LEAPT = 4.0
 _LATE = 3
 _LONGEST_HELD_BACK = 30
 _LONGEST_SHIFT = 60
+_SOON = 10
 # Scales and ticks from which a cell is looked at closely, as a share of the thresholds: the product of two factors.
 _LOOKED_AT = 0.4
 
@@ -55,7 +56,7 @@ class Court:
         self.kept: set[tuple[int, int]] = set()
         # Cells that were refuted: a run of them is held against the last right settle.
         self.refuted: dict[tuple[int, int], float] = {}
-        # The last break of each contract that was kept: its row and distance.
+        # How far each contract came to stand off by moves that were kept, and since when.
         self.shifts: dict[int, tuple[int, float]] = {}
         self.twins: dict[tuple[int, int], int] = {}
 
@@ -124,6 +125,12 @@ class Court:
             return False
         was = float(self.curve.reported[standing.since, contract] - self.curve.clean[standing.since, contract])
         return abs(standing.distance - was) <= _CAME_BACK * abs(was)
+
+    def remember(self, row: int, contract: int, distance: float) -> None:
+        """Remember a move that was kept; one in the same direction soon after adds to it."""
+        last, so_far = self.shifts.get(contract, (-_LONGEST_SHIFT, 0.0))
+        goes_on = row - last <= _SOON and so_far * distance > 0
+        self.shifts[contract] = (row, distance + so_far if goes_on else distance)
 
     def is_return(self, row: int, contract: int, standing: Standing) -> bool:
         """Whether the settle only comes back: from the last, which stood off, or from a break that was kept."""

@@ -27,7 +27,7 @@ _SET_OFF_SHARE = 0.5
 _NEAR_EXPIRY = 16
 _LEAST_MOVES = 2.0
 _OF_NEIGHBOURS = 0.7
-_PLAIN = 3.0
+_PLAIN = 5.0
 _NEIGHBOURS = 3
 _TOLD_APART = 130
 _TOLD_AGAIN = 2.0
@@ -44,7 +44,7 @@ Cells = frozenset[tuple[int, int]]
 class Kink:
     """A drift: the session it is told on, contract, how far it went in price units, score, threshold.
 
-    `is_plain`: three times the threshold, in a curve that is otherwise undisturbed.
+    `is_plain`: five times the threshold, in a curve that is otherwise undisturbed.
     """
 
     session: int
@@ -60,7 +60,7 @@ def find_kinks(curve: Curve, cells: Cells, strange: Cells, quality: Quality) -> 
 
     `cells` are the (row, contract) of refuted settles, which do not count; `strange` those that stood alone and were
     kept. A drift is told on the first session its score reaches `kinked_score`, and not again within 130
-    settles unless the score has doubled.
+    settles, or 25 where the score has doubled.
     """
     if not len(curve.row):
         return []
@@ -99,8 +99,9 @@ def find_kinks(curve: Curve, cells: Cells, strange: Cells, quality: Quality) -> 
     live = np.bincount(curve.row, minlength=len(curve.rows))
     for at in np.flatnonzero(far).tolist():
         contract = int(column[at])
-        told_at, told_score = last_told.get(contract, (-_TOLD_APART, 0.0))
-        if at - told_at < _TOLD_APART and score[at] < _TOLD_AGAIN * told_score:
+        told_at, told_score = last_told.get(contract, (at - _TOLD_APART, 0.0))
+        apart = _WINDOW if score[at] >= _TOLD_AGAIN * told_score else _TOLD_APART
+        if at - told_at < apart:
             continue
         sign = np.sign(drift[at])
         window = sign * distance[since[at] : at + 1]

@@ -139,6 +139,8 @@ def _judge(court: Court, row: int, contract: int) -> Verdict | None:
     def rule(
         kind: Kind, ruling: Ruling, factor: float = 1.0, power: int = 0, other: int = -1, why: str = ""
     ) -> Verdict:  # fmt: skip
+        if ruling is Ruling.KEPT:
+            court.remember(row, contract, standing.distance)
         score = factor * abs(price - level) / scale if is_impossible else factor * standing.off
         return Verdict(
             session, contract, kind, ruling, expected, score, power, scale, quality.refuted_score, other, why_kept=why
@@ -206,6 +208,8 @@ def _judge(court: Court, row: int, contract: int) -> Verdict | None:
         or (came_back is None and (standing.is_late or heard is Bar.INSIDE))
         or (left <= _INTO_EXPIRY and (heard is Bar.INSIDE or standing.off * factor < 2 * quality.refuted_score))
     )
+    if heard is not Bar.AGAINST and court.is_return(row, contract, standing):
+        return None
     if (since, contract) in court.kept and standing.off * factor < _AFTER_KEPT * quality.refuted_score:
         may_stand = heard is not Bar.AGAINST
     if swapped > _TELLING and (came_back is not False or heard is Bar.AGAINST) and not may_stand:
@@ -222,13 +226,8 @@ def _judge(court: Court, row: int, contract: int) -> Verdict | None:
         return rule(Kind.LONE_MOVE, Ruling.KEPT, why="near its expiry")
     if (since, contract) in court.kept:
         return rule(Kind.LONE_MOVE, Ruling.KEPT, why="after a lone move that was kept")
-    if (
-        standing.is_late
-        or standing.off * factor < _KEPT_FROM * quality.refuted_score
-        or court.is_return(row, contract, standing)
-    ):
+    if standing.is_late or standing.off * factor < _KEPT_FROM * quality.refuted_score:
         return None
-    court.shifts[contract] = (row, standing.distance)
     return rule(Kind.CURVE_BREAK, Ruling.KEPT, factor)
 
 

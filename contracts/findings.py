@@ -62,6 +62,10 @@ class Kind(StrEnum):
     # the prices
     DECIMAL_SHIFT = "decimal_shift"  # a power of ten away from the curve
     REVERTING_SPIKE = "reverting_spike"  # stands alone for a session and comes back
+    DIGITS_SWAPPED = "digits_swapped"  # two neighbouring digits changed about
+    SIGN_FLIPPED = "sign_flipped"  # the price with the other sign
+    NEIGHBOURS_PRICE = "neighbours_price"  # another contract's row under this one's name
+    CURVE_KINKED = "curve_kinked"  # drifted off its neighbours without a jump
     CURVE_BREAK = "curve_break"  # stands alone against the curve, not (yet) seen to come back
     STALE_PRICE = "stale_price"  # unchanged while the rest of the curve moves
     SCALE_CHANGED = "scale_changed"  # on another power of ten from a session on, undeclared
@@ -95,6 +99,13 @@ class Kind(StrEnum):
     WAIVER_UNMATCHED = "waiver_unmatched"  # covers no finding
 
 
+# What is said of one settle that stands alone may change when tomorrow comes; it stays one finding.
+_ONE_SETTLE = frozenset({
+    Kind.DECIMAL_SHIFT, Kind.REVERTING_SPIKE, Kind.DIGITS_SWAPPED, Kind.SIGN_FLIPPED, Kind.NEIGHBOURS_PRICE,
+    Kind.CURVE_BREAK, Kind.LONE_MOVE,
+})  # fmt: skip
+
+
 @dataclass(frozen=True)
 class Finding:
     """One thing wrong or strange. Dates are dates, numbers are in the unit of `field`."""
@@ -119,8 +130,9 @@ class Finding:
 
     @property
     def identity(self) -> str:
-        """Stable identifier: the same fault has it in every build."""
-        parts = (self.market, self.contract, self.session, self.kind, self.field, self.detail)
+        """Stable identifier: the same fault has it in every build, by whatever kind of wrong settle it is called."""
+        kind = Kind.CURVE_BREAK if self.kind in _ONE_SETTLE else self.kind
+        parts = (self.market, self.contract, self.session, kind, self.field, self.detail)
         text = "|".join("" if part is None else str(part) for part in parts)
         return hashlib.sha256(text.encode()).hexdigest()[:12]
 

@@ -75,17 +75,17 @@ def test_a_repaired_settle_counts_the_sessions_whose_score_it_would_have_turned(
     declared = desk.markets[code]
     market, days = read_market(snapshot, declared)
     laid = [lay_plain(market, read_plan(declared, name, days)).chains[1] for name in declared.plans]
+    bars = [row for row in read_rows(snapshot, "bars", code) if row["status"] != "not a session"]
+    day_at = {days.index(row["session"]): row["session"] for row in bars}
     replaced = {
-        (row["contract"], days.index(row["session"]))
-        for row in read_rows(snapshot, "bars", code)
-        if row["status"] in ("repaired", "masked")
+        (row["contract"], days.index(row["session"])) for row in bars if row["status"] in ("repaired", "masked")
     }
     found = {}
     for row in read_rows(snapshot, "findings", code):
         if row["field"] != "settle" or row["action"] not in ("repaired", "masked") or row["session"] is None:
             continue
         contract, place = row["contract"], days.index(row["session"])
-        priced = [at for at in range(len(days)) if market.settle.get((contract, at)) is not None]
+        priced = [at for at in sorted(day_at) if market.settle.get((contract, at)) is not None]
         run = {place}
         for way in (priced[priced.index(place) + 1 :], priced[: priced.index(place)][::-1]):
             for at in way:
@@ -96,7 +96,7 @@ def test_a_repaired_settle_counts_the_sessions_whose_score_it_would_have_turned(
         for at in run:
             reported[at] = market.settle[(contract, at)]
             for change in declared.rescaled:
-                if days[at] < change.before:
+                if day_at[at] < change.before:
                     reported[at] *= change.multiply
         worst = max(impact_of_prices(market, chain, contract, reported, desk.look_backs) for chain in laid)
         found[(row["contract"], row["session"], row["kind"])] = (worst, row["impact_sessions"])

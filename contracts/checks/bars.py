@@ -25,6 +25,7 @@ _STAYED = 0.3
 _TRADED_ACROSS = 0.6
 _PERHAPS_ACROSS = 0.78
 _CARRIES_ON = 0.2
+_WELL_WITHIN = 0.5
 # Against its own past 20 and its neighbours' ratio on the session; where it traded all the way, less will do.
 _WIDER, _WIDER_AND_ACROSS = 1.8, 1.4
 _BUSIER, _BUSIER_AND_ACROSS = 2.5, 2.0
@@ -66,7 +67,9 @@ def hear_bar(panel: Panel, session: int, contract: int, price: float, expected: 
     if away > _TRADED_ACROSS and max(low - last, last - high, 0.0) - half <= _CARRIES_ON * distance:
         return Bar.BEHIND
     shifted = _shift(panel, session, contract, "low" if price > expected else "high", last)
-    if not np.isnan(shifted):
+    # Ends of bars differ from contract to contract by more than a small distance within the range.
+    is_small = away == 0.0 and distance <= _WELL_WITHIN * (high - low)
+    if not np.isnan(shifted) and not is_small:
         away = shifted / (price - expected)
     across = away <= _TRADED_ACROSS
     if not across and away > _PERHAPS_ACROSS:

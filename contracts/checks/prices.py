@@ -39,6 +39,8 @@ from contracts.quality import Quality
 _LONGEST_LOOK_AHEAD = 3
 _OWN_BAR, _BACK, _FORM, _LIMIT, _BY_FITS, _INSIDE = 2.0, 1.3, 2.0, 1.3, 0.5, 0.8
 _TELLING = 1.25
+# Of the few digits that a price within the session's range can differ by, chance swaps some.
+_FORM_INSIDE = 1.3
 # After a lone move that was kept a contract finds its place; it takes so much more to refute what it does then.
 _AFTER_KEPT = 3.0
 # Into expiry contracts are squeezed; what cannot be refuted there is told as a fact.
@@ -163,6 +165,8 @@ def _judge(court: Court, row: int, contract: int) -> Verdict | None:
     power = power_of_ten(price, level, tick)
     is_flipped = is_sign_flipped(price, level, scale, tick)
     swapped = digits_swapped_weight(price, level, scale, tick) if standing.is_known else 0.0
+    if heard is Bar.INSIDE:
+        swapped = min(swapped, _FORM_INSIDE)
     factor = _FORM if power or is_flipped else max(1.0, swapped)
     if curve.is_often_still(row, contract):
         factor *= _BY_FITS

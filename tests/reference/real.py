@@ -27,6 +27,7 @@ class RealChain:
     """What the real code lays for one nearby, in session indices and contract names."""
 
     start: int | None
+    held: Held
     decisions: list[tuple[int, str, str, str]] = field(default_factory=list)
     rows: list[Row] = field(default_factory=list)
     series: list[Row] = field(default_factory=list)
@@ -132,7 +133,7 @@ def lay_real(market: PlainMarket, plan: PlainPlan) -> dict[int, RealChain]:
     carried, status = carry_forward(settle, is_repaired)
     chains: dict[int, RealChain] = {}
     for held in lay_rolls(panel, usable, settle, declared):
-        chain = RealChain(None if held.start == NEVER else held.start)
+        chain = RealChain(None if held.start == NEVER else held.start, held)
         names = market.contracts
         chain.decisions = [(d.decided, names[d.outgoing], names[d.incoming], d.trigger) for d in held.decisions]
         chain.rows = [

@@ -1,0 +1,291 @@
+"""The plain and the real telling of the roll rules agree with examples worked by hand."""
+
+from typing import Any
+
+import pytest
+
+from tests.reference.plain_market import PlainMarket, PlainPlan, truncate
+from tests.reference.plain_rolls import count_from
+from tests.reference.small import Values, small_market
+from tests.reference.tellings import TELLINGS, Telling
+
+A, B, C, D = "XX-2024-03", "XX-2024-06", "XX-2024-09", "XX-2024-12"
+FAR = {A: 90, B: 190, C: 290, D: 390}
+
+
+def flat(count: int, *levels: float) -> Values:
+    """Contracts A, B, .. that settle at a level each on every session."""
+    return {contract: [level] * count for contract, level in zip((A, B, C, D), levels, strict=False)}
+
+
+@pytest.fixture(params=TELLINGS, name="tell")
+def _tell(request: pytest.FixtureRequest) -> Telling:
+    return TELLINGS[request.param]
+
+
+def rolls(tell: Telling, market: PlainMarket, plan: PlainPlan, nearby: int = 1) -> list[tuple[Any, ...]]:
+    """(decided, measured, effective, outgoing, incoming, trigger) of each ledger row."""
+    names = ("decided_on", "measured_on", "effective_on", "outgoing", "incoming", "trigger")
+    return [tuple(row[name] for name in names) for row in tell(market, plan).chains[nearby].rows]
+
+
+def test_volume_on_one_session_rolls_on_the_next(tell: Telling) -> None:
+    market = small_market(flat(5, 100, 105), FAR, volume={A: [9, 9, 4, 4, 4], B: [1, 9, 5, 5, 5]})
+    assert rolls(tell, market, PlainPlan("p", "volume")) == [(2, 2, 3, A, B, "volume")]
+    row = tell(market, PlainPlan("p", "volume")).chains[1].rows[0]
+    assert (row["gap"], row["ratio"], row["outgoing_volume"], row["incoming_volume"]) == (5.0, 1.05, 4.0, 5.0)
+    assert (row["weight_before"], row["weight_after"], row["step"]) == (0.0, 1.0, 1)
+
+
+def test_equal_volume_does_not_exceed_and_missing_volume_is_no(tell: Telling) -> None:
+    market = small_market(flat(4, 100, 105), FAR, volume={A: [9, 9, None, 4], B: [9, None, 9, 4]})
+    assert rolls(tell, market, PlainPlan("p", "volume")) == []
+
+
+def test_confirm_two_starts_again_after_a_session_of_no(tell: Telling) -> None:
+    market = small_market(flat(7, 100, 105), FAR, volume={A: [1] * 7, B: [2, 0, 2, 2, 0, 0, 0]})
+    assert rolls(tell, market, PlainPlan("p", "volume", confirm=2)) == [(3, 3, 4, A, B, "volume")]
+
+
+def test_confirm_reaching_before_the_first_session_is_no(tell: Telling) -> None:
+    market = small_market(flat(4, 100, 105), FAR, volume={A: [1] * 4, B: [2] * 4})
+    assert rolls(tell, market, PlainPlan("p", "volume", confirm=3)) == [(2, 2, 3, A, B, "volume")]
+
+
+def test_open_interest_is_known_a_session_late(tell: Telling) -> None:
+    market = small_market(flat(6, 100, 105), FAR, open_interest={A: [9, 9, 1, 1, 1, 1], B: [3] * 6}, lag=1)
+    assert rolls(tell, market, PlainPlan("p", "open interest")) == [(3, 3, 4, A, B, "open interest")]
+    row = tell(market, PlainPlan("p", "open interest")).chains[1].rows[0]
+    assert (row["outgoing_open_interest"], row["incoming_open_interest"]) == (1.0, 3.0)
+
+
+def test_both_needs_both_on_the_same_session_and_either_one_of_them_each_session(tell: Telling) -> None:
+    market = small_market(
+        flat(6, 100, 105),
+        FAR,
+        volume={A: [5] * 6, B: [1, 9, 1, 1, 9, 9]},
+        open_interest={A: [5] * 6, B: [1, 1, 9, 1, 9, 9]},
+    )
+    assert rolls(tell, market, PlainPlan("p", "both")) == [(4, 4, 5, A, B, "both")]
+    assert rolls(tell, market, PlainPlan("p", "either", confirm=2)) == [(2, 2, 3, A, B, "either")]
+
+
+def test_backstop_holds_the_incoming_from_that_many_sessions_before_last_trade(tell: Telling) -> None:
+    market = small_market(flat(12, 100, 105), {**FAR, A: 8})
+    assert rolls(tell, market, PlainPlan("p", "volume", backstop=2)) == [(5, 5, 6, A, B, "backstop")]
+    assert rolls(tell, market, PlainPlan("p", "calendar", backstop=2, delay=3)) == [(3, 5, 6, A, B, "calendar")]
+
+
+def test_the_trigger_is_named_where_it_fires_on_the_deadline(tell: Telling) -> None:
+    market = small_market(flat(12, 100, 105), {**FAR, A: 8}, volume={A: [5] * 12, B: [1] * 5 + [9] * 7})
+    assert rolls(tell, market, PlainPlan("p", "volume", backstop=2)) == [(5, 5, 6, A, B, "volume")]
+
+
+@pytest.mark.parametrize(("before", "effective"), [("last trade", 8), ("first notice", 6), ("earlier", 6)])
+def test_the_backstop_counts_from_the_named_day(tell: Telling, before: str, effective: int) -> None:
+    market = small_market(flat(12, 100, 105), {**FAR, A: 8}, first_notice={**FAR, A: 6})
+    assert [row[2] for row in rolls(tell, market, PlainPlan("p", "calendar", before=before))] == [effective]
+
+
+def test_most_active_skips_and_a_tie_goes_to_the_nearest(tell: Telling) -> None:
+    settle = flat(6, 100, 105, 110, 115)
+    tied = small_market(settle, FAR, volume={A: [5] * 6, B: [6, 1, 1, 1, 1, 1], C: [7] + [1] * 5, D: [7] + [1] * 5})
+    assert rolls(tell, tied, PlainPlan("p", "volume", incoming="most active")) == [(0, 0, 1, A, C, "volume")]
+    nothing = small_market(settle, {**FAR, A: 3})
+    assert rolls(tell, nothing, PlainPlan("p", "volume", incoming="most active")) == [(2, 2, 3, A, B, "backstop")]
+
+
+def test_only_the_plans_months_are_held(tell: Telling) -> None:
+    market = small_market(flat(12, 100, 105, 110), {**FAR, A: 5})
+    assert rolls(tell, market, PlainPlan("p", "calendar", months=(3, 9))) == [(4, 4, 5, A, C, "calendar")]
+
+
+def test_the_first_held_is_the_nearest_before_its_deadline_with_a_usable_settle(tell: Telling) -> None:
+    settle: Values = {A: [100] * 4, B: [None, None, 105, 105], C: [110] * 4}
+    chain = tell(small_market(settle, {**FAR, A: 0}, unusable=((C, 0),)), PlainPlan("p", "calendar")).chains[1]
+    assert (chain.start, chain.first) == (1, C)
+
+
+def test_two_steps_move_half_each_and_end_on_the_deadline(tell: Telling) -> None:
+    market = small_market(flat(12, 100, 110), {**FAR, A: 8})
+    rows = tell(market, PlainPlan("p", "calendar", steps=2)).chains[1].rows
+    assert [(r["decided_on"], r["measured_on"], r["effective_on"], r["step"]) for r in rows] == [
+        (6, 6, 7, 1),
+        (6, 7, 8, 2),
+    ]
+    assert [(r["weight_before"], r["weight_after"], r["gap"]) for r in rows] == [
+        (0.0, 0.5, 5.0),
+        (0.5, 1.0, 5.0),
+    ]
+    assert [r["ratio"] for r in rows] == [pytest.approx(105 / 100), pytest.approx(110 / 105)]
+
+
+def test_a_forced_roll_silences_trigger_and_deadline_of_its_contract(tell: Telling) -> None:
+    volume: Values = {A: [1] * 12, B: [9] * 12, C: [1] * 12}
+    market = small_market(flat(12, 100, 105, 110), {**FAR, A: 9, B: 11}, volume=volume)
+    assert rolls(tell, market, PlainPlan("p", "volume", backstop=5, delay=2, force=((A, 8),))) == [
+        (6, 7, 8, A, B, "forced"),
+        (8, 9, 10, B, C, "backstop"),
+    ]
+
+
+def test_a_forced_roll_of_a_contract_not_held_is_reported_and_the_rule_counts_again(tell: Telling) -> None:
+    market = small_market(flat(12, 100, 105, 110), {**FAR, A: 4, B: 8})
+    laid = tell(market, PlainPlan("p", "calendar", force=((B, 3),)))
+    assert laid.unused_force == [B]
+    assert [(r["effective_on"], r["trigger"]) for r in laid.chains[1].rows] == [
+        (4, "calendar"),
+        (8, "calendar"),
+    ]
+
+
+def test_a_roll_waits_until_both_settles_are_usable(tell: Telling) -> None:
+    market = small_market(flat(12, 100, 105), {**FAR, A: 8}, unusable=((A, 5), (B, 6)))
+    assert rolls(tell, market, PlainPlan("p", "calendar", backstop=2)) == [(5, 7, 8, A, B, "calendar")]
+
+
+def test_the_outgoings_last_trading_session_is_the_last_to_wait_for(tell: Telling) -> None:
+    market = small_market(flat(12, 100, 105), {**FAR, A: 8}, unusable=((A, 7),))
+    assert rolls(tell, market, PlainPlan("p", "calendar")) == [(7, 8, 9, A, B, "calendar")]
+
+
+def test_without_a_later_session_the_latest_earlier_one_measures(tell: Telling) -> None:
+    market = small_market(flat(12, 100, 105), {**FAR, A: 8}, unusable=tuple((A, s) for s in range(5, 9)))
+    row = tell(market, PlainPlan("p", "calendar", backstop=2)).chains[1].rows[0]
+    assert (row["decided_on"], row["measured_on"], row["effective_on"], row["is_stale"]) == (5, 4, 9, True)
+
+
+def test_a_stale_step_moves_all_that_is_left(tell: Telling) -> None:
+    market = small_market(flat(14, 100, 112), {**FAR, A: 8}, unusable=((A, 7), (A, 8)))
+    rows = tell(market, PlainPlan("p", "calendar", steps=4, backstop=1)).chains[1].rows
+    assert [(r["measured_on"], r["effective_on"], r["weight_before"], r["weight_after"], r["gap"]) for r in rows] == [
+        (3, 4, 0.0, 0.25, 3.0),
+        (4, 5, 0.25, 0.5, 3.0),
+        (5, 6, 0.5, 0.75, 3.0),
+        (6, 7, 0.75, 1.0, 3.0),
+    ]
+    late = small_market(flat(14, 100, 112), {**FAR, A: 8}, unusable=((A, 5), (A, 6), (A, 7), (A, 8)))
+    rows = tell(late, PlainPlan("p", "calendar", steps=4, backstop=1)).chains[1].rows
+    assert [(r["step"], r["measured_on"], r["effective_on"], r["weight_after"], r["gap"]) for r in rows] == [
+        (1, 3, 4, 0.25, 3.0),
+        (2, 4, 5, 0.5, 3.0),
+        (3, 4, 9, 1.0, 6.0),
+    ]
+
+
+def test_two_steps_left_at_the_last_trading_session_are_effective_together(tell: Telling) -> None:
+    market = small_market(flat(14, 100, 112), {**FAR, A: 8}, unusable=((A, 6), (A, 7)))
+    rows = tell(market, PlainPlan("p", "calendar", steps=3)).chains[1].rows
+    assert [(r["step"], r["measured_on"], r["effective_on"], r["weight_after"]) for r in rows] == [
+        (1, 5, 6, 1 / 3),
+        (2, 8, 9, 2 / 3),
+        (3, 8, 9, 1.0),
+    ]
+
+
+def test_a_later_contract_takes_the_place_of_one_that_never_stood_beside_the_outgoing(tell: Telling) -> None:
+    settle: Values = {A: [100.0] * 9 + [None] * 3, B: [None] * 9 + [105.0] * 3, C: [110.0] * 12}
+    market = small_market(settle, {**FAR, A: 8}, bars=((B, 3),), unusable=((C, 8), (C, 7), (C, 6)))
+    assert rolls(tell, market, PlainPlan("p", "calendar", backstop=2)) == [(5, 5, 9, A, C, "calendar")]
+
+
+def test_a_chain_is_broken_where_nothing_ever_stood_beside_the_outgoing(tell: Telling) -> None:
+    settle: Values = {A: [100.0] * 9 + [None] * 3, B: [None] * 10 + [105.0] * 2}
+    market = small_market(settle, {**FAR, A: 8}, bars=((B, 3),))
+    row = tell(market, PlainPlan("p", "calendar", backstop=2)).chains[1].rows[0]
+    assert (row["decided_on"], row["measured_on"], row["effective_on"], row["incoming"]) == (5, None, 10, B)
+    assert (row["gap"], row["ratio"], row["outgoing_settle"], row["incoming_settle"]) == (
+        None,
+        None,
+        None,
+        None,
+    )
+
+
+def test_without_a_known_incoming_nothing_is_decided_and_a_late_one_comes_too_late_to_measure(tell: Telling) -> None:
+    settle: Values = {A: [100.0] * 12, B: [None] * 10 + [105.0] * 2}
+    assert rolls(tell, small_market(settle, {**FAR, A: 8}), PlainPlan("p", "calendar", delay=1)) == [
+        (10, None, 11, A, B, "calendar")
+    ]
+
+
+def test_a_roll_not_effective_by_the_last_session_waits_outside_the_ledger(tell: Telling) -> None:
+    chain = tell(small_market(flat(6, 100, 105), {**FAR, A: 6}), PlainPlan("p", "calendar")).chains[1]
+    assert chain.rows == []
+    assert chain.is_waiting
+    assert chain.decisions == [(5, A, B, "calendar")]
+
+
+def test_the_second_nearby_rolls_with_the_first(tell: Telling) -> None:
+    plan = PlainPlan("p", "calendar", nearbys=(1, 2))
+    market = small_market(flat(12, 100, 105, 110), {**FAR, A: 5})
+    assert rolls(tell, market, plan, 1) == [(4, 4, 5, A, B, "calendar")]
+    assert rolls(tell, market, plan, 2) == [(4, 4, 5, B, C, "calendar")]
+
+
+def test_the_second_nearby_waits_by_itself(tell: Telling) -> None:
+    plan = PlainPlan("p", "calendar", nearbys=(1, 2))
+    market = small_market(flat(12, 100, 105, 110), {**FAR, A: 5}, unusable=((C, 4), (C, 5)))
+    assert rolls(tell, market, plan, 1) == [(4, 4, 5, A, B, "calendar")]
+    assert rolls(tell, market, plan, 2) == [(4, 6, 7, B, C, "calendar")]
+
+
+def test_the_second_nearby_keeps_its_plan_where_the_first_waits(tell: Telling) -> None:
+    plan = PlainPlan("p", "calendar", nearbys=(1, 2))
+    market = small_market(flat(12, 100, 105, 110), {**FAR, A: 6}, unusable=((A, 5),))
+    assert rolls(tell, market, plan, 1) == [(5, 6, 7, A, B, "calendar")]
+    assert rolls(tell, market, plan, 2) == [(5, 5, 6, B, C, "calendar")]
+
+
+def test_a_second_nearby_that_still_waits_goes_straight_to_the_next_target(tell: Telling) -> None:
+    plan = PlainPlan("p", "calendar", nearbys=(2,))
+    market = small_market(
+        flat(14, 100, 105, 110, 115), {**FAR, A: 4, B: 9}, unusable=tuple((C, s) for s in range(3, 14))
+    )
+    chain = tell(market, plan).chains[2]
+    assert chain.decisions == [(3, B, C, "calendar"), (8, B, D, "calendar")]
+    assert rolls(tell, market, plan, 2) == [(8, 8, 9, B, D, "calendar")]
+
+
+def test_a_second_nearby_that_has_moved_a_step_finishes_before_it_goes_on(tell: Telling) -> None:
+    plan = PlainPlan("p", "calendar", steps=2, nearbys=(1, 2))
+    market = small_market(
+        flat(16, 100, 105, 110, 115), {**FAR, A: 4, B: 9}, unusable=tuple((C, s) for s in (3, 4, 5, 6, 7, 8))
+    )
+    rows = tell(market, plan).chains[2].rows
+    assert [(r["decided_on"], r["measured_on"], r["effective_on"], r["outgoing"], r["incoming"]) for r in rows] == [
+        (2, 2, 3, B, C),
+        (2, 9, 10, B, C),
+        (7, 10, 11, C, D),
+        (7, 11, 12, C, D),
+    ]
+
+
+def test_a_second_nearby_unknown_on_the_decision_is_decided_when_it_is_listed(tell: Telling) -> None:
+    plan = PlainPlan("p", "calendar", delay=2, nearbys=(1, 2))
+    settle: Values = {A: [100.0] * 12, B: [105.0] * 12, C: [None] * 6 + [110.0] * 6}
+    market = small_market(settle, {**FAR, A: 5})
+    assert rolls(tell, market, plan, 1) == [(3, 4, 5, A, B, "calendar")]
+    assert rolls(tell, market, plan, 2) == [(6, 6, 7, B, C, "calendar")]
+
+
+def test_a_second_nearby_starts_when_there_is_one(tell: Telling) -> None:
+    settle: Values = {A: [100.0] * 6, B: [None, None, 105.0, 105.0, 105.0, 105.0]}
+    chain = tell(small_market(settle, FAR), PlainPlan("p", "calendar", nearbys=(2,))).chains[2]
+    assert (chain.start, chain.first, chain.rows) == (2, B, [])
+
+
+def test_counting_from_the_incoming_counts_it_as_the_first() -> None:
+    market = small_market(flat(3, 100, 105, 110), FAR)
+    plan = PlainPlan("p", "calendar")
+    assert [count_from(market, plan, B, n, 0) for n in (1, 2, 3)] == [B, C, None]
+
+
+def test_a_shorter_market_decides_the_same_up_to_its_end(tell: Telling) -> None:
+    volume: Values = {A: [9, 9, 1, 1, 1, 1], B: [1, 1, 5, 5, 1, 1], C: [0, 0, 0, 0, 4, 4]}
+    market, plan = small_market(flat(6, 100, 105, 110), FAR, volume=volume), PlainPlan("p", "volume")
+    assert tell(market, plan).chains[1].decisions == [
+        (2, A, B, "volume"),
+        (4, B, C, "volume"),
+    ]
+    assert tell(truncate(market, 3), plan).chains[1].decisions == [(2, A, B, "volume")]

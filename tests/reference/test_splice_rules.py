@@ -1,0 +1,152 @@
+"""Both tellings of the splice, and the plain one of the trend score, agree with examples worked by hand."""
+
+from typing import Any
+
+import pytest
+
+from tests.reference.plain_market import PlainMarket, PlainPlan
+from tests.reference.plain_rolls import lay_plain
+from tests.reference.plain_trend import count_different, impact_of_gap, impact_of_price, plain_score
+from tests.reference.small import small_market
+from tests.reference.tellings import TELLINGS, Telling
+
+A, B = "XX-2024-03", "XX-2024-06"
+
+
+@pytest.fixture(params=TELLINGS, name="tell")
+def _tell(request: pytest.FixtureRequest) -> Telling:
+    return TELLINGS[request.param]
+
+
+def column(tell: Telling, market: PlainMarket, plan: PlainPlan, name: str) -> list[Any]:
+    """One column of the first nearby's series."""
+    return [row[name] for row in tell(market, plan).chains[1].series]
+
+
+def test_the_series_of_one_roll_written_out(tell: Telling) -> None:
+    settle = {A: [100.0, 90.0, 80.0, 70.0], B: [110.0, 99.0, 100.0, 120.0]}
+    market, plan = small_market(settle, {A: 2, B: 99}), PlainPlan("p", "calendar")
+    # Measured on session 1: gap 9, ratio 1.1; B is held from session 2 on.
+    assert column(tell, market, plan, "contract") == [A, A, B, B]
+    assert column(tell, market, plan, "settle") == [100.0, 90.0, 100.0, 120.0]
+    assert column(tell, market, plan, "shift") == [9.0, 9.0, 0.0, 0.0]
+    assert column(tell, market, plan, "scale") == [pytest.approx(1.1), pytest.approx(1.1), 1.0, 1.0]
+    assert column(tell, market, plan, "back_adjusted") == [109.0, 99.0, 100.0, 120.0]
+    assert column(tell, market, plan, "ratio_adjusted") == [pytest.approx(110), pytest.approx(99), 100.0, 120.0]
+    assert column(tell, market, plan, "change") == [None, -10.0, 1.0, 20.0]
+    returns, growth = column(tell, market, plan, "simple_return"), column(tell, market, plan, "growth")
+    assert returns[0] is None
+    assert returns[1:] == pytest.approx([-0.1, 1 / 99, 0.2])
+    assert growth == pytest.approx([100, 90, 90 * 100 / 99, 90 * 120 / 99])
+    assert column(tell, market, plan, "rolled") == [False, False, True, False]
+
+
+def test_half_and_half_while_a_roll_of_two_steps_moves(tell: Telling) -> None:
+    settle = {A: [100.0, 100.0, 104.0, 104.0], B: [110.0, 110.0, 110.0, 112.0]}
+    market, plan = small_market(settle, {A: 3, B: 99}), PlainPlan("p", "calendar", steps=2)
+    assert column(tell, market, plan, "settle") == [100.0, 100.0, 107.0, 112.0]
+    assert column(tell, market, plan, "contract") == [A, A, A, B]
+    assert column(tell, market, plan, "incoming") == [None, None, B, None]
+    assert column(tell, market, plan, "incoming_weight") == [0.0, 0.0, 0.5, 0.0]
+    assert column(tell, market, plan, "shift") == [8.0, 8.0, 3.0, 0.0]
+    assert column(tell, market, plan, "change") == [None, 0.0, 2.0, 2.0]
+
+
+def test_three_sessions_are_carried_then_missing_and_the_change_spans_them(tell: Telling) -> None:
+    market = small_market({A: [100.0, None, None, None, None, 90.0]}, {A: 99})
+    plan = PlainPlan("p", "calendar")
+    assert column(tell, market, plan, "settle") == [100.0, 100.0, 100.0, 100.0, None, 90.0]
+    assert column(tell, market, plan, "status") == [
+        "reported",
+        "carried",
+        "carried",
+        "carried",
+        "missing",
+        "reported",
+    ]
+    assert column(tell, market, plan, "change") == [None, 0.0, 0.0, 0.0, None, -10.0]
+    assert column(tell, market, plan, "growth") == [100.0, 100.0, 100.0, 100.0, None, pytest.approx(90)]
+
+
+def test_a_repaired_price_says_so_and_a_masked_one_is_carried(tell: Telling) -> None:
+    market = small_market({A: [100.0, 9.9, 980.0]}, {A: 99}, repaired={(A, 1): 99.0}, masked=((A, 2),))
+    assert column(tell, market, PlainPlan("p", "calendar"), "status") == ["reported", "repaired", "carried"]
+    assert column(tell, market, PlainPlan("p", "calendar"), "settle") == [100.0, 99.0, 99.0]
+
+
+def test_a_stale_roll_enters_at_the_outgoing_price_plus_the_gap(tell: Telling) -> None:
+    settle = {A: [100.0, 101.0, 102.0, None], B: [110.0, None, None, 120.0]}
+    market, plan = small_market(settle, {A: 2, B: 99}), PlainPlan("p", "calendar")
+    row = tell(market, plan).chains[1].rows[0]
+    assert (row["measured_on"], row["effective_on"], row["gap"], row["ratio"]) == (0, 3, 10.0, 1.1)
+    # Entered at 102 + 10 = 112, so the position gains 8; in returns it enters at 102 x 1.1.
+    assert column(tell, market, plan, "change") == [None, 1.0, 1.0, 8.0]
+    assert column(tell, market, plan, "back_adjusted") == [110.0, 111.0, 112.0, 120.0]
+    returns = column(tell, market, plan, "simple_return")
+    assert returns[3] == pytest.approx(120 / (102 * 1.1) - 1)
+
+
+def test_nothing_is_adjusted_across_a_broken_chain(tell: Telling) -> None:
+    settle = {A: [100.0, 101.0, 102.0, None], B: [None, None, None, 120.0]}
+    market = small_market(settle, {A: 2, B: 99}, bars=((B, 0),))
+    plan = PlainPlan("p", "calendar")
+    assert column(tell, market, plan, "settle") == [100.0, 101.0, 102.0, 120.0]
+    for name in ("shift", "back_adjusted", "scale", "ratio_adjusted", "growth"):
+        assert column(tell, market, plan, name)[:3] == [None, None, None], name
+    assert column(tell, market, plan, "back_adjusted")[3] == 120.0
+    assert column(tell, market, plan, "growth")[3] == 100.0
+    assert column(tell, market, plan, "change") == [None, 1.0, 1.0, None]
+
+
+def test_a_leg_at_or_below_zero_leaves_no_ratio_before_it(tell: Telling) -> None:
+    settle = {A: [10.0, -5.0, 1.0, 1.0], B: [20.0, 15.0, 18.0, 9.0]}
+    market, plan = small_market(settle, {A: 2, B: 99}), PlainPlan("p", "calendar")
+    assert column(tell, market, plan, "shift") == [20.0, 20.0, 0.0, 0.0]
+    assert column(tell, market, plan, "scale") == [None, None, 1.0, 1.0]
+    assert column(tell, market, plan, "simple_return") == [None, None, pytest.approx(0.2), pytest.approx(-0.5)]
+    assert column(tell, market, plan, "growth") == [None, None, 100.0, pytest.approx(50)]
+
+
+def test_growth_begins_after_the_last_settle_at_or_below_zero(tell: Telling) -> None:
+    market = small_market({A: [10.0, -5.0, 4.0, 6.0]}, {A: 99})
+    assert column(tell, market, PlainPlan("p", "calendar"), "growth") == [None, None, 100.0, pytest.approx(150)]
+    assert column(tell, market, PlainPlan("p", "calendar"), "simple_return") == [
+        None,
+        None,
+        None,
+        pytest.approx(0.5),
+    ]
+
+
+def test_a_gap_left_in_turns_the_sign_of_look_backs_that_span_it() -> None:
+    rising: list[float | None] = [0.0, 1.0, 2.0, 3.0, 4.0, 5.0]
+    assert [plain_score(rising, t, (1, 2)) for t in range(6)] == [None, None, 2, 2, 2, 2]
+    # Gap -2 left in: the past stands 2 higher, 2 3 4 3 4 5. Over 1 session 3 falls, over 2 3 and 4 are level.
+    assert impact_of_gap(rising, 3, -2.0, (1,)) == 1
+    assert impact_of_gap(rising, 3, -2.0, (2,)) == 2
+    assert impact_of_gap(rising, 3, -2.0, (1, 2)) == 2
+    assert impact_of_gap(rising, 3, 2.0, (1, 2)) == 0
+
+
+def test_a_bad_price_left_standing_turns_signs_on_its_session_and_a_look_back_later() -> None:
+    market = small_market({A: [10.0, 11.0, 12.0, 13.0, 14.0, 15.0]}, {A: 99})
+    chain = lay_plain(market, PlainPlan("p", "calendar")).chains[1]
+    assert impact_of_price(market, chain, A, 2, 120.0, (1,)) == 1
+    assert impact_of_price(market, chain, A, 2, 1.2, (1,)) == 1
+    assert impact_of_price(market, chain, A, 2, 120.0, (2,)) == 1
+    assert impact_of_price(market, chain, A, 2, 11.5, (1,)) == 0
+
+
+def test_a_bad_price_on_the_measuring_session_moves_all_that_came_before() -> None:
+    settle = {A: [10.0, 11.0, 12.0, 12.0], B: [20.0, 21.0, 22.0, 23.0]}
+    market = small_market(settle, {A: 2, B: 99})
+    chain = lay_plain(market, PlainPlan("p", "calendar")).chains[1]
+    # A at 1.1 on session 1: gap 19.9 in place of 10; back-adjusted 29.9 21 22 23 in place of 20 21 22 23.
+    assert impact_of_price(market, chain, A, 1, 1.1, (1,)) == 1
+    assert impact_of_price(market, chain, A, 1, 1.1, (2,)) == 1
+    assert impact_of_price(market, chain, A, 1, 1.1, (3,)) == 1
+
+
+def test_series_of_different_length_are_not_compared() -> None:
+    with pytest.raises(ValueError, match="1 and 2 sessions"):
+        count_different([1.0], [1.0, 2.0])

@@ -115,8 +115,6 @@ class _Market:
     def first_hold(self, start: int, after: int) -> tuple[int, int]:
         """First session from `start`, and the contract, that rule 2 holds there; (NEVER, NEVER) for none."""
         able = self.eligible[self.eligible > after]
-        if not len(able) or start >= self.length:
-            return NEVER, NEVER
         sessions = np.arange(start, self.length)
         open_to = self.usable[start:, able] & (self.deadline[able] > sessions[:, None])
         rows = np.flatnonzero(open_to.any(axis=1))
@@ -167,8 +165,6 @@ class _Market:
 def decide(market: _Market, outgoing: int, start: int) -> Decision | None:
     """The next decision to leave a contract, from the close of `start` on; None where the data hold none."""
     plan = market.plan
-    if start >= market.length:
-        return None
     forced = market.forces.get(outgoing)
     if forced is not None:
         decided = forced - plan.delay
@@ -179,8 +175,6 @@ def decide(market: _Market, outgoing: int, start: int) -> Decision | None:
             if incoming != NEVER:
                 return Decision(decided, outgoing, incoming, FORCED, forced)
         start = max(start, decided + 1)
-        if start >= market.length:
-            return None
     sessions = np.arange(start, market.length)
     incoming_by_session = market.incoming_from(outgoing, sessions)
     fired = market.fires(outgoing, incoming_by_session, sessions)
@@ -200,14 +194,12 @@ def carry_out(market: _Market, decision: Decision) -> tuple[list[RollStep], bool
     steps = market.plan.steps
     outgoing, incoming = decision.outgoing, decision.incoming
     last = int(market.last_trade[outgoing])
+    both = market.usable[:, outgoing] & market.usable[:, incoming]
     rows: list[RollStep] = []
     earliest = decision.planned - 1
     for step in range(steps):
         planned = max(decision.planned - 1 + step, earliest)
-        if planned >= market.length:
-            return rows, False
-        both = market.usable[:, outgoing] & market.usable[:, incoming]
-        found = np.flatnonzero(both[planned : max(last, planned - 1) + 1]) if planned <= last else np.empty(0, np.int64)
+        found = np.flatnonzero(both[planned : last + 1])
         if len(found):
             measured = planned + int(found[0])
             if measured + 1 >= market.length:
@@ -226,11 +218,10 @@ def _row(
     earlier: list[RollStep], is_stale: bool = False,
 ) -> RollStep:  # fmt: skip
     settle = market.settle
-    planned = decision.planned - 1 + step
     return RollStep(
         decision, step + 1, measured, effective, incoming, earlier[-1].weight_after if earlier else 0.0, weight,
         float(settle[measured, decision.outgoing]), float(settle[measured, incoming]), is_stale,
-        max(0, measured - planned) if not is_stale else max(0, effective - 1 - planned),
+        effective - decision.planned - step,
     )  # fmt: skip
 
 
@@ -266,11 +257,14 @@ def lay_rolls(panel: Panel, usable: np.ndarray, settle: np.ndarray, plan: Plan) 
     settles those rolls are measured with. Returns one Held for each of `plan.nearbys`, in that order.
     """
     market = _Market(panel, usable, settle, plan)
-    first = _lay_first(market, panel)
-    return [first if nearby == 1 else _lay_later(market, first, nearby) for nearby in plan.nearbys]
+    first = _lay_first(market)
+    laid = [first if nearby == 1 else _lay_later(market, first, nearby) for nearby in plan.nearbys]
+    # A plan that publishes farther nearbys only must still say that a person's decision had no effect.
+    laid[0].unused = _unused_forces(market, panel, first)
+    return laid
 
 
-def _lay_first(market: _Market, panel: Panel) -> Held:
+def _lay_first(market: _Market) -> Held:
     start, contract = market.first_hold(0, NEVER)
     held = _empty(market.length, 1, start)
     first, at = contract, start
@@ -282,18 +276,23 @@ def _lay_first(market: _Market, panel: Panel) -> Held:
             held.pending = decision
             break
         contract, at = rows[-1].incoming, rows[-1].effective
-    done = {decision.outgoing for decision in held.decisions if decision.trigger == FORCED}
-    due = {outgoing for outgoing, effective in market.forces.items() if effective - market.plan.delay < market.length}
-    # A contract that never arrived cannot have been left either.
-    unknown = {
-        force.outgoing
-        for force in market.plan.force
-        if force.outgoing not in panel.contracts and day_number(force.effective) <= panel.sessions[-1]
-    }
-    held.unused = sorted({panel.contracts[c] for c in due - done} | unknown)
     if start != NEVER:
         _fill(held, first)
     return held
+
+
+def _unused_forces(market: _Market, panel: Panel, first: Held) -> list[str]:
+    """Outgoing contracts of forced rolls that were due within the data and found nothing to decide."""
+    delay = market.plan.delay
+    done = {panel.contracts[decision.outgoing] for decision in first.decisions if decision.trigger == FORCED}
+    # A contract that never arrived cannot have been left either.
+    due = {
+        force.outgoing
+        for force in market.plan.force
+        if day_number(force.effective) <= panel.sessions[-1]
+        or session_index(panel.sessions, panel.calendar, force.effective) - delay < market.length
+    }
+    return sorted(due - done)
 
 
 @dataclass
@@ -411,16 +410,16 @@ def _start_later(market: _Market, first: Held, nearby: int) -> tuple[int, int]:
 
 
 def _counted(market: _Market, base: int, session: int, nearby: int) -> int:
-    """The n-th contract counted from `base` among those known at the close of a session."""
-    return base if nearby == 1 else int(market.later(base, session)[nearby - 2])
+    """The n-th contract (n of 2 or more) counted from `base` among those known at the close of a session."""
+    return int(market.later(base, session)[nearby - 2])
 
 
 def _known_from(market: _Market, base: int, nearby: int) -> int:
-    """The first session that knows n contracts counted from `base`; NEVER where there are fewer."""
+    """The first session that knows n (2 or more) contracts counted from `base`; NEVER where there are fewer."""
     after = market.eligible[market.eligible > base]
     if len(after) < nearby - 1:
         return NEVER
-    return 0 if nearby == 1 else int(np.sort(market.first_bar[after])[nearby - 2])
+    return int(np.sort(market.first_bar[after])[nearby - 2])
 
 
 def _empty(length: int, nearby: int, start: int) -> Held:

@@ -171,10 +171,10 @@ def decide(market: _Market, outgoing: int, start: int) -> Decision | None:
         if decided >= start:
             if decided >= market.length:
                 return None
-            incoming = int(market.incoming_from(outgoing, np.array([decided]))[0])
+            incoming = market.incoming_from(outgoing, np.array([decided])).item()
+            # Where none was known then, none was before: the rule below finds nothing earlier.
             if incoming != NEVER:
                 return Decision(decided, outgoing, incoming, FORCED, forced)
-        start = max(start, decided + 1)
     sessions = np.arange(start, market.length)
     incoming_by_session = market.incoming_from(outgoing, sessions)
     fired = market.fires(outgoing, incoming_by_session, sessions)
@@ -198,18 +198,14 @@ def carry_out(market: _Market, decision: Decision) -> tuple[list[RollStep], bool
     rows: list[RollStep] = []
     earliest = decision.planned - 1
     for step in range(steps):
-        planned = max(decision.planned - 1 + step, earliest)
-        found = np.flatnonzero(both[planned : last + 1])
-        if len(found):
-            measured = planned + int(found[0])
-            if measured + 1 >= market.length:
-                return rows, False
-            rows.append(_row(market, decision, step, incoming, measured, measured + 1, (step + 1) / steps, rows))
-            earliest = measured + 1
-            continue
-        if last >= market.length:
+        found = np.flatnonzero(both[earliest : last + 1])
+        if not len(found):
+            return _close_stale(market, decision, rows, step, last)
+        measured = earliest + int(found[0])
+        earliest = measured + 1
+        if earliest >= market.length:
             return rows, False
-        return _close_stale(market, decision, rows, step, last)
+        rows.append(_row(market, decision, step, incoming, measured, earliest, (step + 1) / steps, rows))
     return rows, True
 
 
@@ -228,26 +224,21 @@ def _row(
 def _close_stale(
     market: _Market, decision: Decision, rows: list[RollStep], step: int, last: int
 ) -> tuple[list[RollStep], bool]:
-    """The outgoing's last trading session passed without two usable settles: measure on an earlier session."""
+    """No two usable settles up to the outgoing's last trading session: measure earlier, once it has passed."""
     effective = max(decision.planned + step, last + 1)
     if effective >= market.length:
         return rows, False
-    until = last + 1
-    candidates = [decision.incoming]
-    if not rows:
-        candidates += [int(other) for other in market.later(decision.outgoing, last) if other > decision.incoming]
-    for incoming in candidates:
-        both = market.usable[:until, decision.outgoing] & market.usable[:until, incoming]
-        found = np.flatnonzero(both)
+    # A step that has moved was measured with the incoming on a session that serves again: only a first step looks on.
+    for incoming in [decision.incoming, *market.later(decision.incoming, last).tolist()]:
+        both = market.usable[:, decision.outgoing] & market.usable[:, incoming]
+        found = np.flatnonzero(both[: last + 1])
         if len(found):
             rows.append(_row(market, decision, step, incoming, int(found[-1]), effective, 1.0, rows, is_stale=True))
             return rows, True
     restart, contract = market.first_hold(max(last + 1, decision.planned), decision.outgoing)
     if restart == NEVER:
         return rows, False
-    before = rows[-1].weight_after if rows else 0.0
-    rows.append(RollStep(decision, step + 1, NEVER, restart, contract, before, 1.0, math.nan, math.nan))
-    return rows, True
+    return [RollStep(decision, 1, NEVER, restart, contract, 0.0, 1.0, math.nan, math.nan)], True
 
 
 def lay_rolls(panel: Panel, usable: np.ndarray, settle: np.ndarray, plan: Plan) -> list[Held]:
@@ -283,15 +274,10 @@ def _lay_first(market: _Market) -> Held:
 
 def _unused_forces(market: _Market, panel: Panel, first: Held) -> list[str]:
     """Outgoing contracts of forced rolls that were due within the data and found nothing to decide."""
-    delay = market.plan.delay
     done = {panel.contracts[decision.outgoing] for decision in first.decisions if decision.trigger == FORCED}
-    # A contract that never arrived cannot have been left either.
-    due = {
-        force.outgoing
-        for force in market.plan.force
-        if day_number(force.effective) <= panel.sessions[-1]
-        or session_index(panel.sessions, panel.calendar, force.effective) - delay < market.length
-    }
+    # A session so late is decided on after the end of the data. A contract that never arrived is told of too.
+    later = panel.calendar.shift(int(panel.sessions[-1]), market.plan.delay + 1)
+    due = {force.outgoing for force in market.plan.force if day_number(force.effective) < later}
     return sorted(due - done)
 
 

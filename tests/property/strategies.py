@@ -79,6 +79,11 @@ noises = st.builds(
 )
 
 
+nearby_numbers = st.one_of(
+    st.just((1, 2, 3)), st.sets(st.integers(1, 5), min_size=1, max_size=3).map(lambda numbers: tuple(sorted(numbers)))
+)
+
+
 @st.composite
 def markets(draw: st.DrawFn, longest: int = 32) -> PlainMarket:
     """A market of 1 to 6 contracts, whose last trades do not fall, over 1 to `longest` sessions."""
@@ -197,12 +202,12 @@ def plans(draw: st.DrawFn, market: PlainMarket) -> PlainPlan:
         trigger=draw(st.sampled_from(TRIGGERS)),
         confirm=draw(st.sampled_from([1, 2, 3])),
         delay=delay,
-        steps=draw(st.sampled_from([1, 1, 2, 3, 5])),
+        steps=draw(st.sampled_from([1, 1, 2, 3, 4, 5])),
         backstop=draw(st.sampled_from([0, 0, 1, 2, 4, 6])),
         before=before,
         incoming=draw(st.sampled_from(["next", "most active"])),
         months=months,
-        nearbys=(1, 2, 3),
+        nearbys=draw(nearby_numbers),
         force=force,
     )
 
@@ -245,23 +250,31 @@ def wide_case(seed: int) -> tuple[PlainMarket, PlainPlan]:
         chance.choice([5, 8, 12, 2, 3, -1]),
         chance,
     )
+    return market, draw_plan(chance, market)
+
+
+def _draw_nearbys(chance: random.Random) -> tuple[int, ...]:
+    return tuple(sorted(chance.sample(range(1, 6), chance.randint(1, 3))))
+
+
+def draw_plan(chance: random.Random, market: PlainMarket) -> PlainPlan:
+    """A plan that a desk would accept for the market, every choice made evenly."""
     deliveries = sorted({int(name[-2:]) for name in market.contracts})
     months = None
     if chance.random() < 0.3:
         months = tuple(sorted(chance.sample(deliveries, chance.randint(1, len(deliveries)))))
     may_force = _forceable(market, months)
     forced = chance.sample(may_force, min(len(may_force), chance.choice([0, 0, 0, 1, 2])))
-    plan = PlainPlan(
+    return PlainPlan(
         name="drawn",
         trigger=chance.choice(TRIGGERS),
         confirm=chance.randint(1, 3),
         delay=chance.randint(1, 3),
-        steps=chance.choice([1, 1, 2, 3, 5]),
+        steps=chance.choice([1, 1, 2, 3, 4, 5]),
         backstop=chance.choice([0, 0, 1, 2, 4, 6]),
         before=chance.choice(["last trade", "first notice", "earlier"]) if market.first_notice else "last trade",
         incoming=chance.choice(["next", "most active"]),
         months=months,
-        nearbys=(1, 2, 3),
+        nearbys=chance.choice([(1, 2, 3), (1, 2, 3), _draw_nearbys(chance)]),
         force=tuple((name, chance.randint(0, latest)) for name, latest in forced),
     )
-    return market, plan

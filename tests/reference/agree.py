@@ -42,8 +42,9 @@ def differences(market: PlainMarket, plan: PlainPlan) -> list[str]:
     """Everything in which the plain and the real telling of a plan differ."""
     laid, real = lay_plain(market, plan), lay_real(market, plan)
     found: list[str] = []
-    if sorted(contract for contract, _ in laid.unused_force) != sorted(real[1].unused):
-        found.append(f"unused forces expected {laid.unused_force}, found {real[1].unused}")
+    unused = sorted(contract for chain in real.values() for contract in chain.unused)
+    if sorted(contract for contract, _ in laid.unused_force) != unused:
+        found.append(f"unused forces expected {laid.unused_force}, found {unused}")
     for nearby, chain in laid.chains.items():
         other, label = real[nearby], f"nearby {nearby}"
         if chain.start != other.start:

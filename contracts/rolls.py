@@ -365,9 +365,8 @@ def _lay_later(market: _Market, first: Held, nearby: int) -> Held:
     strand = _Strand(market, held, holding)
     ends = [*(event.decided for event in first.decisions), market.length][1:]
     for event, following in zip(first.decisions, ends, strict=True):
-        if event.decided >= start:
-            strand.complete_until(event.decided)
-            strand.drop_waiting(event.decided)
+        strand.complete_until(event.decided)
+        strand.drop_waiting(event.decided)
         known = _known_from(market, event.incoming, nearby)
         session = max(event.decided, known, start)
         if known == NEVER or session >= following:

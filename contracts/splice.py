@@ -169,12 +169,14 @@ def check_identities(series: Series, label: str) -> None:
     size = np.maximum(1.0, np.abs(back[places]))
     off = np.abs(np.diff(back[places]) - series.change[places][1:])
     _refuse(off > _TOLERANCE * size[1:], places[1:], label, "back-adjusted change is not the held position's change")
-    places = np.flatnonzero(~np.isnan(series.ratio_adjusted) & ~np.isnan(series.simple_return))
-    follows = places[1:][np.diff(places) == 1]
-    ratio = series.ratio_adjusted[follows] / series.ratio_adjusted[follows - 1] - 1.0
-    off = np.abs(ratio - series.simple_return[follows])
+    places = np.flatnonzero(~np.isnan(series.ratio_adjusted))
+    ratio_adjusted = series.ratio_adjusted[places]
+    with np.errstate(divide="ignore", invalid="ignore"):
+        moved = ratio_adjusted[1:] / ratio_adjusted[:-1] - 1.0
+        # There is no return on or from a price at or below zero, and nothing to hold the quotient against.
+        off = np.abs(moved - series.simple_return[places][1:])
     _refuse(
-        off > _TOLERANCE * np.maximum(1.0, np.abs(ratio)), follows, label, "ratio-adjusted return is not its return"
+        off > _TOLERANCE * np.maximum(1.0, np.abs(moved)), places[1:], label, "ratio-adjusted return is not its return"
     )
 
 

@@ -16,8 +16,8 @@ from contracts.panel import Panel
 from contracts.rolls import NEVER, Held, lay_rolls
 from contracts.sessions import day_number, market_days
 from contracts.splice import STATUS_NAMES, carry_forward, check_identities, splice
+from tests.reference.plain_days import PlainCalendar
 from tests.reference.plain_market import Cell, PlainMarket, PlainPlan
-from tests.reference.small import weekdays
 
 Row = dict[str, Any]
 
@@ -72,7 +72,7 @@ nearbys = {list(plan.nearbys)}
         text += f"""
 [[plans.{plan.name}.force]]
 outgoing = "{outgoing}"
-effective = {weekdays(effective + 1, market.sessions[0])[effective].isoformat()}
+effective = {PlainCalendar().shift(market.sessions[0], effective).isoformat()}
 reason = "drawn"
 by = "test"
 """

@@ -9,8 +9,8 @@ from tests.reference.plain_rolls import count_from
 from tests.reference.small import Values, small_market
 from tests.reference.tellings import TELLINGS, Telling
 
-A, B, C, D = "XX-2024-03", "XX-2024-06", "XX-2024-09", "XX-2024-12"
-FAR = {A: 90, B: 190, C: 290, D: 390}
+A, B, C, D, E = "XX-2024-03", "XX-2024-06", "XX-2024-09", "XX-2024-12", "XX-2025-03"
+FAR = {A: 90, B: 190, C: 290, D: 390, E: 490}
 
 
 def flat(count: int, *levels: float) -> Values:
@@ -289,3 +289,84 @@ def test_a_shorter_market_decides_the_same_up_to_its_end(tell: Telling) -> None:
         (4, B, C, "volume"),
     ]
     assert tell(truncate(market, 3), plan).chains[1].decisions == [(2, A, B, "volume")]
+
+
+def test_confirm_longer_than_the_data_is_never_fulfilled(tell: Telling) -> None:
+    market = small_market(flat(4, 100, 105), FAR, volume={A: [1] * 4, B: [2] * 4})
+    assert rolls(tell, market, PlainPlan("p", "volume", confirm=9)) == []
+
+
+def test_open_interest_known_later_than_the_data_reach_decides_nothing(tell: Telling) -> None:
+    market = small_market(flat(4, 100, 105), FAR, open_interest={A: [1] * 4, B: [2] * 4}, lag=4)
+    assert rolls(tell, market, PlainPlan("p", "open interest")) == []
+
+
+def test_a_settle_between_zero_and_one_has_a_ratio_and_zero_has_none(tell: Telling) -> None:
+    plan = PlainPlan("p", "calendar")
+    for outgoing, incoming, ratio in ((0.5, 0.75, 1.5), (0.5, 0.0, None), (0.0, 0.5, None), (0.5, -0.5, None)):
+        market = small_market(flat(6, outgoing, incoming), {**FAR, A: 3})
+        assert [row["ratio"] for row in tell(market, plan).chains[1].rows] == [ratio]
+
+
+def test_a_contract_listed_between_two_others_makes_the_third_nearby_known_and_is_not_measured_before(
+    tell: Telling,
+) -> None:
+    """Volume leads from A to C on session 1. Counted from C there are C and E; D, listed on 4, makes E the third."""
+    settle = dict(flat(8, 100, 105, 110), **{E: [120.0] * 8, D: [None] * 4 + [115.0] * 4})
+    volume: Values = {A: [9, 1, 1, 1, 1, 1, 1, 1], B: [1] * 8, C: [5] * 8}
+    plan = PlainPlan("p", "volume", incoming="most active", nearbys=(1, 3))
+    market = small_market(settle, FAR, volume=volume)
+    assert rolls(tell, market, plan, 1) == [(1, 1, 2, A, C, "volume")]
+    assert rolls(tell, market, plan, 3) == [(4, 4, 5, C, E, "volume")]
+
+
+def test_a_farther_nearby_alone_is_laid_as_beside_the_first(tell: Telling) -> None:
+    market = small_market(flat(12, 100, 105, 110), {**FAR, A: 5})
+    laid = tell(market, PlainPlan("p", "calendar", nearbys=(2,), force=((B, 3),)))
+    assert [(row["effective_on"], row["outgoing"], row["incoming"]) for row in laid.chains[2].rows] == [(5, B, C)]
+    assert laid.unused_force == [B]
+
+
+@pytest.mark.parametrize(("effective", "unused"), [(-4, [B]), (0, [B]), (7, [B]), (8, []), (40, [])])
+def test_a_forced_roll_is_unused_once_its_decision_session_has_come(
+    tell: Telling, effective: int, unused: list[str]
+) -> None:
+    """Sessions 0 to 5 and a delay of two: effective on 7 is decided on 5, on 8 after the end of the data."""
+    market = small_market(flat(6, 100, 105, 110), FAR)
+    assert tell(market, PlainPlan("p", "calendar", delay=2, force=((B, effective),))).unused_force == unused
+
+
+def test_a_forced_roll_decided_on_the_last_session_is_used_and_pending(tell: Telling) -> None:
+    market = small_market(flat(6, 100, 105, 110), FAR)
+    laid = tell(market, PlainPlan("p", "volume", force=((A, 6),)))
+    assert laid.chains[1].decisions == [(5, A, B, "forced")]
+    assert (laid.chains[1].rows, laid.chains[1].is_waiting, laid.unused_force) == ([], True, [])
+
+
+def test_a_forced_roll_without_a_known_incoming_is_unused_and_the_rule_counts_again(tell: Telling) -> None:
+    settle: Values = {A: [100.0] * 10, B: [None] * 5 + [105.0] * 5}
+    laid = tell(small_market(settle, {**FAR, A: 7}), PlainPlan("p", "calendar", force=((A, 4),)))
+    assert laid.chains[1].decisions == [(6, A, B, "calendar")]
+    assert laid.unused_force == [A]
+
+
+def test_a_forced_roll_due_while_another_is_pending_is_unused(tell: Telling) -> None:
+    """A to B is decided on 2 and waits until 6; a decision of B on 4 finds it not held yet."""
+    market = small_market(flat(12, 100, 105, 110), {**FAR, A: 8, B: 11}, unusable=tuple((A, s) for s in (2, 3, 4, 5)))
+    laid = tell(market, PlainPlan("p", "calendar", backstop=5, force=((B, 5),)))
+    assert [(row["decided_on"], row["effective_on"]) for row in laid.chains[1].rows] == [(2, 7), (7, 8)]
+    assert laid.unused_force == [B]
+
+
+def test_nothing_is_held_where_no_contract_is_before_its_deadline(tell: Telling) -> None:
+    chain = tell(small_market(flat(4, 100), {A: 3}), PlainPlan("p", "calendar", backstop=3)).chains[1]
+    assert (chain.start, chain.rows, chain.series) == (None, [], [])
+
+
+def test_the_two_legs_of_a_ratio_are_the_mixes_before_and_after_the_step(tell: Telling) -> None:
+    """From 3/4 of 80 and 1/4 of 120, which is 90, to half and half, which is 100; then 110, then 120."""
+    market = small_market(flat(12, 80, 120), {**FAR, A: 8})
+    rows = tell(market, PlainPlan("p", "calendar", steps=4)).chains[1].rows
+    assert [row["ratio"] for row in rows] == [90 / 80, 100 / 90, 110 / 100, 120 / 110]
+    assert [row["gap"] for row in rows] == [10.0, 10.0, 10.0, 10.0]
+    assert [row["weight_after"] for row in rows] == [0.25, 0.5, 0.75, 1.0]

@@ -10,7 +10,7 @@ from tests.reference.plain_trend import count_different, impact_of_gap, impact_o
 from tests.reference.small import small_market
 from tests.reference.tellings import TELLINGS, Telling
 
-A, B = "XX-2024-03", "XX-2024-06"
+A, B, C, D = "XX-2024-03", "XX-2024-06", "XX-2024-09", "XX-2024-12"
 
 
 @pytest.fixture(params=TELLINGS, name="tell")
@@ -116,6 +116,83 @@ def test_growth_begins_after_the_last_settle_at_or_below_zero(tell: Telling) -> 
         None,
         pytest.approx(0.5),
     ]
+
+
+def test_prices_between_zero_and_one_have_returns_and_grow(tell: Telling) -> None:
+    market, plan = small_market({A: [0.5, 0.25, 0.75]}, {A: 99}), PlainPlan("p", "calendar")
+    assert column(tell, market, plan, "simple_return") == [None, -0.5, pytest.approx(2.0)]
+    assert column(tell, market, plan, "growth") == [100.0, 50.0, pytest.approx(150.0)]
+
+
+def test_a_settle_of_zero_has_no_return_on_it_or_from_it_and_growth_begins_after_it(tell: Telling) -> None:
+    market, plan = small_market({A: [2.0, 0.0, 4.0, 5.0]}, {A: 99}), PlainPlan("p", "calendar")
+    assert column(tell, market, plan, "simple_return") == [None, None, None, pytest.approx(0.25)]
+    assert column(tell, market, plan, "growth") == [None, None, 100.0, pytest.approx(125.0)]
+
+
+def test_growth_does_not_exist_where_the_last_settle_is_below_zero(tell: Telling) -> None:
+    market, plan = small_market({A: [2.0, 4.0, -1.0]}, {A: 99}), PlainPlan("p", "calendar")
+    assert column(tell, market, plan, "growth") == [None, None, None]
+    assert column(tell, market, plan, "change") == [None, 2.0, -5.0]
+
+
+def test_the_status_of_a_mix_is_its_worse_leg(tell: Telling) -> None:
+    """Half and half on session 2: A is carried there, B repaired."""
+    settle = {A: [100.0, 100.0, None, 104.0], B: [110.0, 110.0, 11.0, 112.0]}
+    market = small_market(settle, {A: 3, B: 99}, repaired={(B, 2): 110.0})
+    plan = PlainPlan("p", "calendar", steps=2)
+    assert column(tell, market, plan, "status") == ["reported", "reported", "carried", "reported"]
+    turned = small_market({A: [100.0, 100.0, 10.0, 104.0], B: settle[B]}, {A: 3, B: 99}, repaired={(A, 2): 100.0})
+    assert column(tell, turned, plan, "status") == ["reported", "reported", "repaired", "reported"]
+
+
+def test_a_step_at_the_worse_leg_is_measured_when_both_stand_and_the_change_is_of_what_is_held(tell: Telling) -> None:
+    """Decided on 1, half on 2; the second half waits for session 3 and is held from 4 on."""
+    settle = {A: [100.0, 101.0, 103.0, 104.0, 105.0], B: [110.0, 112.0, 113.0, 115.0, 118.0]}
+    market = small_market(settle, {A: 3, B: 99}, unusable=((B, 2),))
+    plan = PlainPlan("p", "calendar", steps=2)
+    assert [(r["measured_on"], r["effective_on"]) for r in tell(market, plan).chains[1].rows] == [(1, 2), (3, 4)]
+    assert column(tell, market, plan, "settle") == [100.0, 101.0, 108.0, 109.5, 118.0]
+    assert column(tell, market, plan, "change") == [None, 1.0, 1.5, 1.5, 3.0]
+    assert column(tell, market, plan, "shift") == [11.0, 11.0, 5.5, 5.5, 0.0]
+
+
+def test_two_ratios_multiply_and_two_gaps_add_before_both(tell: Telling) -> None:
+    settle = {A: [100.0] * 8, B: [110.0] * 8, C: [88.0] * 8}
+    market, plan = small_market(settle, {A: 2, B: 5, C: 99}), PlainPlan("p", "calendar")
+    assert column(tell, market, plan, "shift") == [-12.0, -12.0, -22.0, -22.0, -22.0, 0.0, 0.0, 0.0]
+    assert column(tell, market, plan, "scale") == pytest.approx([0.88, 0.88, 0.8, 0.8, 0.8, 1.0, 1.0, 1.0])
+    assert column(tell, market, plan, "growth") == pytest.approx([100.0] * 8)
+
+
+def test_only_what_is_before_the_last_missing_ratio_has_no_scale(tell: Telling) -> None:
+    """A to B has a ratio of 2, B to C none (B stands at 0 when it is left), C to D one of 1.5."""
+    settle = {A: [5.0] * 11, B: [10.0] * 4 + [0.0] * 7, C: [8.0] * 11, D: [12.0] * 11}
+    market = small_market(settle, {A: 2, B: 5, C: 8, D: 99})
+    plan = PlainPlan("p", "calendar")
+    assert column(tell, market, plan, "scale") == [None] * 5 + [1.5] * 3 + [1.0] * 3
+    assert column(tell, market, plan, "growth") == [None] * 5 + [pytest.approx(100.0)] * 6
+    assert column(tell, market, plan, "shift") == [17.0] * 2 + [12.0] * 3 + [4.0] * 3 + [0.0] * 3
+
+
+def test_a_stale_roll_into_a_price_below_zero_counts_returns_like_changes(tell: Telling) -> None:
+    """Measured on 0 (A 10, B -2: no ratio), entered on 3 at 14 - 12 = 2; B stands at 3 there."""
+    settle = {A: [10.0, 12.0, 14.0, None], B: [-2.0, None, None, 3.0]}
+    market, plan = small_market(settle, {A: 2, B: 99}), PlainPlan("p", "calendar")
+    assert column(tell, market, plan, "change") == [None, 2.0, 2.0, 1.0]
+    assert column(tell, market, plan, "simple_return")[3] == pytest.approx(0.5)
+    assert column(tell, market, plan, "growth") == [None, None, None, 100.0]
+
+
+def test_a_series_that_begins_without_a_price_begins_to_change_after_its_first(tell: Telling) -> None:
+    """The second nearby is known on 0 by a bar that has no settle."""
+    settle: dict[str, list[float | None]] = {A: [100.0] * 4, B: [None, None, 105.0, 107.0]}
+    market = small_market(settle, {A: 99, B: 199}, bars=((B, 0),))
+    rows = tell(market, PlainPlan("p", "calendar", nearbys=(1, 2))).chains[2].series
+    assert [row["settle"] for row in rows] == [None, None, 105.0, 107.0]
+    assert [row["change"] for row in rows] == [None, None, None, 2.0]
+    assert [row["growth"] for row in rows] == [None, None, 100.0, pytest.approx(100 * 107 / 105)]
+    assert [row["status"] for row in rows] == ["missing", "missing", "reported", "reported"]
 
 
 def test_a_gap_left_in_turns_the_sign_of_look_backs_that_span_it() -> None:

@@ -136,8 +136,12 @@ def test_a_wrong_change_is_refused_and_its_session_named(at: int, off: float) ->
     change = [nan, 1.0, nan, 3.0, -5.0]
     check_identities(make_series([0.5, 1.5, nan, 4.5, -0.5], change, [nan] * 5, [nan] * 5), "NWHT, plan p, nearby 1")
     change[at] += off
-    with pytest.raises(IdentityError, match=f"^NWHT, plan p, nearby 1, session {at} of the series: back-adjusted change"):
-        check_identities(make_series([0.5, 1.5, nan, 4.5, -0.5], change, [nan] * 5, [nan] * 5), "NWHT, plan p, nearby 1")
+    with pytest.raises(
+        IdentityError, match=f"^NWHT, plan p, nearby 1, session {at} of the series: back-adjusted change"
+    ):
+        check_identities(
+            make_series([0.5, 1.5, nan, 4.5, -0.5], change, [nan] * 5, [nan] * 5), "NWHT, plan p, nearby 1"
+        )
 
 
 @pytest.mark.parametrize(("at", "off"), [(1, 0.001), (2, -0.001), (4, 0.001), (7, 0.001)])

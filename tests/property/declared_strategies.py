@@ -1,7 +1,7 @@
 """Random declared markets: day rules that change, months listed that change, rescaled prices, several plans.
 
-Belongs here: what a desk may declare of one market, in all its mixtures. Does not belong here: what must hold of it. How
-much there is of a market is drawn, so that a failing example shrinks; what it consists of comes from one seed.
+Belongs here: what a desk may declare of one market, in all its mixtures. Does not belong here: what must hold of it.
+How much there is of a market is drawn, so that a failing example shrinks; what it consists of comes from one seed.
 """
 
 import datetime
@@ -82,7 +82,7 @@ def _rescaled(chance: random.Random, sessions: list[Day]) -> tuple[tuple[Day, fl
 
 def _fill(chance: random.Random, case: Case, days: list[Day], levels: list[float]) -> None:
     """Bars of each contract from its listing to its last trade, with what can be missing missing."""
-    no_bar, no_field, masked, repaired, corrected = (chance.choice([0.0, 0.0, 0.05, 0.3]) for _ in range(5))
+    no_bar, no_field, repaired, corrected = (chance.choice([0.0, 0.0, 0.05, 0.3]) for _ in range(4))
     highest = chance.choice([1, 3, 1000])
     slope = chance.choice([-2.0, 0.0, 2.0])
     for position, contract in enumerate(case.contracts):

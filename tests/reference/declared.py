@@ -1,7 +1,7 @@
 """A market as a desk declares it, with its reported bars, told by both tellings down to the published rows.
 
-Belongs here: the declaration as text, its plain meaning, and the two lists of rows to compare. Does not belong here: any
-rule, randomness (`tests/property/`).
+Belongs here: the declaration as text, its plain meaning, and the two lists of rows to compare. Does not belong here:
+any rule, randomness (`tests/property/`).
 """
 
 import datetime
@@ -151,7 +151,8 @@ def _rule_text(table: str, rules: tuple[PlainRule, ...]) -> str:
         else:
             by = f"BYDAY={rule.nth}{WEEKDAY_NAMES[rule.weekday or 0]}"
         steps = ", ".join(
-            f"{{{name} = " + (f'"{value}"' if isinstance(value, str) else str(value)) + "}" for name, value in rule.steps
+            f"{{{name} = " + (f'"{value}"' if isinstance(value, str) else str(value)) + "}"
+            for name, value in rule.steps
         )
         text += f'\n[[{table}]]\nmonth_offset = {rule.month_offset}\nrule = "FREQ=MONTHLY;{by}"\nsteps = [{steps}]\n'
         if rule.since is not None:
@@ -174,7 +175,9 @@ nearbys = {list(plan.nearbys)}
     if plan.months is not None:
         text += f"months = {list(plan.months)}\n"
     for outgoing, effective in forces:
-        text += f'[[plans.{name}.force]]\noutgoing = "{outgoing}"\neffective = {effective}\nreason = "drawn"\nby = "us"\n'
+        text += (
+            f'[[plans.{name}.force]]\noutgoing = "{outgoing}"\neffective = {effective}\nreason = "drawn"\nby = "us"\n'
+        )
     return text
 
 

@@ -1,4 +1,16 @@
-"""The plain and the real telling of the roll rules agree with examples worked by hand."""
+"""The plain and the real telling of the roll rules agree with examples worked by hand.
+
+Each group of examples has the source of its rule before it. The papers, with what was read of them:
+
+- Ma, Mercer and Walker (1992), Rolling over futures contracts: a note, Journal of Futures Markets 12(2), 203-217: the
+  day of leaving and the way of adjusting change what is found in a series (from memory; the paper was not open).
+- Geiss (1995), Distortion-free futures price series, Journal of Futures Markets 15(7), 805-831: several contracts laid
+  into one series by weights, without a jump where the weights move (from memory; the paper was not open).
+- Carchano and Pardo (2009), Rolling over stock index futures contracts, Journal of Futures Markets 29(7), 684-694: five
+  criteria for the day, and no significant difference between them for stock indices (abstract read; paper not open).
+- Moskowitz, Ooi and Pedersen (2012), Time series momentum, Journal of Financial Economics 104(2), 228-250: trend
+  signals on returns of the most liquid contract, compounded over rolls (abstract read; the rest from memory).
+"""
 
 from typing import Any
 
@@ -29,6 +41,9 @@ def rolls(tell: Telling, market: PlainMarket, plan: PlainPlan, nearby: int = 1) 
     return [tuple(row[name] for name in names) for row in tell(market, plan).chains[nearby].rows]
 
 
+# Leaving when the later contract trades more: one of the criteria compared by Carchano and Pardo (2009), from memory.
+# To hold it from the session after, at the settles of the deciding one, is common practice, no source; so is asking
+# for several sessions in a row.
 def test_volume_on_one_session_rolls_on_the_next(tell: Telling) -> None:
     market = small_market(flat(5, 100, 105), FAR, volume={A: [9, 9, 4, 4, 4], B: [1, 9, 5, 5, 5]})
     assert rolls(tell, market, PlainPlan("p", "volume")) == [(2, 2, 3, A, B, "volume")]
@@ -52,6 +67,8 @@ def test_confirm_reaching_before_the_first_session_is_no(tell: Telling) -> None:
     assert rolls(tell, market, PlainPlan("p", "volume", confirm=3)) == [(2, 2, 3, A, B, "volume")]
 
 
+# Leaving when more of the later contract is open: likewise (from memory). That its number is a session old: a
+# settlement table printed on Monday 2018-05-21 has Friday's open interest (AP, CBOT corn 1,865,533).
 def test_open_interest_is_known_a_session_late(tell: Telling) -> None:
     market = small_market(flat(6, 100, 105), FAR, open_interest={A: [9, 9, 1, 1, 1, 1], B: [3] * 6}, lag=1)
     assert rolls(tell, market, PlainPlan("p", "open interest")) == [(3, 3, 4, A, B, "open interest")]
@@ -59,6 +76,7 @@ def test_open_interest_is_known_a_session_late(tell: Telling) -> None:
     assert (row["outgoing_open_interest"], row["incoming_open_interest"]) == (1.0, 3.0)
 
 
+# Both or either of the two: common practice, no source.
 def test_both_needs_both_on_the_same_session_and_either_one_of_them_each_session(tell: Telling) -> None:
     market = small_market(
         flat(6, 100, 105),
@@ -70,6 +88,9 @@ def test_both_needs_both_on_the_same_session_and_either_one_of_them_each_session
     assert rolls(tell, market, PlainPlan("p", "either", confirm=2)) == [(2, 2, 3, A, B, "either")]
 
 
+# Leaving a fixed number of sessions before the end: the plainest of the criteria of Ma, Mercer and Walker (1992) and of
+# Carchano and Pardo (2009), from memory. Before first notice, where a long position may be given the goods: common
+# practice, no source.
 def test_backstop_holds_the_incoming_from_that_many_sessions_before_last_trade(tell: Telling) -> None:
     market = small_market(flat(12, 100, 105), {**FAR, A: 8})
     assert rolls(tell, market, PlainPlan("p", "volume", backstop=2)) == [(5, 5, 6, A, B, "backstop")]
@@ -87,6 +108,8 @@ def test_the_backstop_counts_from_the_named_day(tell: Telling, before: str, effe
     assert [row[2] for row in rolls(tell, market, PlainPlan("p", "calendar", before=before))] == [effective]
 
 
+# Going into the most active contract, past illiquid months: the returns of Moskowitz, Ooi and Pedersen (2012) are those
+# of the most liquid contract (from memory). Holding chosen months only: common practice, no source.
 def test_most_active_skips_and_a_tie_goes_to_the_nearest(tell: Telling) -> None:
     settle = flat(6, 100, 105, 110, 115)
     tied = small_market(settle, FAR, volume={A: [5] * 6, B: [6, 1, 1, 1, 1, 1], C: [7] + [1] * 5, D: [7] + [1] * 5})
@@ -106,6 +129,8 @@ def test_the_first_held_is_the_nearest_before_its_deadline_with_a_usable_settle(
     assert (chain.start, chain.first) == (1, C)
 
 
+# Moving in equal parts over several sessions: as published of a commodity index (test_index_roll.py has it); weights
+# that move without a jump in the series: Geiss (1995), from memory.
 def test_two_steps_move_half_each_and_end_on_the_deadline(tell: Telling) -> None:
     market = small_market(flat(12, 100, 110), {**FAR, A: 8})
     rows = tell(market, PlainPlan("p", "calendar", steps=2)).chains[1].rows
@@ -120,6 +145,7 @@ def test_two_steps_move_half_each_and_end_on_the_deadline(tell: Telling) -> None
     assert [r["ratio"] for r in rows] == [pytest.approx(105 / 100), pytest.approx(110 / 105)]
 
 
+# A person's decision comes before the rule: common practice, no source.
 def test_a_forced_roll_silences_trigger_and_deadline_of_its_contract(tell: Telling) -> None:
     volume: Values = {A: [1] * 12, B: [9] * 12, C: [1] * 12}
     market = small_market(flat(12, 100, 105, 110), {**FAR, A: 9, B: 11}, volume=volume)
@@ -139,6 +165,8 @@ def test_a_forced_roll_of_a_contract_not_held_is_reported_and_the_rule_counts_ag
     ]
 
 
+# Both settles of a gap from one session's close, so that it holds no move in time: Geiss (1995), from memory. To wait
+# for them, and what to do where they never come: our own choice.
 def test_a_roll_waits_until_both_settles_are_usable(tell: Telling) -> None:
     market = small_market(flat(12, 100, 105), {**FAR, A: 8}, unusable=((A, 5), (B, 6)))
     assert rolls(tell, market, PlainPlan("p", "calendar", backstop=2)) == [(5, 7, 8, A, B, "calendar")]
@@ -216,6 +244,7 @@ def test_a_roll_not_effective_by_the_last_session_waits_outside_the_ledger(tell:
     assert chain.decisions == [(5, A, B, "calendar")]
 
 
+# Counting nearbys from the contract held, and rolling them together: common practice, no source.
 def test_the_second_nearby_rolls_with_the_first(tell: Telling) -> None:
     plan = PlainPlan("p", "calendar", nearbys=(1, 2))
     market = small_market(flat(12, 100, 105, 110), {**FAR, A: 5})

@@ -1,4 +1,7 @@
-"""Both tellings of the splice, and the plain one of the trend score, agree with examples worked by hand."""
+"""Both tellings of the splice, and the plain one of the trend score, agree with examples worked by hand.
+
+Each group of examples has the source of its rule before it; what was read of the papers stands in test_roll_rules.py.
+"""
 
 from typing import Any
 
@@ -23,6 +26,9 @@ def column(tell: Telling, market: PlainMarket, plan: PlainPlan, name: str) -> li
     return [row[name] for row in tell(market, plan).chains[1].series]
 
 
+# A change is that of the weights held into it, so that a roll adds none: Geiss (1995), from memory. Past prices shifted
+# by gaps, or scaled by ratios: common practice, no source; that the choice matters: Ma, Mercer and Walker (1992), from
+# memory. Returns of the held contract, compounded, for a trend signal: Moskowitz, Ooi and Pedersen (2012), from memory.
 def test_the_series_of_one_roll_written_out(tell: Telling) -> None:
     settle = {A: [100.0, 90.0, 80.0, 70.0], B: [110.0, 99.0, 100.0, 120.0]}
     market, plan = small_market(settle, {A: 2, B: 99}), PlainPlan("p", "calendar")
@@ -52,6 +58,7 @@ def test_half_and_half_while_a_roll_of_two_steps_moves(tell: Telling) -> None:
     assert column(tell, market, plan, "change") == [None, 0.0, 2.0, 2.0]
 
 
+# A price stands for at most three sessions after it: our own choice.
 def test_three_sessions_are_carried_then_missing_and_the_change_spans_them(tell: Telling) -> None:
     market = small_market({A: [100.0, None, None, None, None, 90.0]}, {A: 99})
     plan = PlainPlan("p", "calendar")
@@ -74,6 +81,7 @@ def test_a_repaired_price_says_so_and_a_masked_one_is_carried(tell: Telling) -> 
     assert column(tell, market, PlainPlan("p", "calendar"), "settle") == [100.0, 99.0, 99.0]
 
 
+# What is bought where nobody saw both prices is valued by the last session that did: our own choice.
 def test_a_stale_roll_enters_at_the_outgoing_price_plus_the_gap(tell: Telling) -> None:
     settle = {A: [100.0, 101.0, 102.0, None], B: [110.0, None, None, 120.0]}
     market, plan = small_market(settle, {A: 2, B: 99}), PlainPlan("p", "calendar")
@@ -98,6 +106,7 @@ def test_nothing_is_adjusted_across_a_broken_chain(tell: Telling) -> None:
     assert column(tell, market, plan, "change") == [None, 1.0, 1.0, None]
 
 
+# Prices at or below zero do occur (crude oil, 2020-04-20, CFTC release 8315-20) and have neither ratio nor return.
 def test_a_leg_at_or_below_zero_leaves_no_ratio_before_it(tell: Telling) -> None:
     settle = {A: [10.0, -5.0, 1.0, 1.0], B: [20.0, 15.0, 18.0, 9.0]}
     market, plan = small_market(settle, {A: 2, B: 99}), PlainPlan("p", "calendar")

@@ -132,8 +132,8 @@ class _Market:
             chosen[sessions >= self.first_bar[contract]] = contract
         if self.plan.incoming is Incoming.MOST_ACTIVE:
             activity = self.volume if self.plan.trigger is Trigger.VOLUME else self.known_interest
-            values = activity[np.ix_(sessions, after)]
-            values = np.where(np.isnan(values) | (self.first_bar[after] > sessions[:, None]), -np.inf, values)
+            # Before its first bar a contract has neither volume nor open interest.
+            values = np.nan_to_num(activity[np.ix_(sessions, after)], nan=-np.inf)
             best = values.argmax(axis=1)
             known = values[np.arange(len(sessions)), best] > -np.inf
             chosen = np.where(known, after[best], chosen)
@@ -333,9 +333,8 @@ class _Strand:
         if self.roll is None:
             self.roll = self._decide(Decision(session, leaving, target, trigger, planned))
         elif math.isinf(self.roll.ends):
-            decision = Decision(session, leaving, target, trigger, planned)
-            self.held.decisions.append(decision)
-            self.queued = _Roll(decision, [], False)
+            # What it waits for does not end within the data.
+            self.held.decisions.append(Decision(session, leaving, target, trigger, planned))
         else:
             behind = max(planned, int(self.roll.ends) + 1)
             self.queued = self._decide(Decision(session, leaving, target, trigger, behind))

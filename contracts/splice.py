@@ -98,19 +98,15 @@ def _later_rolls(held: Held, start: int, length: int) -> tuple[np.ndarray, np.nd
     """Shift and scale of every session, and the place from which on there is a scale."""
     shift, scale = np.zeros(length - start), np.ones(length - start)
     gaps: list[float] = []
-    total, product = 0.0, 1.0
-    first_whole, until = 0, length - start
+    product, first_whole = 1.0, 0
     for step in reversed(held.steps):
         at = step.effective - start
-        shift[at:until], scale[at:until] = total, product
-        until = at
         gaps.append(step.gap)
-        # fsum is exact until its one rounding, so that the sum can be done again with a pencil.
-        total = math.fsum(gaps)
         product *= step.ratio
+        # fsum is exact until its one rounding, so that the sum can be done again with a pencil.
+        shift[:at], scale[:at] = math.fsum(gaps), product
         if math.isnan(product):
             first_whole = max(first_whole, at)
-    shift[:until], scale[:until] = total, product
     return shift, scale, first_whole
 
 

@@ -10,7 +10,7 @@ import sys
 from tests.property.strategies import wide_case
 from tests.reference.agree import differences
 
-CASES = 400
+CASES = 200
 WORKED = (
     "tests/reference/test_roll_rules.py",
     "tests/reference/test_splice_rules.py",

@@ -152,6 +152,7 @@ def lay_real(market: PlainMarket, plan: PlainPlan) -> dict[int, RealChain]:
                 "ratio": _or_none(s.ratio),
                 "trigger": s.decision.trigger,
                 "is_stale": s.is_stale,
+                "postponed": s.postponed,
             }
             for s in held.steps
         ]

@@ -170,6 +170,14 @@ def test_a_forced_roll_of_a_contract_not_held_is_reported_and_the_rule_counts_ag
 def test_a_roll_waits_until_both_settles_are_usable(tell: Telling) -> None:
     market = small_market(flat(12, 100, 105), {**FAR, A: 8}, unusable=((A, 5), (B, 6)))
     assert rolls(tell, market, PlainPlan("p", "calendar", backstop=2)) == [(5, 7, 8, A, B, "calendar")]
+    assert [row["postponed"] for row in tell(market, PlainPlan("p", "calendar", backstop=2)).chains[1].rows] == [2]
+
+
+def test_each_step_counts_the_sessions_it_waited(tell: Telling) -> None:
+    """Three steps due from sessions 3, 4 and 5 on: the first on time, the second a session late and so the third."""
+    market = small_market(flat(12, 100, 105), {**FAR, A: 8}, unusable=((A, 4),))
+    rows = tell(market, PlainPlan("p", "calendar", steps=3, backstop=2)).chains[1].rows
+    assert [(row["effective_on"], row["postponed"]) for row in rows] == [(4, 0), (6, 1), (7, 1)]
 
 
 def test_the_outgoings_last_trading_session_is_the_last_to_wait_for(tell: Telling) -> None:
@@ -337,16 +345,17 @@ def test_a_settle_between_zero_and_one_has_a_ratio_and_zero_has_none(tell: Telli
         assert [row["ratio"] for row in tell(market, plan).chains[1].rows] == [ratio]
 
 
+@pytest.mark.parametrize("listed", [4, 5])
 def test_a_contract_listed_between_two_others_makes_the_third_nearby_known_and_is_not_measured_before(
-    tell: Telling,
+    tell: Telling, listed: int
 ) -> None:
-    """Volume leads from A to C on session 1. Counted from C there are C and E; D, listed on 4, makes E the third."""
-    settle = dict(flat(8, 100, 105, 110), **{E: [120.0] * 8, D: [None] * 4 + [115.0] * 4})
+    """Volume leads from A to C on session 1. Counted from C there are C and E; D, listed later, makes E the third."""
+    settle = dict(flat(8, 100, 105, 110), **{E: [120.0] * 8, D: [None] * listed + [115.0] * (8 - listed)})
     volume: Values = {A: [9, 1, 1, 1, 1, 1, 1, 1], B: [1] * 8, C: [5] * 8}
     plan = PlainPlan("p", "volume", incoming="most active", nearbys=(1, 3))
     market = small_market(settle, FAR, volume=volume)
     assert rolls(tell, market, plan, 1) == [(1, 1, 2, A, C, "volume")]
-    assert rolls(tell, market, plan, 3) == [(4, 4, 5, C, E, "volume")]
+    assert rolls(tell, market, plan, 3) == [(listed, listed, listed + 1, C, E, "volume")]
 
 
 def test_a_farther_nearby_alone_is_laid_as_beside_the_first(tell: Telling) -> None:

@@ -8,6 +8,8 @@ from collections import Counter
 from collections.abc import Iterator
 
 from tests.reference.agree import Row
+from tests.reference.declared import Case, delivery_of_name, last_trade_of, sessions_of
+from tests.reference.plain_days import ONE, newest_rule, shift_month
 from tests.reference.plain_market import PlainMarket, PlainPlan
 from tests.reference.plain_rolls import Chain, Laid, eligible, is_later
 
@@ -32,6 +34,12 @@ OUTCOMES = (
     "no ratio", "settle at or below zero", "carried", "missing", "repaired",
     "equal activity", "never arrived", "listed late", "dead early", "over before the first session",
     "alive after the last session", "two last trades on one day",
+)  # fmt: skip
+
+DECLARED = (
+    "last trade by rules that change", "first notice by rules that change", "no first notice",
+    "rescaled once", "rescaled twice", "months listed change", "closed on a weekday", "open on a weekend",
+    "several plans", "a later delivery ends earlier", "forced and never arrived", "forced outside the data",
 )  # fmt: skip
 
 
@@ -132,11 +140,52 @@ def _of_row(market: PlainMarket, plan: PlainPlan, chain: Chain, row: Row) -> Ite
         yield "measured on a corrected settle"
 
 
-def too_seldom(seen: Counter[str], floor: int) -> dict[str, int]:
+def count_declared(case: Case) -> Counter[str]:
+    """Which of the things a desk may declare of a market are in a case, and matter there."""
+    return Counter(_of_declaration(case))
+
+
+def _of_declaration(case: Case) -> Iterator[str]:
+    sessions = sessions_of(case)
+    arrived = sorted({contract for contract, _ in case.bars})
+    for name, rules in (("last trade", case.last_trade), ("first notice", case.first_notice)):
+        if len({newest_rule(rules, delivery_of_name(contract)) for contract in arrived}) > 1:
+            yield f"{name} by rules that change"
+    if not case.first_notice:
+        yield "no first notice"
+    felt = sum(sessions[0] < before <= sessions[-1] for before, _ in case.rescaled)
+    if felt:
+        yield "rescaled once" if felt == 1 else "rescaled twice"
+    listed = [delivery_of_name(contract) for contract in case.contracts]
+    delivery = listed[0]
+    while delivery < listed[-1]:
+        if delivery[1] in case.delivery_months and delivery not in listed:
+            yield "months listed change"
+            break
+        delivery = shift_month(*delivery, 1)
+    days = range((sessions[-1] - sessions[0]).days)
+    if any(sessions[0] + ONE * at in case.calendar.closed for at in days):
+        yield "closed on a weekday"
+    if any(day.weekday() > 4 for day in sessions):
+        yield "open on a weekend"
+    if len(case.plans) > 1:
+        yield "several plans"
+    ends = [last_trade_of(case, contract) for contract in arrived]
+    if ends != sorted(ends):
+        yield "a later delivery ends earlier"
+    for forces in case.forces.values():
+        for outgoing, day in forces:
+            if outgoing not in arrived:
+                yield "forced and never arrived"
+            if not sessions[0] <= day <= sessions[-1]:
+                yield "forced outside the data"
+
+
+def too_seldom(seen: Counter[str], floor: int, names: tuple[str, ...] = (*OPTIONS, *OUTCOMES)) -> dict[str, int]:
     """Options and outcomes seen less often than the floor."""
-    return {name: seen[name] for name in (*OPTIONS, *OUTCOMES) if seen[name] < floor}
+    return {name: seen[name] for name in names if seen[name] < floor}
 
 
-def as_text(seen: Counter[str]) -> str:
+def as_text(seen: Counter[str], names: tuple[str, ...] = (*OPTIONS, *OUTCOMES)) -> str:
     """The counts, one a line, in the order of the names."""
-    return "\n".join(f"{seen[name]:>9,} {name}" for name in (*OPTIONS, *OUTCOMES))
+    return "\n".join(f"{seen[name]:>9,} {name}" for name in names)

@@ -238,6 +238,15 @@ def test_a_chain_is_broken_where_nothing_ever_stood_beside_the_outgoing(tell: Te
     )
 
 
+def test_a_broken_chain_begins_anew_behind_what_was_held_even_where_an_earlier_delivery_trades_longer(
+    tell: Telling,
+) -> None:
+    """B ends on 5, A, delivered before it, on 90; A has settles from 6 on and C from 7 on."""
+    settle: Values = {A: [None] * 6 + [100.0] * 4, B: [105.0] * 6 + [None] * 4, C: [None] * 7 + [110.0] * 3}
+    market = small_market(settle, {**FAR, B: 5}, bars=((A, 0), (C, 0)))
+    assert rolls(tell, market, PlainPlan("p", "calendar")) == [(4, None, 7, B, C, "calendar")]
+
+
 def test_without_a_known_incoming_nothing_is_decided_and_a_late_one_comes_too_late_to_measure(tell: Telling) -> None:
     settle: Values = {A: [100.0] * 12, B: [None] * 10 + [105.0] * 2}
     assert rolls(tell, small_market(settle, {**FAR, A: 8}), PlainPlan("p", "calendar", delay=1)) == [
@@ -365,13 +374,16 @@ def test_a_farther_nearby_alone_is_laid_as_beside_the_first(tell: Telling) -> No
     assert laid.unused_force == [B]
 
 
-@pytest.mark.parametrize(("effective", "unused"), [(-4, [B]), (0, [B]), (7, [B]), (8, []), (40, [])])
+@pytest.mark.parametrize(
+    ("delay", "effective", "unused"),
+    [(2, -4, [B]), (2, 0, [B]), (2, 7, [B]), (2, 8, []), (2, 40, []), (1, 6, [B]), (1, 7, [])],
+)
 def test_a_forced_roll_is_unused_once_its_decision_session_has_come(
-    tell: Telling, effective: int, unused: list[str]
+    tell: Telling, delay: int, effective: int, unused: list[str]
 ) -> None:
-    """Sessions 0 to 5 and a delay of two: effective on 7 is decided on 5, on 8 after the end of the data."""
+    """Sessions 0 to 5: with a delay of two, effective on 7 is decided on 5, on 8 after the end of the data."""
     market = small_market(flat(6, 100, 105, 110), FAR)
-    assert tell(market, PlainPlan("p", "calendar", delay=2, force=((B, effective),))).unused_force == unused
+    assert tell(market, PlainPlan("p", "calendar", delay=delay, force=((B, effective),))).unused_force == unused
 
 
 def test_a_forced_roll_decided_on_the_last_session_is_used_and_pending(tell: Telling) -> None:

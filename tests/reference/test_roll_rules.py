@@ -400,6 +400,25 @@ def test_a_forced_roll_without_a_known_incoming_is_unused_and_the_rule_counts_ag
     assert laid.unused_force == [A]
 
 
+@pytest.mark.parametrize("trigger", ["volume", "open interest", "either"])
+def test_a_forced_roll_stays_unused_where_its_contract_is_left_by_the_trigger_later(
+    tell: Telling, trigger: str
+) -> None:
+    settle: Values = {A: [100.0] * 10, B: [None] * 5 + [105.0] * 5}
+    activity: Values = {A: [1] * 10, B: [None] * 5 + [2] * 5}
+    market = small_market(settle, FAR, volume=activity, open_interest=activity)
+    laid = tell(market, PlainPlan("p", trigger, force=((A, 4),)))
+    assert laid.chains[1].decisions == [(5, A, B, trigger)]
+    assert laid.unused_force == [A]
+
+
+@pytest.mark.parametrize("incoming", ["next", "most active"])
+def test_a_forced_roll_after_the_data_is_not_decided_yet(tell: Telling, incoming: str) -> None:
+    market = small_market(flat(6, 100, 105, 110), FAR, volume={A: [1] * 6, B: [9] * 6})
+    laid = tell(market, PlainPlan("p", "volume", incoming=incoming, force=((A, 40),)))
+    assert (laid.chains[1].decisions, laid.chains[1].is_waiting, laid.unused_force) == ([], False, [])
+
+
 def test_a_forced_roll_due_while_another_is_pending_is_unused(tell: Telling) -> None:
     """A to B is decided on 2 and waits until 6; a decision of B on 4 finds it not held yet."""
     market = small_market(flat(12, 100, 105, 110), {**FAR, A: 8, B: 11}, unusable=tuple((A, s) for s in (2, 3, 4, 5)))

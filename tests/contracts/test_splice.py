@@ -170,6 +170,14 @@ def test_rounding_is_allowed_for_in_proportion_and_absolutely_below_one() -> Non
             check_identities(make_series([np.nan] * 2, [np.nan] * 2, ratio, [0.0, simple_return]), "p")
 
 
+def test_of_several_wrong_sessions_the_first_is_named() -> None:
+    wrong, nothing = [1.0, 2.0, 3.0, 4.0], [np.nan] * 4
+    with pytest.raises(IdentityError, match=r"^p, session 1 of the series"):
+        check_identities(make_series(wrong, [np.nan, 5.0, 1.0, 5.0], nothing, nothing), "p")
+    with pytest.raises(IdentityError, match=r"^p, session 2 of the series"):
+        check_identities(make_series(nothing, nothing, wrong, [np.nan, 1.0, 5.0, 5.0]), "p")
+
+
 def test_a_series_without_prices_holds_together() -> None:
     check_identities(make_series([], [], [], []), "p")
     check_identities(make_series([np.nan] * 3, [np.nan] * 3, [np.nan] * 3, [np.nan] * 3), "p")

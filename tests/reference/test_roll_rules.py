@@ -238,6 +238,15 @@ def test_a_chain_is_broken_where_nothing_ever_stood_beside_the_outgoing(tell: Te
     )
 
 
+@pytest.mark.parametrize("last", [7, 8])
+def test_a_broken_chain_begins_anew_after_the_last_trade_even_where_the_incoming_stands_on_it(
+    tell: Telling, last: int
+) -> None:
+    settle: Values = {A: [100.0] * last + [None] * (12 - last), B: [None] * last + [105.0] * (12 - last)}
+    market = small_market(settle, {**FAR, A: last}, bars=((B, 3),))
+    assert rolls(tell, market, PlainPlan("p", "calendar")) == [(last - 1, None, last + 1, A, B, "calendar")]
+
+
 def test_a_broken_chain_begins_anew_behind_what_was_held_even_where_an_earlier_delivery_trades_longer(
     tell: Telling,
 ) -> None:
@@ -321,6 +330,37 @@ def test_a_second_nearby_starts_when_there_is_one(tell: Telling) -> None:
     assert (chain.start, chain.first, chain.rows) == (2, B, [])
 
 
+def test_a_second_nearby_effective_on_the_last_session_is_in_the_ledger_and_waits_for_nothing(tell: Telling) -> None:
+    plan = PlainPlan("p", "calendar", nearbys=(1, 2))
+    market = small_market(flat(6, 100, 105, 110), {**FAR, A: 5})
+    assert rolls(tell, market, plan, 2) == [(4, 4, 5, B, C, "calendar")]
+    assert not tell(market, plan).chains[2].is_waiting
+
+
+def test_a_second_nearby_not_known_before_the_first_decides_again_follows_the_later_decision(tell: Telling) -> None:
+    """A to B is decided on 2, when no C is known; C is listed on 6, when B to C is decided; D is listed on 8."""
+    settle: Values = {
+        A: [100.0] * 12, B: [105.0] * 12, C: [None] * 6 + [110.0] * 6, D: [None] * 8 + [115.0] * 4,
+    }  # fmt: skip
+    market = small_market(settle, {**FAR, A: 7, B: 9})
+    plan = PlainPlan("p", "calendar", backstop=4, nearbys=(1, 2))
+    assert rolls(tell, market, plan, 1) == [(2, 2, 3, A, B, "calendar"), (6, 6, 7, B, C, "calendar")]
+    assert rolls(tell, market, plan, 2) == [(8, 8, 9, B, D, "calendar")]
+
+
+def test_a_second_nearby_that_ended_in_another_contract_than_decided_goes_on_from_that_one(tell: Telling) -> None:
+    """B to D, decided on 1, finds no D beside B up to B's end on 5: E takes its place; it is the second from D then."""
+    volume: Values = {A: [1] * 12, B: [1] * 12, C: [1] + [9] * 11, D: [1] * 8 + [20] * 4, E: [1] * 12}
+    market = small_market(
+        {**flat(12, 100, 105, 110, 115), E: [120.0] * 12}, {**FAR, B: 5}, volume=volume,
+        unusable=tuple((D, s) for s in range(8)),
+    )  # fmt: skip
+    plan = PlainPlan("p", "volume", incoming="most active", nearbys=(1, 2))
+    assert rolls(tell, market, plan, 1) == [(1, 1, 2, A, C, "volume"), (8, 8, 9, C, D, "volume")]
+    assert rolls(tell, market, plan, 2) == [(1, 5, 6, B, E, "volume")]
+    assert tell(market, plan).chains[2].decisions == [(1, B, D, "volume")]
+
+
 def test_counting_from_the_incoming_counts_it_as_the_first() -> None:
     market = small_market(flat(3, 100, 105, 110), FAR)
     plan = PlainPlan("p", "calendar")
@@ -342,8 +382,9 @@ def test_confirm_longer_than_the_data_is_never_fulfilled(tell: Telling) -> None:
     assert rolls(tell, market, PlainPlan("p", "volume", confirm=9)) == []
 
 
-def test_open_interest_known_later_than_the_data_reach_decides_nothing(tell: Telling) -> None:
-    market = small_market(flat(4, 100, 105), FAR, open_interest={A: [1] * 4, B: [2] * 4}, lag=4)
+@pytest.mark.parametrize("lag", [4, 5, 9])
+def test_open_interest_known_later_than_the_data_reach_decides_nothing(tell: Telling, lag: int) -> None:
+    market = small_market(flat(4, 100, 105), FAR, open_interest={A: [1] * 4, B: [2] * 4}, lag=lag)
     assert rolls(tell, market, PlainPlan("p", "open interest")) == []
 
 
@@ -383,7 +424,8 @@ def test_a_forced_roll_is_unused_once_its_decision_session_has_come(
 ) -> None:
     """Sessions 0 to 5: with a delay of two, effective on 7 is decided on 5, on 8 after the end of the data."""
     market = small_market(flat(6, 100, 105, 110), FAR)
-    assert tell(market, PlainPlan("p", "calendar", delay=delay, force=((B, effective),))).unused_force == unused
+    plan = PlainPlan("p", "calendar", delay=delay, nearbys=(1, 2), force=((B, effective),))
+    assert tell(market, plan).unused_force == unused
 
 
 def test_a_forced_roll_decided_on_the_last_session_is_used_and_pending(tell: Telling) -> None:
@@ -413,9 +455,10 @@ def test_a_forced_roll_stays_unused_where_its_contract_is_left_by_the_trigger_la
 
 
 @pytest.mark.parametrize("incoming", ["next", "most active"])
-def test_a_forced_roll_after_the_data_is_not_decided_yet(tell: Telling, incoming: str) -> None:
+@pytest.mark.parametrize("effective", [7, 8, 40])
+def test_a_forced_roll_after_the_data_is_not_decided_yet(tell: Telling, effective: int, incoming: str) -> None:
     market = small_market(flat(6, 100, 105, 110), FAR, volume={A: [1] * 6, B: [9] * 6})
-    laid = tell(market, PlainPlan("p", "volume", incoming=incoming, force=((A, 40),)))
+    laid = tell(market, PlainPlan("p", "volume", incoming=incoming, force=((A, effective),)))
     assert (laid.chains[1].decisions, laid.chains[1].is_waiting, laid.unused_force) == ([], False, [])
 
 

@@ -94,6 +94,41 @@ def test_a_stale_roll_enters_at_the_outgoing_price_plus_the_gap(tell: Telling) -
     assert returns[3] == pytest.approx(120 / (102 * 1.1) - 1)
 
 
+def test_a_stale_roll_on_the_second_session_enters_like_any_other(tell: Telling) -> None:
+    """B and C stood side by side on 0 only, past their first notice; A comes on 2, B's last session.
+
+    The second nearby begins there with B at 108 and is in C from 3 on, entered at 108 + (110 - 105) = 113.
+    """
+    settle = {A: [None, None, 100.0, 100.0], B: [105.0, 106.0, 108.0, None], C: [110.0, None, None, 115.0]}
+    volume = {A: [1.0] * 4, B: [9.0] * 4, C: [0.0] * 4}
+    market = small_market(settle, {A: 90, B: 2, C: 90}, volume=volume, first_notice={A: 90, B: 0, C: 0})
+    chain = tell(market, PlainPlan("p", "volume", before="first notice", nearbys=(1, 2))).chains[2]
+    assert [(row["measured_on"], row["effective_on"], row["gap"]) for row in chain.rows] == [(0, 3, 5.0)]
+    assert [row["settle"] for row in chain.series] == [108.0, 115.0]
+    assert [row["change"] for row in chain.series] == [None, 2.0]
+    assert chain.series[1]["simple_return"] == pytest.approx(115 / (108 * 110 / 105) - 1)
+
+
+def test_a_stale_roll_before_the_first_price_of_a_series_changes_nothing(tell: Telling) -> None:
+    """As before, but B has no price left when the second nearby begins with it on 5."""
+    none = [None] * 5
+    settle = {A: [*none, 100.0, 100.0, 100.0], B: [105.0, *none, None, None], C: [110.0, *none, 115.0, 116.0]}
+    volume = {A: [1.0] * 8, B: [9.0] * 8, C: [0.0] * 8}
+    market = small_market(settle, {A: 90, B: 5, C: 90}, volume=volume, first_notice={A: 90, B: 0, C: 0})
+    chain = tell(market, PlainPlan("p", "volume", before="first notice", nearbys=(1, 2))).chains[2]
+    assert [(row["measured_on"], row["effective_on"], row["gap"]) for row in chain.rows] == [(0, 6, 5.0)]
+    assert [row["settle"] for row in chain.series] == [None, 115.0, 116.0]
+    assert [row["change"] for row in chain.series] == [None, None, 1.0]
+
+
+def test_the_change_over_a_roll_is_the_incoming_contracts_own_to_the_last_bit(tell: Telling) -> None:
+    """0.3 - 0.1 is not 0.3 - (0.7 + (0.1 - 0.7)) in floating point; the series begins on 1, the roll is of 2."""
+    settle = {A: [None, 0.7, 0.7, 0.7, 0.7], B: [None, 0.1, 0.1, 0.3, 0.3]}
+    market = small_market(settle, {A: 3, B: 99}, bars=((A, 0), (B, 0)))
+    assert 0.3 - 0.1 != 0.3 - (0.7 + (0.1 - 0.7))
+    assert column(tell, market, PlainPlan("p", "calendar"), "change") == [None, 0.0, 0.3 - 0.1, 0.0]
+
+
 def test_nothing_is_adjusted_across_a_broken_chain(tell: Telling) -> None:
     settle = {A: [100.0, 101.0, 102.0, None], B: [None, None, None, 120.0]}
     market = small_market(settle, {A: 2, B: 99}, bars=((B, 0),))

@@ -270,6 +270,13 @@ def test_a_roll_not_effective_by_the_last_session_waits_outside_the_ledger(tell:
     assert chain.decisions == [(5, A, B, "calendar")]
 
 
+@pytest.mark.parametrize("count", [6, 300])
+def test_a_roll_measured_on_the_very_last_session_waits_however_long_the_data(tell: Telling, count: int) -> None:
+    market = small_market(flat(count, 100, 105), {**FAR, A: count})
+    chain = tell(market, PlainPlan("p", "calendar")).chains[1]
+    assert (chain.decisions, chain.rows, chain.is_waiting) == ([(count - 1, A, B, "calendar")], [], True)
+
+
 # Counting nearbys from the contract held, and rolling them together: common practice, no source.
 def test_the_second_nearby_rolls_with_the_first(tell: Telling) -> None:
     plan = PlainPlan("p", "calendar", nearbys=(1, 2))

@@ -121,12 +121,13 @@ def test_a_stale_roll_before_the_first_price_of_a_series_changes_nothing(tell: T
     assert [row["change"] for row in chain.series] == [None, None, 1.0]
 
 
-def test_the_change_over_a_roll_is_the_incoming_contracts_own_to_the_last_bit(tell: Telling) -> None:
-    """0.3 - 0.1 is not 0.3 - (0.7 + (0.1 - 0.7)) in floating point; the series begins on 1, the roll is of 2."""
-    settle = {A: [None, 0.7, 0.7, 0.7, 0.7], B: [None, 0.1, 0.1, 0.3, 0.3]}
-    market = small_market(settle, {A: 3, B: 99}, bars=((A, 0), (B, 0)))
+@pytest.mark.parametrize("more", [0, 300])
+def test_the_change_over_a_roll_is_the_incoming_contracts_own_to_the_last_bit(tell: Telling, more: int) -> None:
+    """0.3 - 0.1 is not 0.3 - (0.7 + (0.1 - 0.7)) in floating point; the series begins on 1, the roll is of 2 or 302."""
+    settle = {A: [None, *[0.7] * (4 + more)], B: [None, *[0.1] * (2 + more), 0.3, 0.3]}
+    market = small_market(settle, {A: 3 + more, B: 999}, bars=((A, 0), (B, 0)))
     assert 0.3 - 0.1 != 0.3 - (0.7 + (0.1 - 0.7))
-    assert column(tell, market, PlainPlan("p", "calendar"), "change") == [None, 0.0, 0.3 - 0.1, 0.0]
+    assert column(tell, market, PlainPlan("p", "calendar"), "change")[1:] == [0.0] * (1 + more) + [0.3 - 0.1, 0.0]
 
 
 def test_nothing_is_adjusted_across_a_broken_chain(tell: Telling) -> None:

@@ -148,6 +148,14 @@ def read_register(places: Places) -> tuple[Arrival, ...]:
     return _parse_register(places)[0]
 
 
+def register_digest(places: Places, intake: int) -> str:
+    """SHA-256 of the register's lines up to an intake; raises StoreUnsound where it is damaged."""
+    arrivals, whole = _parse_register(places)
+    count = sum(arrival.taken_in <= intake for arrival in arrivals)
+    lines = places.register.read_bytes()[:whole].splitlines(keepends=True) if count else []
+    return hashlib.sha256(b"".join(lines[:count])).hexdigest()
+
+
 def read_archived(places: Places, sha: str) -> bytes:
     """The raw bytes with this SHA-256; raises StoreUnsound where they are gone or no longer hash to it."""
     if _SHA.fullmatch(sha) is None:
@@ -168,6 +176,20 @@ def read_archived(places: Places, sha: str) -> bytes:
     if seen != sha:
         raise StoreUnsound(f"{path}: seen bytes with SHA-256 {seen}; expected {sha}")
     return data
+
+
+def keep_texts(places: Places, texts: dict[str, bytes]) -> dict[str, str]:
+    """Archive texts that came from no raw folder; returns their SHA-256 by name. Raises StoreError."""
+    with store_errors("the archive could not be written"):
+        places.archive.mkdir(parents=True, exist_ok=True)
+        places.arriving.touch()
+    kept = {name: _keep_bytes(places, name, data, rehash=False, is_container=False)[1] for name, data in texts.items()}
+    with store_errors("the archive could not be written"):
+        for folder in sorted({places.archived(sha).parent for sha in kept.values()}):
+            sync_folder(folder)
+        sync_folder(places.archive)
+        places.arriving.unlink()
+    return kept
 
 
 # The raw folder.

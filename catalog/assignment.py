@@ -4,6 +4,7 @@ Belongs here: matching arrivals to layouts and markets, and the digest of a mark
 here: reading prices, writing a snapshot.
 """
 
+import contextlib
 import hashlib
 import importlib.metadata
 import json
@@ -166,11 +167,13 @@ class _MarketMemory:
         return self.known[key]
 
     def save(self) -> None:
+        # Only a memory, and a reader of the store may not be allowed to write it.
         if self.is_changed:
-            self.path.parent.mkdir(parents=True, exist_ok=True)
-            draft = self.path.with_suffix(".draft")
-            draft.write_text(json.dumps(self.known, sort_keys=True), encoding="utf-8")
-            draft.replace(self.path)
+            with contextlib.suppress(OSError):
+                self.path.parent.mkdir(parents=True, exist_ok=True)
+                draft = self.path.with_suffix(".draft")
+                draft.write_text(json.dumps(self.known, sort_keys=True), encoding="utf-8")
+                draft.replace(self.path)
 
 
 def _raw_file(

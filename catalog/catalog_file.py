@@ -15,7 +15,7 @@ import pyarrow as pa
 
 from catalog.places import DESK_WIDE
 from contracts.errors import StoreError
-from contracts.tables import TABLES, Table
+from contracts.tables import DERIVED, TABLES, Table
 
 if TYPE_CHECKING:
     import duckdb
@@ -23,7 +23,7 @@ if TYPE_CHECKING:
 # DuckDB 2.0 writes files that no client before it opens unless it is told to write older ones.
 STORAGE_VERSION = "v1.2.0"
 _VIEWS = Path(__file__).parent / "views"
-_MACROS = ("series_of", "session_of", "curve_of")
+_MACROS = ("series_of", "session_of", "curve_of", "price_trace")
 _TYPES = {
     pa.string(): "varchar",
     pa.date32(): "date",
@@ -82,10 +82,12 @@ def lay_views(connection: "duckdb.DuckDBPyConnection", database: str, facts: Sna
             database=database, name=quote_name(table.name), columns=columns, source=sources[table.name]
         )
         connection.execute(text)
+    about = quote_text(f"snapshot {facts.name}, desk {facts.desk[:12]}, code {facts.code[:12]}")
     for macro in _MACROS:
-        connection.execute(_statement(macro).substitute(database=database, **sources))
+        connection.execute(_statement(macro).substitute(database=database, about=about, **sources))
+    _lay_derived(connection, database, sources)
     connection.execute(_statement("dictionary").substitute(database=database))
-    rows = [row for table in TABLES for row in describe_columns(table)]
+    rows = [row for table in (*TABLES, *DERIVED) for row in describe_columns(table)]
     # One statement; a hundred would take longer than all the rest of the catalog.
     places = ", ".join(["(?, ?, ?, ?, ?, ?)"] * len(rows))
     values = [value for row in rows for value in row]
@@ -93,6 +95,23 @@ def lay_views(connection: "duckdb.DuckDBPyConnection", database: str, facts: Sna
     connection.execute(_statement("snapshot").substitute(database=database))
     row = [facts.name, facts.sequence, facts.parent, facts.desk, facts.code, str(facts.folder)]
     connection.execute(f"insert into {database}.snapshot values (?, ?, ?, ?, ?, ?)", row)  # noqa: S608
+
+
+def _lay_derived(connection: "duckdb.DuckDBPyConnection", database: str, sources: dict[str, str]) -> None:
+    """Make each derived view, and a macro of one market with its name and `_of`."""
+    # A view looks names up in the catalog it lies in, whatever the caller calls that; a macro does not.
+    shown = {table.name: table.name for table in (*TABLES, *DERIVED)}
+    asked = {
+        table.name: f"(select * from {sources[table.name]} where market = market_code)"  # noqa: S608
+        for table in TABLES
+        if "market" in table.columns
+    }
+    for view in DERIVED:
+        body = _statement(view.name)
+        connection.execute(f"create view {database}.{view.name} as {body.substitute(shown)}")
+        text = body.substitute(asked)
+        connection.execute(f"create macro {database}.{view.name}_of(market_code) as table {text}")
+        asked[view.name] = f"({text})"
 
 
 def describe_columns(table: Table) -> list[list[str]]:

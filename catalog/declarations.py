@@ -112,7 +112,7 @@ class Desk:
     """Everything declared.
 
     `digest` is the SHA-256 of all of it that can change what is published: where files lie, when the night
-    runs and on what workers plays no part.
+    runs and on what workers plays no part. `texts` are its files as read, by name below the folder.
     """
 
     path: Path
@@ -128,6 +128,7 @@ class Desk:
     repairs: tuple[DeclaredRepair, ...]
     waivers: tuple[Waiver, ...]
     digest: str
+    texts: dict[str, str] = field(default_factory=dict)
 
     def repairs_of(self, market: str) -> tuple[DeclaredRepair, ...]:
         """The declared repairs of one market's contracts."""
@@ -163,6 +164,11 @@ def load_desk(path: Path) -> Desk:
     if mistakes:
         raise DeskError(mistakes)
     return _load(Path(path).resolve(), tuple(texts.items()))
+
+
+def desk_from_texts(path: Path, texts: dict[str, str]) -> Desk:
+    """The desk whose files had these texts, as if they lay in the folder `path`; raises DeskError."""
+    return _load(path, tuple(texts.items()))
 
 
 def _read_texts(path: Path) -> tuple[dict[str, str], list[Mistake]]:
@@ -214,7 +220,7 @@ def _load(path: Path, items: tuple[tuple[str, str], ...]) -> Desk:
     return Desk(
         path, (path / head.raw).resolve(), (path / head.store).resolve(), head.schedule, head.run, head.gates,
         head.quality, head.look_backs, dict(sorted(markets.items())), dict(sorted(layouts.items())), repairs,
-        waivers, _digest(reading.texts, head),
+        waivers, _digest(reading.texts, head), reading.texts,
     )  # fmt: skip
 
 

@@ -14,7 +14,7 @@ from typing import Any, Final
 
 import pyarrow as pa
 
-from catalog.archive import take_in
+from catalog.archive import keep_texts, register_digest, take_in
 from catalog.assignment import (
     Assignment,
     FileOfMarket,
@@ -25,7 +25,7 @@ from catalog.assignment import (
     package_versions,
     table_stamp,
 )
-from catalog.declarations import Desk, load_desk
+from catalog.declarations import Desk, desk_from_texts, load_desk
 from catalog.gates import judge_market, silent_sessions
 from catalog.places import DESK_WIDE, Places, table_path
 from catalog.runs import Run, next_run, record_run, runs_table
@@ -49,6 +49,7 @@ from contracts.tables import COVERAGE, FINDINGS, MARKET_TABLES, RUNS, make_table
 
 PUBLISHED: Final = "published"
 HELD_BACK: Final = "held back"
+WAIVED: Final = "gate waived by"
 # Tables that tell of tonight even where a market's prices are held back.
 _TOLD_TONIGHT = ("findings", "rejects", "files")
 
@@ -70,17 +71,26 @@ class Night:
     dask_address: str
     files_taken_in: int
     intake: int
+    # Market, reason and person of each gate that is waived tonight.
+    waived: tuple[tuple[str, str, str], ...] = ()
 
 
-def begin(desk_path: Path, raw: Path | None, store: Path | None, command: str, rehash: bool = False) -> Night:
+def begin(
+    desk_path: Path, raw: Path | None, store: Path | None, command: str, rehash: bool = False,
+    waived: tuple[tuple[str, str, str], ...] = (),
+) -> Night:  # fmt: skip
     """Load the desk, take in what arrived, and say which markets have to be built.
 
-    With `rehash` every raw file is read, and not only those whose size or time changed. The caller holds the
-    store's write lock. Raises DeskError before anything is touched, UsageError for a
-    raw folder that is not there while the archive is empty.
+    With `rehash` every raw file is read, and not only those whose size or time changed; `waived` are market,
+    reason and person of gates that hold nothing back tonight. The caller holds the store's write lock. Raises
+    DeskError before anything is touched, UsageError for a raw folder that is not there while the archive is
+    empty, and for a waived market that the desk does not declare.
     """
     started = datetime.datetime.now(datetime.UTC).isoformat()
     desk = load_desk(desk_path)
+    for code, _, _ in waived:
+        if code not in desk.markets:
+            raise UsageError(f"no market {code!r} to waive the gate of; there is {', '.join(desk.markets)}")
     raw_path, places = (raw or desk.raw).resolve(), Places((store or desk.store).resolve())
     clean_leftovers(places)
     intake = take_in(raw_path, places, rehash)
@@ -95,6 +105,7 @@ def begin(desk_path: Path, raw: Path | None, store: Path | None, command: str, r
     told = _desk_digest(assignment)
     nothing_new = (
         last is not None
+        and not waived
         and all(code in last.markets and last.markets[code].inputs == digests[code] for code in desk.markets)
         and set(last.markets) == set(desk.markets)
         and last.desk == desk.digest
@@ -104,12 +115,12 @@ def begin(desk_path: Path, raw: Path | None, store: Path | None, command: str, r
     staging = ""
     if not nothing_new:
         staging = str(open_staging(places))
-        _remember(places, assignment, digests, told)
+        _remember(places, desk, assignment, digests, told)
     building = () if nothing_new else tuple(code for code in desk.markets if code not in unchanged)
     return Night(
         str(desk.path), str(raw_path), str(places.store), staging, command, started, building,
         unchanged if not nothing_new else tuple(desk.markets), nothing_new, str(desk.run.workers),
-        desk.run.dask_address, intake.new, intake.number,
+        desk.run.dask_address, intake.new, intake.number, waived,
     )  # fmt: skip
 
 
@@ -133,9 +144,13 @@ def _memory(places: Places) -> Path:
     return places.intake / "night.json"
 
 
-def _remember(places: Places, assignment: Assignment, digests: dict[str, str], told: list[str]) -> None:
-    """Leave the assignment where every worker can read it; the lock's holder alone writes it."""
+def _remember(places: Places, desk: Desk, assignment: Assignment, digests: dict[str, str], told: list[str]) -> None:
+    """Leave desk and assignment where every worker can read them; the lock's holder alone writes it.
+
+    The desk goes along as text, so that one edited in the middle of a night takes effect on the next.
+    """
     content = {
+        "desk": desk.texts,
         "files": {code: [list(vars(entry).values()) for entry in files] for code, files in assignment.files.items()},
         "findings": [[f.kind, f.severity, f.message, f.detail] for f in assignment.findings],
         "unclaimed": assignment.unclaimed,
@@ -153,6 +168,10 @@ def _recall(places: Places) -> dict[str, Any]:
     return content
 
 
+def _desk_tonight(night: Night, memory: dict[str, Any]) -> Desk:
+    return desk_from_texts(Path(night.desk_path), memory["desk"])
+
+
 def build_one(night: Night, market: str) -> dict[str, Any]:
     """Build one market into the staging folder.
 
@@ -163,8 +182,9 @@ def build_one(night: Night, market: str) -> dict[str, Any]:
     """
     started = time.monotonic()
     places = Places(Path(night.store))
-    desk = load_desk(Path(night.desk_path))
-    entries = tuple(FileOfMarket(*entry) for entry in _recall(places)["files"][market])
+    memory = _recall(places)
+    desk = _desk_tonight(night, memory)
+    entries = tuple(FileOfMarket(*entry) for entry in memory["files"][market])
     result: dict[str, Any] = {"market": market, "files": {}, "facts": {}, "worst": [], "error": None, "rows": 0}
     try:
         if not entries:
@@ -208,18 +228,18 @@ def finish(night: Night, results: list[dict[str, Any]]) -> Summary:
     Raises StoreError where nothing can be published; the last snapshot then stands.
     """
     places = Places(Path(night.store))
-    desk = load_desk(Path(night.desk_path))
     last = _last_manifest(places)
     if night.nothing_new:
         if last is None:
             raise StoreError(f"{places.store}: the snapshot this night was compared with is gone")
-        run = Run(next_run(places), night.command, night.started_at, _now(), "nothing new", len(desk.markets), 0, 0)
+        run = Run(next_run(places), night.command, night.started_at, _now(), "nothing new", len(last.markets), 0, 0)
         record_run(places, run)
         return summarise(last, published_now=False, results=[])
     memory = _recall(places)
+    desk = _desk_tonight(night, memory)
     facts = {code: last.markets[code].facts for code in night.unchanged} if last is not None else {}
     facts |= {result["market"]: result["facts"] for result in results if result["error"] is None}
-    verdicts = _judge(desk, facts, results, memory["digests"], last)
+    verdicts = _judge(desk, facts, results, memory["digests"], last, night.waived)
     staging = Path(night.staging)
     files = _lay_files(places, staging, verdicts, results, last)
     if not any(path.startswith("series/") for path in files):
@@ -242,7 +262,9 @@ def finish(night: Night, results: list[dict[str, Any]]) -> Summary:
         files[stored.path] = stored
     worst = sorted((row for result in results for row in result["worst"]), key=lambda row: -row["impact_sessions"])
     draft = Manifest(
-        sequence=0, name="", parent=current_snapshot(places), files=files, desk=desk.digest, code=code_digest(),
+        sequence=0, name="", parent=current_snapshot(places), files=files, desk=desk.digest,
+        arrivals=register_digest(places, night.intake),
+        desk_files=keep_texts(places, {name: text.encode() for name, text in desk.texts.items()}), code=code_digest(),
         packages=package_versions(), intake=night.intake, markets=verdicts,
         summary={
             "files_of_no_market": memory["told"],
@@ -263,9 +285,10 @@ def _now() -> str:
 
 def _judge(
     desk: Desk, facts: dict[str, dict[str, Any]], results: list[dict[str, Any]], digests: dict[str, str],
-    last: Manifest | None,
+    last: Manifest | None, waived: tuple[tuple[str, str, str], ...] = (),
 ) -> dict[str, Verdict]:  # fmt: skip
     """The verdict on every market of the desk."""
+    waivers = {code: f"{WAIVED} {person}: {why}" for code, why, person in waived}
     errors = {result["market"]: result["error"] for result in results if result["error"] is not None}
     dates = [datetime.date.fromisoformat(fact["last_session"]) for fact in facts.values()]
     data_date = max(dates, default=datetime.date.min)
@@ -273,9 +296,11 @@ def _judge(
     for code, market in desk.markets.items():
         reasons = (errors[code],) if code in errors else judge_market(market, facts[code], desk.gates, data_date)
         before = last.markets.get(code) if last is not None else None
-        if not reasons:
+        # A market that cannot be built has nothing to publish, whoever waives what.
+        if not reasons or (code in waivers and code not in errors):
+            told = f"{waivers[code]} ({'; '.join(reasons)})" if reasons else ""
             verdicts[code] = Verdict(
-                state=PUBLISHED, reason="", inputs=digests[code], facts=facts[code], last_good_snapshot=None
+                state=PUBLISHED, reason=told, inputs=digests[code], facts=facts[code], last_good_snapshot=None
             )
             continue
         good = before.last_good_snapshot if before is not None else None

@@ -86,6 +86,11 @@ class Places:
         return self.store / "catalog.duckdb"
 
     @property
+    def catalog_hashes(self) -> Path:
+        """SHA-256 of the catalog file by the snapshot it shows: of the newest, and of the one before it."""
+        return self.store / "catalog.json"
+
+    @property
     def lock(self) -> Path:
         """The file whose lock the one writer holds."""
         return self.store / "lock"
@@ -94,6 +99,11 @@ class Places:
     def runs(self) -> Path:
         """The log of runs, one JSON object a line, also of those that published nothing."""
         return self.store / "runs.jsonl"
+
+    @property
+    def names(self) -> Path:
+        """Names that people gave snapshots, one JSON object."""
+        return self.store / "names.json"
 
     def archived(self, sha: str) -> Path:
         """Where the archive keeps the raw bytes of this SHA-256."""

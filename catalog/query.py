@@ -12,6 +12,7 @@ from catalog.catalog_file import lay_views, quote_text
 from catalog.places import Places
 from catalog.store import current_snapshot, facts_of, read_manifest
 from contracts.errors import StoreUnsound, UsageError
+from contracts.tables import DERIVED
 
 if TYPE_CHECKING:
     import duckdb
@@ -126,6 +127,7 @@ def _first_line(error: Exception) -> str:
 def how_to_open(places: Places) -> str:
     """How any client opens the catalog, as lines of text."""
     path = places.catalog
+    derived = ", ".join(view.name for view in DERIVED)
     return "\n".join(
         [
             f"The catalog is {path}, a DuckDB file (any client from 1.2 on). Open it for reading only:",
@@ -137,6 +139,9 @@ def how_to_open(places: Places) -> str:
             "It shows the snapshot that is newest when it is opened: open it again after a night.",
             "Tables: bars, series, rolls, findings, rejects, files, coverage, terms, runs; dictionary says",
             "what their columns mean, snapshot which snapshot it is.",
-            "Macros: series_of(market), session_of(day), curve_of(market, day).",
+            f"Views derived from them: {derived}.",
+            "Macros: series_of(market), session_of(day), curve_of(market, day),",
+            "price_trace(market, plan, nearby, day), and each derived view of one market by its name and _of, such as",
+            f"from {DERIVED[0].name}_of('...').",
         ]
     )

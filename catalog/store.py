@@ -32,6 +32,7 @@ from catalog.places import (
     sync_folder,
     table_path,
     write_new,
+    write_whole,
 )
 from catalog.places import write_lock as write_lock  # the writer's first step, so found here too
 from contracts.errors import StoreError, StoreUnsound, UsageError
@@ -73,7 +74,9 @@ class Verdict(_Stored):
 class Manifest(_Stored):
     """`manifest.json`; the class is the format. The name holds the hash of all the rest of it.
 
-    `publish` sets sequence, name and parent; desk and code are digests, intake the number of the newest one.
+    `publish` sets sequence, name and parent; desk and code are digests, intake the number of the newest one,
+    desk_files the SHA-256 under which the archive keeps each file of the desk, arrivals that of the register of
+    arrivals up to that intake.
     """
 
     format: Literal[1] = 1
@@ -82,6 +85,8 @@ class Manifest(_Stored):
     parent: str | None = None
     files: dict[str, StoredFile]
     desk: str
+    desk_files: dict[str, str] = Field(default_factory=dict)
+    arrivals: str = ""
     code: str
     packages: dict[str, str]
     intake: int
@@ -97,13 +102,17 @@ class Manifest(_Stored):
 
     def proper_name(self) -> str:
         """The name this manifest's content gives it: sequence and hash."""
-        content = self.model_dump(mode="json", exclude={"name"})
+        content = self.model_dump(mode="json", exclude={"name", *self._absent()})
         text = json.dumps(content, sort_keys=True, separators=(",", ":"), allow_nan=False)
         return f"{self.sequence:06d}-{hashlib.sha256(text.encode()).hexdigest()[:12]}"
 
+    def _absent(self) -> set[str]:
+        # A snapshot from before desk and register were recorded keeps the name it got.
+        return {name for name in ("desk_files", "arrivals") if not getattr(self, name)}
+
     def as_bytes(self) -> bytes:
         """The manifest as it is stored."""
-        content = self.model_dump(mode="json")
+        content = self.model_dump(mode="json", exclude=self._absent())
         return (json.dumps(content, sort_keys=True, indent=1, allow_nan=False) + "\n").encode()
 
 
@@ -125,6 +134,42 @@ def current_snapshot(places: Places) -> str | None:
             f"(newest there: {_newest_names(places)})"
         )
     return name
+
+
+def find_snapshot(places: Places, asked: str) -> str:
+    """Name of the snapshot with this name, number or given name; raises UsageError where there is none."""
+    given = named_snapshots(places)
+    for number, name in _snapshots_there(places):
+        if asked == name or (asked.isdecimal() and int(asked) == number) or given.get(asked) == name:
+            return name
+    names = f"; named: {', '.join(sorted(given))}" if given else ""
+    expected = f"expected a snapshot that is there, by name or number (newest: {_newest_names(places)}{names})"
+    raise UsageError(f"{places.store}: seen {asked!r}; {expected}")
+
+
+def list_snapshots(places: Places) -> list[str]:
+    """Names of all snapshots, oldest first."""
+    return [name for _, name in _snapshots_there(places)]
+
+
+def named_snapshots(places: Places) -> dict[str, str]:
+    """Snapshots by the names people gave them; raises StoreUnsound where they cannot be read."""
+    try:
+        names = json.loads(places.names.read_bytes())
+    except FileNotFoundError:
+        return {}
+    except (OSError, ValueError) as error:
+        raise StoreUnsound(f"{places.names}: cannot be read: {error}; expected names of snapshots as JSON") from error
+    if not isinstance(names, dict) or not all(isinstance(value, str) for value in names.values()):
+        raise StoreUnsound(f"{places.names}: expected one JSON object of names and snapshots")
+    return names
+
+
+def origin_of(places: Places, manifest: Manifest, market: str) -> Manifest:
+    """The snapshot in which a market's tables were made: an older one where it is held back."""
+    while (good := manifest.markets[market].last_good_snapshot) is not None:
+        manifest = read_manifest(places, good)
+    return manifest
 
 
 def next_sequence(places: Places) -> int:
@@ -380,11 +425,30 @@ def _prepare_switch(places: Places, manifest: Manifest) -> tuple[Path, Path]:
         catalog, current = prepare_part(places.catalog), prepare_part(places.current)
         try:
             build_catalog(catalog, facts_of(places, manifest))
+            _note_catalog(places, manifest.name, catalog)
             write_new(current, f"{manifest.name}\n".encode(), 0o644)
         except BaseException:
             catalog.unlink(missing_ok=True)
             raise
     return catalog, current
+
+
+def _note_catalog(places: Places, name: str, catalog: Path) -> None:
+    """Record the hash of a catalog that is about to be switched to, beside that of the one it replaces."""
+    known = read_catalog_hashes(places)
+    current = current_snapshot(places)
+    kept = {current: known[current]} if current in known else {}
+    content = {**kept, name: hash_file(catalog)[1]}
+    write_whole(places.catalog_hashes, (json.dumps(content, sort_keys=True) + "\n").encode())
+
+
+def read_catalog_hashes(places: Places) -> dict[str, str]:
+    """SHA-256 of the catalog file by snapshot; empty where none can be read."""
+    try:
+        hashes = json.loads(places.catalog_hashes.read_bytes())
+    except (OSError, ValueError):
+        return {}
+    return hashes if isinstance(hashes, dict) else {}
 
 
 def _switch(places: Places, catalog: Path, current: Path) -> None:

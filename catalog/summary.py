@@ -6,7 +6,7 @@ Belongs here: gathering and wording the outcome. Does not belong here: deciding 
 from dataclasses import asdict, dataclass
 from typing import Any
 
-from catalog.store import Manifest
+from catalog.store import Manifest, Verdict
 
 _TOLD = 10
 
@@ -34,6 +34,7 @@ class Summary:
     nothing_new: bool
     published: tuple[str, ...]
     held_back: tuple[tuple[str, str], ...]
+    waived: tuple[tuple[str, str], ...]
     findings: tuple[FindingLine, ...]
     finding_counts: dict[str, int]
     rows: int
@@ -48,7 +49,8 @@ class Summary:
     def as_json(self) -> dict[str, Any]:
         """The summary as plain values."""
         values = asdict(self)
-        values["held_back"] = {market: reason for market, reason in self.held_back}
+        values["held_back"] = dict(self.held_back)
+        values["waived"] = dict(self.waived)
         values["exit_code"] = self.exit_code
         return values
 
@@ -60,6 +62,7 @@ class Summary:
             told = [f"published snapshot {self.snapshot}: {len(self.published)} markets, {self.rows:,} rows built"]
             told.append(f"  published: {', '.join(self.published) or 'none'}")
         told += [f"  held back: {market}: {reason}" for market, reason in self.held_back]
+        told += [f"  published all the same: {market}: {reason}" for market, reason in self.waived]
         if self.late:
             told.append(f"  late: {', '.join(self.late)} (ropewalk findings --kind file_late)")
         if self.unclaimed:
@@ -93,10 +96,18 @@ def summarise(
         current=manifest.name,
         nothing_new=not published_now,
         published=tuple(code for code, verdict in manifest.markets.items() if verdict.state == "published"),
-        held_back=tuple((c, v.reason) for c, v in manifest.markets.items() if v.state != "published"),
+        held_back=tuple((c, _since(v)) for c, v in manifest.markets.items() if v.state != "published"),
+        waived=tuple((c, v.reason) for c, v in manifest.markets.items() if v.state == "published" and v.reason),
         findings=tuple(FindingLine(**row) for row in (worst or [])[:_TOLD]),
         finding_counts=counts,
         rows=sum(int(result["rows"]) for result in results),
         unclaimed=int(manifest.summary.get("unclaimed", 0)),
         late=tuple(manifest.summary.get("late", ())),
     )
+
+
+def _since(verdict: Verdict) -> str:
+    """Why a market is held back, and since when its prices stand still."""
+    if verdict.last_good_snapshot is None:
+        return f"{verdict.reason}; it was never published"
+    return f"{verdict.reason}; served as of {verdict.last_good_snapshot}, to {verdict.facts.get('last_session')}"

@@ -1,30 +1,31 @@
 """Published price -> arithmetic, rolls, repair, raw line.
 
 Belongs here: telling where one price comes from, from what is published and the archive alone. Does not
-belong here: computing a price anew (`deep.py`).
+belong here: computing a price anew (`deep.py`), finding raw rows and declared keys again (`traced_rows.py`),
+the words (`trace_text.py`).
 """
 
 import datetime
 import difflib
-import re
+import math
 from dataclasses import dataclass, field
-from pathlib import Path
+from functools import cached_property
 from typing import Any
 
 import pyarrow as pa
 import pyarrow.compute as pc
 import pyarrow.parquet as pq
 
-from catalog.archive import read_archived
+from catalog.declarations import Desk
+from catalog.kept_desk import desk_of
 from catalog.places import Places, table_path
-from catalog.store import Manifest, current_snapshot, read_manifest
+from catalog.store import find_snapshot, origin_of, read_manifest
+from catalog.traced_rows import RawRows, RawVersion, Rule, repair_rule, rules_behind
 from contracts.errors import StoreUnsound, UsageError
 from contracts.findings import Kind
-from contracts.unpack import unpack
 
 # Findings that name another row for the same contract and session.
 _OTHER_ROWS = frozenset({Kind.RESTATED, Kind.CONFLICTING_ROWS})
-_LINE_END = re.compile(rb"\r\n|\n|\r")
 
 
 @dataclass(frozen=True)
@@ -32,7 +33,9 @@ class Leg:
     """One held contract on the session: its weight, its clean settle, and the raw row it comes from.
 
     `session` is the session of the settle, earlier than the one asked for where it is carried; `rejected` then
-    holds the rows of its file that could not be read since.
+    holds the rows of its file that could not be read since. `versions` are all texts the raw row ever had;
+    `repair` is the key that declares a person's repair of it, `scale` what its prices were declared to be multiplied
+    by to stand on the market's present scale.
     """
 
     contract: str
@@ -47,6 +50,9 @@ class Leg:
     text: str | None
     findings: tuple[str, ...]
     rejected: tuple[str, ...] = ()
+    versions: tuple[RawVersion, ...] = ()
+    repair: Rule | None = None
+    scale: float = 1.0
 
 
 @dataclass(frozen=True)
@@ -70,7 +76,7 @@ class LaterRoll:
 
 @dataclass(frozen=True)
 class Trace:
-    """Where one published price comes from."""
+    """Where one published price comes from. `rules` are the keys of the desk that set how it is made."""
 
     market: str
     plan: str
@@ -83,94 +89,26 @@ class Trace:
     legs: tuple[Leg, ...]
     later: tuple[LaterRoll, ...]
     decided_here: tuple[LaterRoll, ...] = field(default=())
+    rules: tuple[Rule, ...] = ()
 
     def as_json(self) -> dict[str, Any]:
         """The trace as plain values."""
+        legs = [
+            {
+                **_plain(vars(leg)),
+                "versions": [vars(version) for version in leg.versions],
+                "repair": vars(leg.repair) if leg.repair is not None else None,
+            }
+            for leg in self.legs
+        ]
         return {
             "market": self.market, "plan": self.plan, "nearby": self.nearby, "session": self.session.isoformat(),
             "snapshot": self.snapshot, "desk": self.desk, "code": self.code, "row": _plain(self.row),
-            "legs": [_plain(vars(leg)) for leg in self.legs],
+            "legs": legs,
             "later_rolls": [_plain(vars(roll)) for roll in self.later],
             "rolled_here": [_plain(vars(roll)) for roll in self.decided_here],
+            "rules": [vars(rule) for rule in self.rules],
         }  # fmt: skip
-
-    def lines(self) -> list[str]:
-        """The trace as text: the sum first, then what made each part of it."""
-        row = self.row
-        told = [f"{self.market}, {self.session}, plan {self.plan}, nearby {self.nearby}: {row['status']}"]
-        told += _settle_lines(row, self.legs)
-        if row["settle"] is not None:
-            told += _sum_lines(row, self.later)
-        for roll in self.decided_here:
-            told += ["", f"rolled on this session: {roll.outgoing} -> {roll.incoming}", *_roll_lines(roll)]
-        if self.later:
-            told += ["", f"{len(self.later)} later {'roll' if len(self.later) == 1 else 'rolls'}, the next first:"]
-            told += [
-                f"  {roll.effective_on}  {roll.outgoing} -> {roll.incoming}  measured {roll.measured_on}: "
-                f"{_say(roll.incoming_settle)} - {_say(roll.outgoing_settle)}{_weights(roll)} = {_say(roll.gap)}  "
-                f"ratio {_say(roll.ratio)}  ({roll.trigger}, decided {roll.decided_on})"
-                for roll in self.later
-            ]
-        for leg in self.legs:
-            told += ["", *_leg_lines(leg)]
-        return [*told, "", f"snapshot {self.snapshot}, desk {self.desk[:12]}, code {self.code[:12]}"]
-
-
-def _say(value: float | None) -> str:
-    """A number as short as it is exact to ten decimals."""
-    if value is None:
-        return "none"
-    text = f"{value:.10f}".rstrip("0").rstrip(".")
-    return "0" if text == "-0" else text
-
-
-def _settle_lines(row: dict[str, Any], legs: tuple[Leg, ...]) -> list[str]:
-    if row["settle"] is None:
-        return ["  settle          none: no price of the held contract for more than three sessions"]
-    if len(legs) == 1:
-        return [f"  settle          {_say(row['settle'])}  ({legs[0].contract})"]
-    parts = " + ".join(f"{_say(leg.weight)} x {_say(leg.settle)} ({leg.contract})" for leg in legs)
-    return [f"  settle          {parts} = {_say(row['settle'])}"]
-
-
-def _sum_lines(row: dict[str, Any], later: tuple[LaterRoll, ...]) -> list[str]:
-    settle, shift, scale = row["settle"], row["shift"], row["scale"]
-    told = []
-    if shift is None:
-        told.append("  back_adjusted   none: a later roll could not be measured")
-    else:
-        gaps = f"  (sum of {len(later)} gaps)" if later else "  (no later roll)"
-        told.append(f"  shift           {_say(shift)}{gaps}")
-        told.append(f"  back_adjusted   {_say(settle)} + {_say(shift)} = {_say(row['back_adjusted'])}")
-    if scale is None:
-        told.append("  ratio_adjusted  none: a later roll has no ratio")
-    else:
-        told.append(f"  ratio_adjusted  {_say(settle)} x {_say(scale)} = {_say(row['ratio_adjusted'])}")
-    return told
-
-
-def _weights(roll: LaterRoll) -> str:
-    share = roll.weight_after - roll.weight_before
-    return "" if share == 1.0 else f", x {_say(share)}"
-
-
-def _roll_lines(roll: LaterRoll) -> list[str]:
-    return [
-        f"  decided {roll.decided_on} by {roll.trigger}, measured {roll.measured_on}, effective {roll.effective_on}",
-        f"  gap {_say(roll.incoming_settle)} - {_say(roll.outgoing_settle)}{_weights(roll)} = {_say(roll.gap)}, "
-        f"ratio {_say(roll.ratio)}",
-    ]
-
-
-def _leg_lines(leg: Leg) -> list[str]:
-    if leg.session is None:
-        return [f"{leg.contract}: no bar"]
-    told = [f"{leg.contract} on {leg.session}: reported {_say(leg.reported)}, used {_say(leg.settle)} ({leg.status})"]
-    told += [f"  {message}" for message in leg.findings]
-    if leg.path is not None:
-        told += [f"  {leg.path}:{leg.line}", f"  SHA-256 {leg.file}", f"  {leg.text}"]
-    told += [f"  rejected since: {rejected}" for rejected in leg.rejected]
-    return told
 
 
 def _plain(values: dict[str, Any]) -> dict[str, Any]:
@@ -183,53 +121,157 @@ def trace_price(
 ) -> Trace:  # fmt: skip
     """Tell where the price of a market on a session comes from.
 
-    Without a plan the first that the market declares is taken. Raises UsageError for a market, plan,
-    nearby, session or snapshot that is not there, naming what is.
+    Without a plan the first that the market declares is taken; `snapshot` is a name or number. Raises
+    UsageError for a market, plan, nearby, session or snapshot that is not there, naming what is;
+    StoreUnsound where the archive does not hold what the snapshot names.
     """
-    manifest = _open(places, snapshot)
-    folder = places.snapshot(manifest.name)
-    if table_path("series", market) not in manifest.files:
-        raise UsageError(
-            f"no market {market!r} in snapshot {manifest.name}; {_nearest(market, list(manifest.markets))}"
+    return Tracer(places, market, snapshot).trace(session, plan, nearby)
+
+
+class Tracer:
+    """Traces prices of one market of one snapshot; what it has read it keeps."""
+
+    def __init__(self, places: Places, market: str, snapshot: str | None = None) -> None:
+        self.places, self.market = places, market
+        self.manifest = read_manifest(places, find_snapshot(places, snapshot) if snapshot is not None else None)
+        if table_path("series", market) not in self.manifest.files:
+            known = list(self.manifest.markets)
+            raise UsageError(f"no market {market!r} in snapshot {self.manifest.name}; {_nearest(market, known)}")
+
+    def trace(self, session: datetime.date, plan: str | None = None, nearby: int = 1) -> Trace:
+        """Tell where one price comes from; raises UsageError for a plan, nearby or session that is not there."""
+        plans = sorted(set(self._series["plan"].unique().to_pylist()))
+        name = plan if plan is not None else self.manifest.markets[self.market].facts.get("first_plan", plans[0])
+        if name not in plans:
+            raise UsageError(f"{self.market} has no plan {name!r}; {_nearest(name, plans)}")
+        ours = self._series.filter((pc.field("plan") == name) & (pc.field("nearby") == nearby))
+        if not ours.num_rows:
+            known = sorted(set(self._series.filter(pc.field("plan") == name)["nearby"].to_pylist()))
+            raise UsageError(f"{self.market}, plan {name}, has no nearby {nearby}; it has {known}")
+        row = _row_of(ours, session, self.market)
+        rolls = self._rolls.filter((pc.field("plan") == name) & (pc.field("nearby") == nearby))
+        ledger = [_later_roll(entry) for entry in rolls.to_pylist()]
+        weights = [(row["contract"], 1.0 - row["incoming_weight"])]
+        if row["incoming"] is not None:
+            weights.append((row["incoming"], row["incoming_weight"]))
+        legs = tuple(self._leg(contract, weight, session) for contract, weight in weights)
+        return Trace(
+            self.market, name, nearby, session, self.manifest.name, self.manifest.desk, self.manifest.code, row, legs,
+            tuple(roll for roll in ledger if roll.effective_on > session),
+            tuple(roll for roll in ledger if roll.effective_on == session),
+            self._rules(name, session, legs),
+        )  # fmt: skip
+
+    def _table(self, name: str) -> pa.Table:
+        return pq.read_table(self.places.snapshot(self.manifest.name) / table_path(name, self.market))
+
+    @cached_property
+    def _series(self) -> pa.Table:
+        return self._table("series")
+
+    @cached_property
+    def _rolls(self) -> pa.Table:
+        return self._table("rolls")
+
+    @cached_property
+    def _bars(self) -> dict[str, list[dict[str, Any]]]:
+        """Bars by contract, in order of session."""
+        bars: dict[str, list[dict[str, Any]]] = {}
+        for row in self._table("bars").to_pylist():
+            bars.setdefault(row["contract"], []).append(row)
+        return bars
+
+    @cached_property
+    def _findings(self) -> dict[str | None, list[dict[str, Any]]]:
+        findings: dict[str | None, list[dict[str, Any]]] = {}
+        for row in self._table("findings").to_pylist():
+            findings.setdefault(row["contract"], []).append(row)
+        return findings
+
+    @cached_property
+    def _rejects(self) -> list[dict[str, Any]]:
+        rows: list[dict[str, Any]] = self._table("rejects").to_pylist()
+        return rows
+
+    @cached_property
+    def _files(self) -> pa.Table:
+        """Every version of every file that may hold rows of the market; those of several are told by one of them."""
+        folder = self.places.snapshot(self.manifest.name)
+        tables = [pq.read_table(folder / path) for path in self.manifest.files if path.startswith("files/")]
+        files = pa.concat_tables(tables)
+        return files.filter(pc.field("market").is_null() | (pc.field("market") == self.market))
+
+    @cached_property
+    def _desk(self) -> Desk | None:
+        """The desk that made the market's tables; None for snapshots from before desks were kept."""
+        made = origin_of(self.places, self.manifest, self.market)
+        return desk_of(self.places, made) if made.desk_files else None
+
+    @cached_property
+    def _raw(self) -> RawRows | None:
+        return RawRows(self.places, self._desk, self.market, self._files) if self._desk is not None else None
+
+    def _rules(self, plan: str, session: datetime.date, legs: tuple[Leg, ...]) -> tuple[Rule, ...]:
+        if self._desk is None:
+            return ()
+        used = {leg.file for leg in legs}
+        layouts = {row["layout"] for row in self._files.to_pylist() if row["file"] in used and row["layout"]}
+        return rules_behind(self._desk, self.market, plan, layouts, session)
+
+    def _leg(self, contract: str, weight: float, session: datetime.date) -> Leg:
+        rows = [
+            row
+            for row in self._bars.get(contract, ())
+            if row["session"] <= session and row["status"] != "not a session"
+        ]
+        priced = [row for row in rows if row["clean_settle"] is not None]
+        on_day = [row for row in rows if row["session"] == session]
+        # What arrived on the day itself comes first, even where it was masked and an earlier settle is carried.
+        row = priced[-1] if priced else (on_day[-1] if on_day else None)
+        if row is None:
+            return Leg(contract, weight, None, None, None, "missing", None, None, None, None, ())
+        days = {row["session"], session}
+        about = [
+            entry["message"]
+            for entry in self._findings.get(contract, ())
+            if entry["session"] in days and (entry["field"] in ("settle", None) or entry["kind"] in _OTHER_ROWS)
+        ]
+        path = text = None
+        versions: tuple[RawVersion, ...] = ()
+        if self._raw is not None:
+            found = self._raw.text_at(row["file"], contract, row["session"], row["line"])
+            if found is None:
+                place = f"{contract} {row['session']}"
+                raise StoreUnsound(
+                    f"{place}: line {row['line']} of {row['file']} does not hold it; run ropewalk verify"
+                )
+            path, text = found
+            versions = self._raw.versions(contract, row["session"])
+        status = row["status"] if row["session"] == session else f"carried from {row['session']}"
+        return Leg(
+            contract, weight, row["clean_settle"], row["session"], row["settle"], status, path, row["file"],
+            row["line"], text, tuple(about), self._rejected_since(row, path) if row["session"] < session else (),
+            versions, repair_rule(self._desk, contract, row["session"]) if self._desk is not None else None,
+            self._scale_on(row["session"]),
+        )  # fmt: skip
+
+    def _scale_on(self, session: datetime.date) -> float:
+        if self._desk is None:
+            return 1.0
+        changes = self._desk.markets[self.market].rescaled
+        return math.prod(change.multiply for change in changes if session < change.before)
+
+    def _rejected_since(self, row: dict[str, Any], path: str | None) -> tuple[str, ...]:
+        """Rows of the bar's file that could not be read, between it and the file's next bar."""
+        lines = [bar["line"] for bars in self._bars.values() for bar in bars if bar["file"] == row["file"]]
+        following = min((line for line in lines if line > row["line"]), default=None)
+        return tuple(
+            f"{path}:{entry['line']}: {entry['reason']}: {entry['text'][:200]!r}"
+            for entry in self._rejects
+            if entry["file"] == row["file"]
+            and entry["line"] > row["line"]
+            and (following is None or entry["line"] < following)
         )
-    series = pq.read_table(folder / table_path("series", market))
-    plans = sorted(set(series["plan"].to_pylist()))
-    name = plan if plan is not None else manifest.markets[market].facts.get("first_plan", plans[0])
-    if name not in plans:
-        raise UsageError(f"{market} has no plan {name!r}; {_nearest(name, plans)}")
-    ours = series.filter((pc.field("plan") == name) & (pc.field("nearby") == nearby))
-    if not ours.num_rows:
-        known = sorted(set(series.filter(pc.field("plan") == name)["nearby"].to_pylist()))
-        raise UsageError(f"{market}, plan {name}, has no nearby {nearby}; it has {known}")
-    row = _row_of(ours, session, market)
-    rolls = pq.read_table(folder / table_path("rolls", market))
-    rolls = rolls.filter((pc.field("plan") == name) & (pc.field("nearby") == nearby))
-    ledger = [_later_roll(entry) for entry in rolls.to_pylist()]
-    bars = pq.read_table(folder / table_path("bars", market))
-    findings = pq.read_table(folder / table_path("findings", market))
-    paths = _paths(folder, manifest)
-    weights = [(row["contract"], 1.0 - row["incoming_weight"])]
-    if row["incoming"] is not None:
-        weights.append((row["incoming"], row["incoming_weight"]))
-    rejects = pq.read_table(folder / table_path("rejects", market))
-    legs = tuple(
-        _leg(places, bars, findings, rejects, paths, contract, weight, session) for contract, weight in weights
-    )
-    return Trace(
-        market, name, nearby, session, manifest.name, manifest.desk, manifest.code, row, legs,
-        tuple(roll for roll in ledger if roll.effective_on > session),
-        tuple(roll for roll in ledger if roll.effective_on == session),
-    )  # fmt: skip
-
-
-def _open(places: Places, snapshot: str | None) -> Manifest:
-    name = snapshot if snapshot is not None else current_snapshot(places)
-    if name is None:
-        raise UsageError(f"{places.store}: nothing is published here yet; run ropewalk build first")
-    if not places.snapshot(name).is_dir():
-        there = sorted(path.name for path in places.snapshots.iterdir() if not path.name.startswith("."))
-        raise UsageError(f"no snapshot {name!r}; {_nearest(name, there)}")
-    return read_manifest(places, name)
 
 
 def _nearest(seen: str, known: list[str]) -> str:
@@ -251,67 +293,3 @@ def _row_of(series: pa.Table, session: datetime.date, market: str) -> dict[str, 
 
 def _later_roll(entry: dict[str, Any]) -> LaterRoll:
     return LaterRoll(**{name: entry[name] for name in LaterRoll.__dataclass_fields__})
-
-
-def _paths(folder: Path, manifest: Manifest) -> dict[str, list[str]]:
-    """Paths under which each content arrived."""
-    paths: dict[str, list[str]] = {}
-    for path in manifest.files:
-        if path.startswith("files/"):
-            table = pq.read_table(folder / path, columns=["file", "path"])
-            for file, where in zip(table["file"].to_pylist(), table["path"].to_pylist(), strict=True):
-                paths.setdefault(file, []).append(where)
-    return paths
-
-
-def _leg(
-    places: Places, bars: pa.Table, findings: pa.Table, rejects: pa.Table, paths: dict[str, list[str]],
-    contract: str, weight: float, session: datetime.date,
-) -> Leg:  # fmt: skip
-    ours = bars.filter((pc.field("contract") == contract) & (pc.field("session") <= pa.scalar(session, pa.date32())))
-    rows = [row for row in ours.to_pylist() if row["status"] != "not a session"]
-    priced = [row for row in rows if row["clean_settle"] is not None]
-    on_day = [row for row in rows if row["session"] == session]
-    # What arrived on the day itself comes first, even where it was masked and an earlier settle is carried.
-    row = priced[-1] if priced else (on_day[-1] if on_day else None)
-    if row is None:
-        return Leg(contract, weight, None, None, None, "missing", None, None, None, None, ())
-    days = {row["session"], session}
-    about = [
-        entry["message"]
-        for entry in findings.filter(pc.field("contract") == contract).to_pylist()
-        if entry["session"] in days and (entry["field"] in ("settle", None) or entry["kind"] in _OTHER_ROWS)
-    ]
-    path = paths.get(row["file"], [None])[0]
-    text = None if path is None else read_raw_line(places, path, row["file"], row["line"])
-    status = row["status"] if row["session"] == session else f"carried from {row['session']}"
-    return Leg(
-        contract, weight, row["clean_settle"], row["session"], row["settle"], status, path, row["file"], row["line"],
-        text, tuple(about), _rejected_since(bars, rejects, row, path) if row["session"] < session else (),
-    )  # fmt: skip
-
-
-def _rejected_since(bars: pa.Table, rejects: pa.Table, row: dict[str, Any], path: str | None) -> tuple[str, ...]:
-    """Rows of the bar's file that could not be read, between it and the file's next bar."""
-    lines = [line for line in bars.filter(pc.field("file") == row["file"])["line"].to_pylist() if line > row["line"]]
-    following = min(lines, default=None)
-    return tuple(
-        f"{path}:{entry['line']}: {entry['reason']}: {entry['text'][:200]!r}"
-        for entry in rejects.filter(pc.field("file") == row["file"]).to_pylist()
-        if entry["line"] > row["line"] and (following is None or entry["line"] < following)
-    )
-
-
-def read_raw_line(places: Places, path: str, file: str, line: int) -> str:
-    """The physical line of a raw file, as it stands in the archive; raises StoreUnsound where it is not there."""
-    text = unpack(read_archived(places, file), path)
-    if text[:2] in (b"\xff\xfe", b"\xfe\xff"):
-        text = text.decode("utf-16").encode("utf-8")
-    lines = _LINE_END.split(text)
-    if not 1 <= line <= len(lines):
-        raise StoreUnsound(f"{path} ({file}): line {line} is not there, the file has {len(lines)}")
-    raw = lines[line - 1]
-    try:
-        return raw.decode("utf-8-sig" if line == 1 else "utf-8")
-    except UnicodeDecodeError:
-        return raw.decode("cp1252", errors="replace")

@@ -11,10 +11,18 @@ from functools import partial
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from catalog.archive import read_archived, read_register
-from catalog.places import Places, write_lock
+from catalog.archive import read_archived, read_register, register_digest
+from catalog.places import Places, hash_file, write_lock
 from catalog.query import open_catalog, run_query
-from catalog.store import Manifest, check_files, current_snapshot, read_manifest, rebuild_catalog
+from catalog.store import (
+    MANIFEST,
+    Manifest,
+    check_files,
+    current_snapshot,
+    read_catalog_hashes,
+    read_manifest,
+    rebuild_catalog,
+)
 from contracts.errors import StoreUnsound, UsageError
 from contracts.tables import TABLES
 
@@ -52,11 +60,14 @@ def verify_store(places: Places, snapshot: str | None = None) -> Report:
         return Report((str(error),), 0, 0)
     folder = places.snapshot(manifest.name)
     problems = [f"{manifest.name}/{problem}" for problem in check_files(folder, manifest)]
+    problems += _gather(partial(_check_records, places, manifest))
     named = _raw_files_named(folder, manifest)
     problems += _gather(partial(_check_archive, places, named))
+    for sha in sorted(set(manifest.desk_files.values())):
+        problems += _gather(partial(_read_only, places, sha))
     if manifest.name == current:
         problems += _gather(partial(_check_catalog, places, manifest))
-    files_checked = len(manifest.files) + len({file for _, file in named})
+    files_checked = len(manifest.files) + len({*manifest.desk_files.values(), *(file for _, file in named)})
     try:
         connection = open_catalog(places, manifest.name)
     except StoreUnsound as error:
@@ -110,7 +121,23 @@ def _check_catalog(places: Places, manifest: Manifest) -> list[str]:
         expected = (manifest.name, manifest.sequence, manifest.parent, manifest.desk, manifest.code)
         if seen != [expected]:
             return [f"{places.catalog}: seen the snapshot {seen}; expected {expected}; run verify --repoint"]
-        return _count_rows(connection, manifest)
+        problems = _count_rows(connection, manifest)
+    # A store from before catalogs were recorded has no such file.
+    is_recorded = places.catalog_hashes.exists()
+    if is_recorded and hash_file(places.catalog)[1] != read_catalog_hashes(places).get(manifest.name):
+        problems.append(f"{places.catalog}: is not the file that was built; run verify --repoint")
+    return problems
+
+
+def _check_records(places: Places, manifest: Manifest) -> list[str]:
+    """Whether manifest and register are, to the byte, what was written."""
+    path = places.snapshot(manifest.name) / MANIFEST
+    problems = []
+    if path.read_bytes() != manifest.as_bytes():
+        problems.append(f"{path}: says what was published in other bytes than were written")
+    if manifest.arrivals and register_digest(places, manifest.intake) != manifest.arrivals:
+        problems.append(f"{places.register}: its lines up to intake {manifest.intake} are not those of the snapshot")
+    return problems
 
 
 def _count_rows(connection: "duckdb.DuckDBPyConnection", manifest: Manifest) -> list[str]:

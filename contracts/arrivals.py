@@ -4,7 +4,7 @@ Belongs here: which of several rows stands, and what became of the others. Does 
 (`intake.py`), what is said about it in the quality log (`checks/arrived.py`).
 """
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from enum import StrEnum
 
 import numpy as np
@@ -41,6 +41,13 @@ class Arrived:
     bars: Bars
     superseded: tuple[Superseded, ...]
     lost: dict[int, int]
+
+    def until(self, day: int) -> "Arrived":
+        """The same without bars after a day, given as its number."""
+        bars = self.bars
+        kept = bars.session <= day
+        parts = (bars.contract, bars.session, bars.values, bars.source, bars.line)
+        return replace(self, bars=Bars(bars.contracts, *(part[kept] for part in parts)))
 
 
 def settle_arrivals(rows: ParsedRows, files: list[FileRows], is_old: list[bool]) -> Arrived:

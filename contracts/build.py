@@ -14,14 +14,14 @@ import pyarrow as pa
 from contracts.arrivals import Arrived, settle_arrivals
 from contracts.checks.arrived import account_for_rows, check_days, check_files, check_meetings
 from contracts.checks.gaps import check_gaps
-from contracts.checks.rolled import check_rolls
+from contracts.checks.rolled import check_back_adjusted, check_rolls
 from contracts.checks.rows import check_rows
 from contracts.checks.shocks import check_shocks
 from contracts.checks.stale import find_stale_runs
 from contracts.deliveries import delivery_of
 from contracts.errors import IntakeError
 from contracts.findings import Action, Finding, Kind, Severity, Waiver, findings_table, waive
-from contracts.intake import FileRows, RawFile, parse_rows, split_file
+from contracts.intake import FileRows, ParsedRows, RawFile, parse_rows, split_file
 from contracts.markets import Market
 from contracts.panel import Panel, lay_panel
 from contracts.quality import Gates, Quality
@@ -53,7 +53,7 @@ class Inputs:
     """All that decides a market's tables: the same inputs give the same bytes.
 
     `files` are in any order; `is_old` marks those with a newer version under the same path; `failures` are
-    of files that could not even be unpacked.
+    of files that could not even be unpacked. With `until`, bars of later sessions are left out.
     """
 
     market: Market
@@ -65,6 +65,7 @@ class Inputs:
     quality: Quality = field(default_factory=Quality)
     gates: Gates = field(default_factory=Gates)
     look_backs: tuple[int, ...] = (5, 10, 21, 42)
+    until: datetime.date | None = None
 
 
 @dataclass(frozen=True, eq=False)
@@ -84,6 +85,44 @@ class Laid:
     series: Series | None
 
 
+@dataclass(frozen=True, eq=False)
+class Prepared:
+    """A market's raw text carried to a clean panel: what every roll plan starts from.
+
+    `files`, `is_old` and `failures` say what could be read, `parsed` and `arrived` which rows came and which
+    stand, `data_date` is the last session.
+    """
+
+    files: list[FileRows]
+    is_old: list[bool]
+    failures: list[Failure]
+    parsed: ParsedRows
+    arrived: Arrived
+    panel: Panel
+    clean: Clean
+    data_date: datetime.date
+
+
+def prepare_market(inputs: Inputs) -> Prepared:
+    """Read, settle and clean a market's raw text, without plans and without tables.
+
+    Raises ValueError where no usable bar arrived, CalendarError where a day rule fails.
+    """
+    market = inputs.market
+    files, is_old, failures = _read(inputs)
+    parsed = parse_rows(files, market)
+    arrived = settle_arrivals(parsed, files, is_old)
+    account_for_rows(files, is_old, parsed, arrived)
+    if inputs.until is not None:
+        arrived = arrived.until(day_number(inputs.until))
+    if not len(arrived.bars.line):
+        first = f"; {failures[0][2]}" if failures else ""
+        raise ValueError(f"{market.code}: no row of its {len(inputs.files)} files can be read{first}")
+    panel = lay_panel(market, arrived.bars)
+    clean = clean_panel(panel, arrived.bars, inputs.repairs, inputs.quality)
+    return Prepared(files, is_old, failures, parsed, arrived, panel, clean, day_of(panel.sessions[-1]))
+
+
 def build_market(inputs: Inputs) -> Built:
     """Carry one market from raw text to tables.
 
@@ -91,17 +130,10 @@ def build_market(inputs: Inputs) -> Built:
     the result does not hold together.
     """
     market = inputs.market
-    files, is_old, failures = _read(inputs)
-    parsed = parse_rows(files, market)
-    arrived = settle_arrivals(parsed, files, is_old)
-    account_for_rows(files, is_old, parsed, arrived)
-    if not len(arrived.bars.line):
-        first = f"; {failures[0][2]}" if failures else ""
-        raise ValueError(f"{market.code}: no row of its {len(inputs.files)} files can be read{first}")
-    panel = lay_panel(market, arrived.bars)
-    data_date = day_of(panel.sessions[-1])
-    clean = clean_panel(panel, arrived.bars, inputs.repairs, inputs.quality)
-    findings = _tell_failures(market, failures, data_date)
+    made = prepare_market(inputs)
+    files, is_old, parsed, arrived = made.files, made.is_old, made.parsed, made.arrived
+    panel, clean, data_date = made.panel, made.clean, made.data_date
+    findings = _tell_failures(market, made.failures, data_date)
     findings += check_files(market.code, files, is_old)
     findings += check_meetings(market.code, parsed, arrived, files, inputs.gates)
     findings += check_days(panel, _left_out(panel, arrived))
@@ -114,6 +146,8 @@ def build_market(inputs: Inputs) -> Built:
     laid = lay_plans(traded, clean)
     for one in laid:
         findings += check_rolls(panel, one.name, market.plans[one.name], one.held)
+        if one.series is not None:
+            findings += check_back_adjusted(panel, one.name, one.held, one.series.settle, one.series.back_adjusted)
     findings = _weigh(findings, panel, clean, laid, inputs.look_backs)
     findings = waive(findings, inputs.waivers, market.code, data_date)
     counts = _counts(findings)

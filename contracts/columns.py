@@ -11,6 +11,7 @@ import pyarrow as pa
 PRICE = "market currency per unit"
 RATIO = "1"
 COUNT = "contracts"
+MONEY = "currency per contract"
 
 
 @dataclass(frozen=True)
@@ -31,10 +32,10 @@ _ALL = (
     Column("market", _TEXT, "", "code of the market"),
     Column("contract", _TEXT, "", "contract, market code with ISO 8601 delivery year and month"),
     Column("session", _DAY, "day", "trading date"),
-    Column("open", _NUMBER, PRICE, "opening price: in bars as reported, in series the held contract's own clean one"),
-    Column("high", _NUMBER, PRICE, "highest price: in bars as reported, in series the held contract's own clean one"),
-    Column("low", _NUMBER, PRICE, "lowest price: in bars as reported, in series the held contract's own clean one"),
-    Column("settle", _NUMBER, PRICE, "settlement price: in bars as reported, in series the held contract's own clean one"),
+    Column("open", _NUMBER, PRICE, "opening price: in bars as reported, in series the held contract's own clean one; right for differences and returns within one holding only"),
+    Column("high", _NUMBER, PRICE, "highest price: in bars as reported, in series the held contract's own clean one; right for differences and returns within one holding only"),
+    Column("low", _NUMBER, PRICE, "lowest price: in bars as reported, in series the held contract's own clean one; right for differences and returns within one holding only"),
+    Column("settle", _NUMBER, PRICE, "settlement price: in bars as reported, in series the held contract's own clean one; right for levels, and for differences and returns within one holding only, never over a roll"),
     Column("volume", _BIG, COUNT, "contracts traded on the session, of the row's contract"),
     Column("open_interest", _BIG, COUNT, "open interest printed in the session's row, of the row's contract"),
     Column("clean_settle", _NUMBER, PRICE, "settlement price after repairs, on the market's present scale; null where masked"),
@@ -45,13 +46,13 @@ _ALL = (
     Column("nearby", _INT, "", "1 the contract the plan holds, 2 the one after it, ..."),
     Column("incoming", _TEXT, "", "contract that is rolled into; in series only while a roll of several steps is under way"),
     Column("incoming_weight", _NUMBER, RATIO, "share held in the incoming contract through the session"),
-    Column("shift", _NUMBER, PRICE, "sum of the gaps of all later rolls"),
-    Column("scale", _NUMBER, RATIO, "product of the ratios of all later rolls; null before a roll whose ratio does not exist"),
-    Column("back_adjusted", _NUMBER, PRICE, "settle + shift: right for differences, wrong for percentages"),
-    Column("ratio_adjusted", _NUMBER, PRICE, "settle x scale: right for returns, wrong for differences in points"),
-    Column("change", _NUMBER, PRICE, "change of the held position since the last session that has a price"),
-    Column("simple_return", _NUMBER, RATIO, "change of the held position over its value on the last session that has a price; null where either is not above zero"),
-    Column("growth", _NUMBER, "index, 100 at its start", "compounded simple_return"),
+    Column("shift", _NUMBER, PRICE, "sum of the gaps of all later rolls: makes differences true when added to a price, and percentages wrong"),
+    Column("scale", _NUMBER, RATIO, "product of the ratios of all later rolls: makes returns true when a price is multiplied by it, and differences wrong; null before a roll whose ratio does not exist"),
+    Column("back_adjusted", _NUMBER, PRICE, "settle + shift: right for differences over any span; wrong for returns and percentages, which mean nothing where it is near, at or below zero"),
+    Column("ratio_adjusted", _NUMBER, PRICE, "settle x scale: right for returns over any span, wrong for differences in points; null where scale is"),
+    Column("change", _NUMBER, PRICE, "change of the held position since the last session that has a price: right for differences, its sum over a span is back_adjusted's difference; not for returns"),
+    Column("simple_return", _NUMBER, RATIO, "change of the held position over its value on the last session that has a price: right for returns, compounded they are ratio_adjusted's; not for differences; null where either value is not above zero"),
+    Column("growth", _NUMBER, "index, 100 at its start", "compounded simple_return: right for returns over any span, not for differences in points; null up to a value at or below zero"),
     Column("rolled", _YES, "", "a roll, or a step of one, takes effect on this session"),
     Column("findings", _INT, "findings", "number of findings on the held contracts on this session"),
     Column("step", _INT, "", "step of the roll, from 1"),
@@ -124,6 +125,22 @@ _ALL = (
     Column("markets", _INT, "markets", "markets declared"),
     Column("published", _INT, "markets", "markets published"),
     Column("held_back", _INT, "markets", "markets held back"),
+    Column("far_nearby", _INT, "", "the later of the two nearbys of a calendar spread"),
+    Column("near_contract", _TEXT, "", "in constant_maturity the contract whose last trading session is the last one on or before the maturity, of those with a clean settle on the session; elsewhere what the nearer nearby holds, the outgoing one during a roll of several steps"),
+    Column("far_contract", _TEXT, "", "in constant_maturity the contract whose last trading session is the first one on or after the maturity, of those with a clean settle on the session; elsewhere what the farther nearby holds, the outgoing one during a roll of several steps"),
+    Column("near_settle", _NUMBER, PRICE, "in constant_maturity the clean settle of near_contract; elsewhere the nearer nearby's settle in series, a mix during a roll of several steps"),
+    Column("far_settle", _NUMBER, PRICE, "in constant_maturity the clean settle of far_contract; elsewhere the farther nearby's settle in series, a mix during a roll of several steps"),
+    Column("days_between", _NUMBER, "calendar days", "last trading session of what nearby 2 holds less that of what nearby 1 holds, each weighted by the shares held"),
+    Column("roll_yield", _NUMBER, RATIO, "near_settle / far_settle - 1, above zero where the nearer contract is dearer, not annualised; null where a settle or days_between is not above zero"),
+    Column("annualised_slope", _NUMBER, "1 per year of 365 calendar days", "ln(far_settle / near_settle) x 365 / days_between, above zero where the farther contract is dearer; null where a settle or days_between is not above zero"),
+    Column("worse_status", _TEXT, "", "the worse of the two settles' status: missing, carried, repaired, reported; missing too where nearby 2 is not held"),
+    Column("days", _INT, "calendar days", "from the session to the maturity: 30, 60 or 90"),
+    Column("far_weight", _NUMBER, RATIO, "share of far_settle in price: calendar days from near_contract's last trading session to the maturity over those to far_contract's; 0 where they are the same contract"),
+    Column("price", _NUMBER, PRICE, "(1 - far_weight) x near_settle + far_weight x far_settle; right for levels, its differences and returns are no position's; null where there is no contract on both sides"),
+    Column("spread", _NUMBER, PRICE, "near_settle - far_settle, of the same session; null where both nearbys hold the same; right for levels, and for differences within one holding only"),
+    Column("change_value", _NUMBER, MONEY, "change x point_value: what one contract, held long, gained"),
+    Column("back_adjusted_value", _NUMBER, MONEY, "back_adjusted x point_value: only its differences mean anything, the gain of one contract held long in between"),
+    Column("spread_value", _NUMBER, MONEY, "spread x point_value: worth of the spread of one contract against one"),
 )  # fmt: skip
 
 COLUMNS: dict[str, Column] = {column.name: column for column in _ALL}

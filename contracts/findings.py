@@ -77,6 +77,7 @@ class Kind(StrEnum):
     ROLL_PENDING = "roll_pending"  # decided, takes effect after the data's end
     FORCE_UNUSED = "force_unused"  # a person's decision found nothing to decide
     RATIO_UNDEFINED = "ratio_undefined"  # a leg at or below zero
+    PERCENT_OF_BACK_ADJUSTED_UNDEFINED = "percent_of_back_adjusted_undefined"  # at or below zero, the settle above
     # the declarations
     DECLARED_REPAIR = "declared_repair"  # a person's repair was made
     REPAIR_REFUSED = "repair_refused"  # the value it names does not stand

@@ -259,11 +259,11 @@ def read_market(text: str, file: str) -> tuple[Market | None, list[Mistake]]:
     """Read one market file; returns what could be read and every mistake it has."""
     market, data, mistakes = read_declaration(Market, text, file)
     if market is not None:
-        mistakes += _inconsistencies(market, text, file)
+        mistakes += inconsistencies(market, text, file)
     return market, mistakes + _rule_mistakes(data, text, file)
 
 
-def _inconsistencies(market: Market, text: str, file: str) -> list[Mistake]:
+def inconsistencies(market: Market, text: str, file: str) -> list[Mistake]:
     """What is wrong between keys that are each well formed."""
     found: list[Mistake] = []
 

@@ -129,11 +129,21 @@ def rescale(market: Market, bars: Bars) -> np.ndarray:
     return values
 
 
-def deadlines(panel: Panel, plan: Plan) -> np.ndarray:
-    """Session index from which each contract is no longer held by a plan, (N,)."""
-    ends = {
+def plan_ends(panel: Panel, plan: Plan) -> np.ndarray:
+    """Session index of the day that a plan's backstop counts back from, for each contract, (N,)."""
+    ends: np.ndarray = {
         Before.LAST_TRADE: panel.last_trade,
         Before.FIRST_NOTICE: panel.first_notice,
         Before.EARLIER: np.minimum(panel.last_trade, panel.first_notice),
     }[plan.before]
-    return ends - plan.backstop
+    return ends
+
+
+def foreseen(panel: Panel, index: np.ndarray | int, at: np.ndarray | int) -> np.ndarray:
+    """Indices of sessions as they were counted at the close of others; the two are broadcast.
+
+    A closed day that trades all the same moves every later session on by one, and nobody knows of it before it comes.
+    """
+    surprises = panel.disagreeing
+    between = np.searchsorted(surprises, index, side="right") - np.searchsorted(surprises, at, side="right")
+    return np.asarray(index - np.maximum(between, 0))

@@ -209,7 +209,9 @@ def _tell(panel: Panel, settle: np.ndarray, verdict: Verdict) -> Finding:
     elif is_known:
         action, done, severity = Action.REPAIRED, f"repaired to {verdict.expected:.10g}", Severity.REVIEW
     else:
-        action, done, severity = Action.MASKED, "masked, for the curve cannot say", Severity.REVIEW
+        why = "its bar traded down to it: see whether may_be_negative is right" if verdict.is_borne_out else ""
+        action, severity = Action.MASKED, Severity.REVIEW
+        done = f"masked, for {why or 'the curve cannot say'}"
     return Finding(
         verdict.kind, severity, f"{label}, {day}: settle {price:.10g} {says}; {done}", panel.market.code, label, day,
         "settle", price, verdict.expected if is_known else None,

@@ -12,7 +12,7 @@ import numpy as np
 
 from contracts.deliveries import delivery_of
 from contracts.markets import Incoming, Plan, Trigger
-from contracts.panel import Panel, deadlines
+from contracts.panel import Panel, foreseen, plan_ends
 from contracts.sessions import day_number, session_index
 
 NEVER = -1
@@ -87,14 +87,14 @@ class _Market:
     """What a plan may look at: eligible contracts, usable settles, volume and known open interest."""
 
     def __init__(self, panel: Panel, usable: np.ndarray, settle: np.ndarray, plan: Plan) -> None:
-        self.plan, self.usable, self.settle = plan, usable, settle
+        self.panel, self.plan, self.usable, self.settle = panel, plan, usable, settle
         self.length, count = panel.shape
         months = plan.months or panel.market.delivery_months
         has_bar = panel.bar >= 0
         self.first_bar = np.where(has_bar.any(axis=0), has_bar.argmax(axis=0), self.length)
         listed = np.array([delivery_of(name).month in months for name in panel.contracts], dtype=bool)
         self.eligible = np.flatnonzero(listed & (self.first_bar < self.length))
-        self.deadline = deadlines(panel, plan)
+        self.ends = plan_ends(panel, plan)
         self.last_trade = panel.last_trade
         self.volume = panel.field("volume")
         lag = panel.market.open_interest_lag
@@ -107,6 +107,16 @@ class _Market:
             if force.outgoing in panel.contracts
         }
 
+    def deadline(self, contracts: np.ndarray | int, sessions: np.ndarray) -> np.ndarray:
+        """Session index from which contracts are no longer held, as counted at the close of sessions (broadcast)."""
+        return foreseen(self.panel, self.ends[contracts], sessions) - self.plan.backstop
+
+    def decides_force(self, effective: int) -> int:
+        """The first session at whose close a forced roll's day is no more than the plan's delay off."""
+        before = np.arange(effective - self.plan.delay - len(self.panel.disagreeing), effective - self.plan.delay + 1)
+        is_near = before + self.plan.delay >= foreseen(self.panel, effective, before)
+        return int(before[is_near][0])
+
     def later(self, contract: int, session: int) -> np.ndarray:
         """Eligible contracts after one, known at the close of a session, in delivery order."""
         after = self.eligible[self.eligible > contract]
@@ -116,7 +126,7 @@ class _Market:
         """First session from `start`, and the contract, that rule 2 holds there; (NEVER, NEVER) for none."""
         able = self.eligible[self.eligible > after]
         sessions = np.arange(start, self.length)
-        open_to = self.usable[start:, able] & (self.deadline[able] > sessions[:, None])
+        open_to = self.usable[start:, able] & (self.deadline(able, sessions[:, None]) > sessions[:, None])
         rows = np.flatnonzero(open_to.any(axis=1))
         if not len(rows):
             return NEVER, NEVER
@@ -167,7 +177,7 @@ def decide(market: _Market, outgoing: int, start: int) -> Decision | None:
     plan = market.plan
     forced = market.forces.get(outgoing)
     if forced is not None:
-        decided = forced - plan.delay
+        decided = market.decides_force(forced)
         if decided >= start:
             if decided >= market.length:
                 return None
@@ -178,7 +188,7 @@ def decide(market: _Market, outgoing: int, start: int) -> Decision | None:
     sessions = np.arange(start, market.length)
     incoming_by_session = market.incoming_from(outgoing, sessions)
     fired = market.fires(outgoing, incoming_by_session, sessions)
-    is_due = sessions + plan.delay + plan.steps - 1 >= market.deadline[outgoing]
+    is_due = sessions + plan.delay + plan.steps - 1 >= market.deadline(outgoing, sessions)
     ready = np.flatnonzero((fired | is_due) & (incoming_by_session != NEVER))
     if not len(ready):
         return None

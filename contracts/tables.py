@@ -1,4 +1,4 @@
-"""The published tables: columns, key, order of rows.
+"""The published tables and the views derived from them: columns, key, order of rows.
 
 Belongs here: which columns make a table and how its rows are sorted. Does not belong here: what a column
 means (`columns.py`), where a table is kept (`catalog/places.py`).
@@ -117,6 +117,49 @@ RUNS = Table(
 MARKET_TABLES = (BARS, SERIES, ROLLS, FINDINGS, REJECTS, FILES, TERMS)
 STORE_TABLES = (COVERAGE, RUNS)
 TABLES = (*MARKET_TABLES, *STORE_TABLES)
+
+CURVE_SLOPE = Table(
+    "curve_slope",
+    "view: how the curve stands between nearby 1 and nearby 2, on every session of nearby 1",
+    ("market", "plan", "session"),
+    ("market", "plan", "session", "near_contract", "far_contract", "near_settle", "far_settle", "days_between",
+     "roll_yield", "annualised_slope", "status"),
+    renamed=(("status", "worse_status"),),
+)  # fmt: skip
+
+CONSTANT_MATURITY = Table(
+    "constant_maturity",
+    "view: price for a maturity always as far away, interpolated in calendar days between the two contracts around it",
+    ("market", "session", "days"),
+    ("market", "session", "days", "near_contract", "far_contract", "near_settle", "far_settle", "far_weight", "price"),
+)
+
+CALENDAR_SPREAD = Table(
+    "calendar_spread",
+    "view: settle of one nearby less that of a farther one, of every pair that a plan publishes",
+    ("market", "plan", "nearby", "far_nearby", "session"),
+    ("market", "plan", "nearby", "far_nearby", "session", "near_contract", "far_contract", "near_settle", "far_settle",
+     "spread", "status"),
+    renamed=(("status", "worse_status"),),
+)  # fmt: skip
+
+SERIES_IN_CURRENCY = Table(
+    "series_in_currency",
+    "view: series in currency per contract, where that is true",
+    ("market", "plan", "nearby", "session"),
+    ("market", "plan", "nearby", "session", "currency", "point_value", "change_value", "back_adjusted_value", "status"),
+)
+
+CALENDAR_SPREAD_IN_CURRENCY = Table(
+    "calendar_spread_in_currency",
+    "view: calendar_spread in currency per contract",
+    ("market", "plan", "nearby", "far_nearby", "session"),
+    ("market", "plan", "nearby", "far_nearby", "session", "currency", "point_value", "spread_value", "status"),
+    renamed=(("status", "worse_status"),),
+)
+
+# Made by the catalog of what is published and kept in no file; a later one may stand on an earlier one.
+DERIVED = (CURVE_SLOPE, CONSTANT_MATURITY, CALENDAR_SPREAD, SERIES_IN_CURRENCY, CALENDAR_SPREAD_IN_CURRENCY)
 
 
 def make_table(table: Table, columns: dict[str, object]) -> pa.Table:

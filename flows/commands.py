@@ -5,6 +5,7 @@ frame around a command (`shell.py`), any computation. Heavy modules are imported
 """
 
 import datetime
+import os
 import re
 from collections.abc import Sized
 from dataclasses import replace
@@ -13,11 +14,15 @@ from typing import TYPE_CHECKING, Any
 import click
 
 from contracts.errors import UsageError
+from flows.changes import changes
 from flows.exits import Exit
 from flows.propose import propose
+from flows.prune import prune
 from flows.render import complain, say, say_json, say_table
+from flows.rolls import rolls
 from flows.settings import Where
 from flows.shell import Asked, Ropewalk, command, show_version
+from flows.study import study
 
 if TYPE_CHECKING:
     from catalog.summary import Summary
@@ -25,10 +30,6 @@ if TYPE_CHECKING:
 # What a person reads of the quality log in one go; a machine gets all of it.
 _FINDINGS_SHOWN = 50
 _CONTRACT_COLUMNS = ("contract", "last_trade", "first_notice")
-_ROLL_COLUMNS = (
-    "plan", "nearby", "effective_on", "outgoing", "incoming", "weight_after", "outgoing_settle",
-    "incoming_settle", "gap", "ratio", "trigger", "decided_on", "measured_on", "impact_sessions",
-)  # fmt: skip
 _FINDING_COLUMNS = ("impact_sessions", "severity", "action", "waived_until", "message", "finding")
 
 
@@ -54,17 +55,43 @@ _rehash = click.option(
 )
 
 
+_waive_gate = click.option(
+    "--waive-gate",
+    nargs=2,
+    multiple=True,
+    metavar="MARKET REASON",
+    help="Publish MARKET tonight though its gate would hold it back; reason and person are recorded.",
+)
+
+
+def _with_waived(where: Where, waive_gate: tuple[tuple[str, str], ...]) -> Where:
+    if any(not why.strip() for _, why in waive_gate):
+        raise UsageError("--waive-gate: seen an empty reason; expected why the market may go out")
+    return replace(where, waived=tuple((market, why, _person()) for market, why in waive_gate))
+
+
+def _person() -> str:
+    import getpass
+
+    try:
+        return getpass.getuser()
+    except (OSError, KeyError):
+        # A container may run under a number that has no name.
+        return f"user {os.getuid()}"
+
+
 @command(main, "nightly", "ropewalk nightly --desk /srv/desk")
 @_jobs
 @_rehash
-def nightly(asked: Asked, jobs: int | None, rehash: bool) -> Exit:
+@_waive_gate
+def nightly(asked: Asked, jobs: int | None, rehash: bool, waive_gate: tuple[tuple[str, str], ...]) -> Exit:
     """Run one night under Prefect: take in, build, check, publish.
 
     Reports to the Prefect API that Prefect's settings name. Where none is named, an own server is started for
     the length of the run; its records stay in Prefect's home folder. Where the API cannot be reached, the
     same work is done unwatched.
     """
-    where = replace(_checked(asked), rehash=rehash)
+    where = _with_waived(replace(_checked(asked), rehash=rehash), waive_gate)
     from flows.nightly import run_watched
 
     told = run_watched(where, jobs)
@@ -81,13 +108,14 @@ def nightly(asked: Asked, jobs: int | None, rehash: bool) -> Exit:
 @command(main, "build", "ropewalk build --desk /srv/desk --jobs 4")
 @_jobs
 @_rehash
-def build(asked: Asked, jobs: int | None, rehash: bool) -> Exit:
+@_waive_gate
+def build(asked: Asked, jobs: int | None, rehash: bool, waive_gate: tuple[tuple[str, str], ...]) -> Exit:
     """Do the work of one night without a scheduler.
 
     Takes in, builds, checks, publishes. What carries the markets is declared in desk.toml: [run] workers =
     "threads", "processes" or "dask".
     """
-    where = replace(_checked(asked), rehash=rehash)
+    where = _with_waived(replace(_checked(asked), rehash=rehash), waive_gate)
     from flows.work import pool_builder, run_night
 
     return _tell_summary(run_night(where, "build", pool_builder(jobs)), asked.as_json)
@@ -180,7 +208,7 @@ def _read_years(text: str | None, has_market: bool) -> tuple[int, int]:
 @click.argument("session")
 @click.option("--plan", metavar="NAME", help="Roll plan.  [default: the first the market declares]")
 @click.option("--nearby", type=click.IntRange(min=1), default=1, show_default=True, metavar="N", help="Which nearby.")
-@click.option("--snapshot", metavar="NAME", help="Snapshot.  [default: the newest]")
+@click.option("--snapshot", metavar="NAME", help="Snapshot, by name or number.  [default: the newest]")
 def trace(asked: Asked, market: str, session: str, plan: str | None, nearby: int, snapshot: str | None) -> Exit:
     """Tell where one published price comes from.
 
@@ -189,12 +217,13 @@ def trace(asked: Asked, market: str, session: str, plan: str | None, nearby: int
     day = _read_day(session, "SESSION")
     from catalog.places import Places
     from catalog.trace import trace_price
+    from catalog.trace_text import trace_lines
 
     found = trace_price(Places(asked.where().store), market, day, plan, nearby, snapshot)
     if asked.as_json:
         say_json(found.as_json())
     else:
-        say(found.lines())
+        say(trace_lines(found))
     return Exit.DONE
 
 
@@ -252,28 +281,6 @@ def findings(
     return Exit.DONE
 
 
-@command(main, "rolls", "ropewalk rolls NWHT --plan by_open_interest")
-@click.argument("market")
-@click.option("--plan", metavar="NAME", help="Only this roll plan.")
-@click.option("--nearby", type=click.IntRange(min=1), metavar="N", help="Only this nearby.")
-def rolls(asked: Asked, market: str, plan: str | None, nearby: int | None) -> Exit:
-    """Print the roll ledger of a MARKET.
-
-    Every roll with its two prices and its gap, in the order of plan, nearby and day.
-    """
-    from catalog.listings import list_rolls
-    from catalog.places import Places
-
-    columns, rows = list_rolls(Places(asked.where().store), market, plan, nearby)
-    if asked.as_json:
-        say_json({"rolls": [dict(zip(columns, row, strict=True)) for row in rows]})
-    elif rows:
-        say_table(_ROLL_COLUMNS, _pick(columns, rows, _ROLL_COLUMNS))
-    else:
-        say(["no rolls"])
-    return Exit.DONE
-
-
 def _pick(columns: list[str], rows: list[tuple[Any, ...]], wanted: tuple[str, ...]) -> list[tuple[Any, ...]]:
     places = [columns.index(name) for name in wanted]
     return [tuple(row[at] for at in places) for row in rows]
@@ -282,7 +289,9 @@ def _pick(columns: list[str], rows: list[tuple[Any, ...]], wanted: tuple[str, ..
 @command(main, "verify", "ropewalk verify --deep")
 @click.option("--deep", is_flag=True, help="Also derive every published number again from archive, desk and code.")
 @click.option("--repoint", is_flag=True, help="First make the catalog again, for a store that was moved or copied.")
-@click.option("--snapshot", metavar="NAME", help="Snapshot.  [default: the newest]")
+@click.option(
+    "--snapshot", "--from", metavar="NAME", help="Snapshot, by name, number or given name.  [default: the newest]"
+)
 def verify(asked: Asked, deep: bool, repoint: bool, snapshot: str | None) -> Exit:
     """Check what is published, to the last byte.
 
@@ -290,18 +299,22 @@ def verify(asked: Asked, deep: bool, repoint: bool, snapshot: str | None) -> Exi
     """
     from catalog import verify as checks
     from catalog.places import Places
+    from catalog.store import find_snapshot
 
     where = asked.where()
     places = Places(where.store)
     if repoint:
         checks.repoint(places)
+    snapshot = None if snapshot is None else find_snapshot(places, snapshot)
     report = checks.verify_store(places, snapshot)
     problems = list(report.problems)
     if deep and report.snapshot is not None:
         from catalog.declarations import load_desk
         from catalog.deep import rederive
 
-        problems += rederive(places, load_desk(where.desk), report.snapshot)
+        # An older snapshot, or a store named alone, is held against the desk that made it.
+        is_own = snapshot is None and (asked.desk is not None or asked.store is None)
+        problems += rederive(places, load_desk(where.desk) if is_own else None, report.snapshot)
     if asked.as_json:
         say_json(
             {
@@ -324,13 +337,15 @@ def verify(asked: Asked, deep: bool, repoint: bool, snapshot: str | None) -> Exi
 
 @command(main, "sql", 'ropewalk sql "select market, plan, count(*) from series group by all order by all"')
 @click.argument("query", required=False)
-def sql(asked: Asked, query: str | None) -> Exit:
+@click.option("--snapshot", metavar="NAME", help="Ask this one, by name, number or given name.  [default: the newest]")
+def sql(asked: Asked, query: str | None, snapshot: str | None) -> Exit:
     """Run a QUERY on the catalog, or say how to open it.
 
     A query only reads. With none, says how any client opens the catalog.
     """
     from catalog.places import Places
     from catalog.query import how_to_open, open_catalog, run_query
+    from catalog.store import find_snapshot
 
     places = Places(asked.where().store)
     if query is None:
@@ -340,7 +355,8 @@ def sql(asked: Asked, query: str | None) -> Exit:
         else:
             say(told.split("\n"))
         return Exit.DONE
-    with open_catalog(places) as connection:
+    chosen = None if snapshot is None else find_snapshot(places, snapshot)
+    with open_catalog(places, chosen) as connection:
         columns, rows = run_query(connection, query)
     if asked.as_json:
         say_json({"columns": columns, "rows": rows})
@@ -350,6 +366,10 @@ def sql(asked: Asked, query: str | None) -> Exit:
 
 
 main.add_command(propose)
+main.add_command(prune)
+main.add_command(rolls)
+main.add_command(changes)
+main.add_command(study)
 
 if __name__ == "__main__":
     main()

@@ -105,7 +105,7 @@ def _run_flow(where: Where, jobs: int | None, told: Told) -> None:
     try:
         # Typed as if it were awaited; a flow without async gives the state itself.
         state: State[Any] = night(  # type: ignore[assignment]
-            str(where.desk), raw, str(where.store), jobs, where.rehash, return_state=True
+            str(where.desk), raw, str(where.store), jobs, where.rehash, [*map(list, where.waived)], return_state=True
         )
         failure = state.message or str(state.name)
     except Exception as error:  # Prefect's own: what the night itself raises stands in `told` already
@@ -158,11 +158,15 @@ def _current() -> Told:
     validate_parameters=False,
     log_prints=False,
 )
-def night(desk: str, raw: str | None, store: str, jobs: int | None = None, rehash: bool = False) -> Any:
+def night(
+    desk: str, raw: str | None, store: str, jobs: int | None = None, rehash: bool = False,
+    waived: list[list[str]] | None = None,
+) -> Any:  # fmt: skip
     """Take in what is new, build each market as a task, publish; paths are absolute."""
     told = _current()
     told.run = _run_id()
-    where = Where(Path(desk), None if raw is None else Path(raw), Path(store), rehash)
+    gates = tuple((market, why, person) for market, why, person in waived or ())
+    where = Where(Path(desk), None if raw is None else Path(raw), Path(store), rehash, gates)
     try:
         told.summary = run_night(where, "nightly", _task_builder(jobs, told))
     except Lost:

@@ -18,13 +18,15 @@ DEFAULT_STORE = "published"
 class Where:
     """The folders of one command, absolute. `raw` is None where the desk's own declaration counts.
 
-    `rehash` asks for every raw file to be read again, and not only those whose size or time changed.
+    `rehash` asks for every raw file to be read again, and not only those whose size or time changed; `waived`
+    holds market, reason and person of each gate that is waived for this run.
     """
 
     desk: Path
     raw: Path | None
     store: Path
     rehash: bool = False
+    waived: tuple[tuple[str, str, str], ...] = ()
 
 
 def find_where(desk: str | None, raw: str | None, store: str | None) -> Where:

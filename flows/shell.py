@@ -22,6 +22,8 @@ from flows.render import complain, say, say_json
 from flows.settings import Where, find_desk, find_where
 
 # The world, not the program: a full disk, a folder that may not be written, a broken drive.
+# What is said where not even a library can be loaded or a thread started.
+_SHORT_OF_MEMORY = ("failed to map segment", "annot allocate memory", "can't start new thread")
 _WORLD = frozenset({errno.ENOSPC, errno.EDQUOT, errno.EROFS, errno.EACCES, errno.EPERM, errno.EIO, errno.EMFILE})
 
 
@@ -150,6 +152,9 @@ def _run(run: Callable[[], Any]) -> int:
     except SystemExit as end:
         return end.code if isinstance(end.code, int) else Exit.BUG
     except Exception as error:
+        if isinstance(error, MemoryError) or any(sign in str(error) for sign in _SHORT_OF_MEMORY):
+            complain("out of memory; nothing was published, the last snapshot stands; give it more, or fewer --jobs")
+            return Exit.NOT_PUBLISHED
         if isinstance(error, OSError) and error.errno in _WORLD:
             complain(f"{error}; nothing was published, the last snapshot stands")
             return Exit.NOT_PUBLISHED

@@ -46,7 +46,7 @@ def run_night(where: Where, command: str, build: Builder) -> "Summary":
 
     check_usage(where)
     with write_lock(Places(where.store)):
-        night = begin(where.desk, where.raw, where.store, command, where.rehash)
+        night = begin(where.desk, where.raw, where.store, command, where.rehash, where.waived)
         try:
             results: list[Result] = []
             if night.markets:

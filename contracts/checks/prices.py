@@ -45,8 +45,9 @@ class Ruling(StrEnum):
 class Verdict:
     """One settle that stands alone: where, of what form, how strongly, and what the curve expects.
 
-    `expected` is NaN where the curve cannot say; `power` is the power of ten by which the settle is too large
-    (negative: too small), 0 for none.
+    `expected` is NaN where the curve cannot say, or where the bar itself speaks for a price that cannot be
+    (`is_borne_out`); `power` is the power of ten by which the settle is too large (negative: too small), 0 for
+    none.
     """
 
     session: int
@@ -56,6 +57,7 @@ class Verdict:
     expected: float
     score: float
     power: int = 0
+    is_borne_out: bool = False
 
 
 class _Curve:
@@ -175,7 +177,7 @@ def _judge(curve: _Curve, row: int, contract: int, is_impossible: bool) -> Verdi
     is_known = len(moves) >= 2
     expected = float(curve.clean[since, contract] + np.median(moves)) if is_known else math.nan
     if is_impossible:
-        return Verdict(session, contract, Kind.NOT_POSITIVE, Ruling.REFUTED, _tidy(expected), math.nan)
+        return _judge_impossible(curve, session, contract, _tidy(expected))
     level = expected if is_known else float(curve.clean[since, contract])
     distance = price - level
     scale = max(scaled_mad(moves) if is_known else 0.0, curve.own_noise(row, contract), 0.5 * curve.tick)
@@ -205,11 +207,24 @@ def _judge(curve: _Curve, row: int, contract: int, is_impossible: bool) -> Verdi
     return Verdict(session, contract, Kind.CURVE_BREAK, ruling, _tidy(expected), score)
 
 
+def _judge_impossible(curve: _Curve, session: int, contract: int, expected: float) -> Verdict:
+    """A settle at or below zero where none can be.
+
+    One below zero that the bar traded down to from above is no slip of the pen: the declaration may be the one that
+    is wrong, and nothing is put in its place. A bar of noughts speaks for nothing.
+    """
+    low, high = _bar_range(curve, session, contract)
+    price = curve.panel.field("settle")[session, contract]
+    is_borne_out = bool(curve.panel.field("volume")[session, contract] > 0 and low <= price < 0 < high)
+    used = math.nan if is_borne_out else expected
+    return Verdict(session, contract, Kind.NOT_POSITIVE, Ruling.REFUTED, used, math.nan, is_borne_out=is_borne_out)
+
+
 def _judge_first(curve: _Curve, row: int, contract: int, is_impossible: bool) -> Verdict | None:
     """A settle with no clean one before it can only be held against the one after it."""
     session = int(curve.rows[row])
     if is_impossible:
-        return Verdict(session, contract, Kind.NOT_POSITIVE, Ruling.REFUTED, math.nan, math.nan)
+        return _judge_impossible(curve, session, contract, math.nan)
     later = curve.reported[row + 1 : row + 1 + _LONGEST_LOOK_AHEAD, contract]
     later = later[~np.isnan(later)]
     price = curve.reported[row, contract]

@@ -1,11 +1,14 @@
 """What is worth knowing about a plan's rolls and its series.
 
-Belongs here: findings about the ledger. Does not belong here: deciding or measuring a roll (`rolls.py`).
+Belongs here: findings about the ledger and the series it makes. Does not belong here: deciding or measuring a
+roll (`rolls.py`), computing a series (`splice.py`).
 """
 
 import datetime
 import math
 from dataclasses import dataclass
+
+import numpy as np
 
 from contracts.findings import Finding, Kind, Severity
 from contracts.markets import Plan
@@ -34,6 +37,27 @@ def check_rolls(panel: Panel, name: str, plan: Plan, held: Held) -> list[Finding
         severity = Severity.BLOCK if held.nearby == 1 else Severity.REVIEW
         found.append(teller.tell(Kind.ROLL_UNMEASURED, severity, None, None, text))
     return found
+
+
+def check_back_adjusted(
+    panel: Panel, name: str, held: Held, settle: np.ndarray, back_adjusted: np.ndarray
+) -> list[Finding]:
+    """Where gaps added up carry the back-adjusted price of a positive settle to zero or below: it has no percentages.
+
+    `settle` and `back_adjusted` (T - start,) in price units, NaN where there is none. One finding a series; it is
+    about no one session, since every roll to come moves those it speaks of.
+    """
+    places = np.flatnonzero((settle > 0) & (back_adjusted <= 0)) + held.start
+    if not len(places):
+        return []
+    first, last = (day_of(panel.sessions[place]) for place in (places[0], places[-1]))
+    text = (
+        f"back_adjusted is at or below zero on {len(places)} sessions from {first} to {last} whose settle is above "
+        "zero; its differences stand, its percentages mean nothing: take simple_return or ratio_adjusted"
+    )
+    teller = _Teller(panel, name, held.nearby)
+    kind = Kind.PERCENT_OF_BACK_ADJUSTED_UNDEFINED
+    return [teller.tell(kind, Severity.NOTE, None, None, text, score=float(len(places)))]
 
 
 @dataclass(frozen=True)

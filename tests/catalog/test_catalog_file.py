@@ -12,7 +12,7 @@ from catalog.places import Places, write_lock
 from catalog.store import Manifest, link_table, open_staging, publish, read_manifest, write_table
 from catalog.verify import verify_store
 from contracts.errors import StoreError
-from contracts.tables import TABLES, make_table
+from contracts.tables import DERIVED, TABLES, make_table
 from tests.catalog.small import (
     STAMP,
     S,
@@ -53,13 +53,13 @@ def test_any_client_counts_the_sessions_of_every_plan(places: Places, raw: Path)
 def test_every_table_has_a_view_with_its_columns_and_types(places: Places, raw: Path) -> None:
     publish_two(places, raw)
     with connect(places) as connection:
-        for table in TABLES:
+        for table in (*TABLES, *DERIVED):
             described = connection.execute(f"describe {table.name}").fetchall()
             assert tuple(row[0] for row in described) == table.columns
         listed = connection.execute('select "table", "column", "type" from dictionary order by rowid').fetchall()
         seen = [
             (table.name, row[0], row[1].lower())
-            for table in TABLES
+            for table in (*TABLES, *DERIVED)
             for row in connection.execute(f"describe {table.name}").fetchall()
         ]
     assert listed == seen
@@ -70,8 +70,15 @@ def test_the_dictionary_says_what_every_column_means(places: Places, raw: Path) 
     with connect(places) as connection:
         query = 'select * from dictionary where "table" = ? and "column" = ?'
         assert connection.execute(query, ["series", "shift"]).fetchall() == [
-            ("series", "shift", "double", "market currency per unit", "sum of the gaps of all later rolls",
-             "continuous series of each plan and nearby"),
+            (
+                "series",
+                "shift",
+                "double",
+                "market currency per unit",
+                "sum of the gaps of all later rolls: makes differences true when added to a price, "
+                "and percentages wrong",
+                "continuous series of each plan and nearby",
+            ),
         ]  # fmt: skip
         assert connection.execute("select count(*) from dictionary where meaning = ''").fetchone() == (0,)
 

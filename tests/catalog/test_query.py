@@ -199,3 +199,16 @@ def test_how_to_open_it_is_told_for_any_client(places: Places) -> None:
     lines = how_to_open(places).splitlines()
     assert f"duckdb.connect({str(places.catalog)!r}, read_only=True)" in lines[2]
     assert lines[4] == f"  shell   duckdb -readonly {places.catalog}"
+
+
+def test_how_to_open_it_names_every_view_and_macro_that_is_there(places: Places, raw: Path) -> None:
+    publish_small(places, raw)
+    told = how_to_open(places)
+    with duckdb.connect(str(places.catalog), read_only=True) as connection:
+        views = connection.execute("select view_name from duckdb_views() where not internal").fetchall()
+        macros = connection.execute("select function_name from duckdb_functions() where database_name = 'catalog'")
+        names = {row[0] for row in macros.fetchall() if row[0].removesuffix("_of") not in {view[0] for view in views}}
+    assert len(views) == 14
+    assert [view for (view,) in views if view not in told] == []
+    assert names == {"session_of", "curve_of", "price_trace"}
+    assert all(name in told for name in (*names, "series_of", "curve_slope_of('...')"))

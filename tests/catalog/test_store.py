@@ -64,7 +64,9 @@ def test_a_table_is_stamped_and_its_columns_carry_unit_and_meaning(tmp_path: Pat
     schema = pq.read_schema(tmp_path / stored.path)
     assert schema.metadata == {b"code": b"some code", b"desk": b"a desk"}
     assert schema.field("shift").metadata[b"unit"] == b"market currency per unit"
-    assert schema.field("shift").metadata[b"meaning"] == b"sum of the gaps of all later rolls"
+    assert schema.field("shift").metadata[b"meaning"] == (
+        b"sum of the gaps of all later rolls: makes differences true when added to a price, and percentages wrong"
+    )
     group = pq.ParquetFile(tmp_path / stored.path).metadata.row_group(0)
     assert group.column(0).compression == "ZSTD"
     assert [column.column_index for column in group.sorting_columns] == [0, 1, 2, 3]

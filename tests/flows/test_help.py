@@ -21,7 +21,20 @@ HEAVY = (
     "exchange_calendars",
     "catalog",
 )
-COMMANDS = ("build", "desk", "findings", "nightly", "propose", "rolls", "sql", "trace", "verify")
+COMMANDS = (
+    "build",
+    "changes",
+    "desk",
+    "findings",
+    "nightly",
+    "propose",
+    "prune",
+    "rolls",
+    "sql",
+    "study",
+    "trace",
+    "verify",
+)
 
 
 def test_these_are_the_commands() -> None:

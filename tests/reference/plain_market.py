@@ -17,7 +17,7 @@ class PlainMarket:
     `contracts` stand in delivery order and end in their month, as in `NWHT-2025-03`. `settle` is as reported,
     `prices` is clean before anything is carried, `usable` are the settles a gap may be measured on,
     `repaired` the clean prices that are not the reported ones. `last_trade` and `first_notice` are session
-    indices that may lie before 0 or after the last session.
+    indices that may lie before 0 or after the last session; they count `unscheduled` sessions like any other.
     """
 
     sessions: list[datetime.date]
@@ -35,6 +35,8 @@ class PlainMarket:
     high: dict[Cell, float] = field(default_factory=dict)
     low: dict[Cell, float] = field(default_factory=dict)
     repaired: set[Cell] = field(default_factory=set)
+    # Sessions the calendar called closed: nobody knew of them until they came.
+    unscheduled: set[int] = field(default_factory=set)
 
     @cached_property
     def first_bar(self) -> dict[str, int]:
@@ -76,9 +78,15 @@ def truncate(market: PlainMarket, last: int) -> PlainMarket:
     def cut_set(cells: set[Cell]) -> set[Cell]:
         return {cell for cell in cells if cell[1] <= last}
 
+    def seen(ends: dict[str, int]) -> dict[str, int]:
+        return {name: end - sum(last < day <= end for day in market.unscheduled) for name, end in ends.items()}
+
     return replace(
         market,
         sessions=market.sessions[: last + 1],
+        last_trade=seen(market.last_trade),
+        first_notice=None if market.first_notice is None else seen(market.first_notice),
+        unscheduled={day for day in market.unscheduled if day <= last},
         settle=cut(market.settle),
         volume=cut(market.volume),
         open_interest=cut(market.open_interest),

@@ -69,8 +69,13 @@ def eligible(market: PlainMarket, plan: PlainPlan, t: int) -> list[str]:
     return known
 
 
-def deadline(market: PlainMarket, plan: PlainPlan, contract: str) -> int:
-    """Session index from which on the next contract is to be held."""
+def foreseen(market: PlainMarket, index: int, t: int) -> int:
+    """A session's index as counted at the close of t, which knows of no unscheduled session after it."""
+    return index - sum(1 for day in market.unscheduled if t < day <= index)
+
+
+def deadline(market: PlainMarket, plan: PlainPlan, contract: str, t: int) -> int:
+    """Session index from which on the next contract is to be held, as counted at the close of t."""
     if plan.before == "last trade":
         day = market.last_trade[contract]
     elif market.first_notice is None:
@@ -81,7 +86,15 @@ def deadline(market: PlainMarket, plan: PlainPlan, contract: str) -> int:
         day = min(market.last_trade[contract], market.first_notice[contract])
     else:
         raise ValueError(f"plan {plan.name}: before = {plan.before!r}")
-    return day - plan.backstop
+    return foreseen(market, day, t) - plan.backstop
+
+
+def decides_force(market: PlainMarket, plan: PlainPlan, effective: int) -> int:
+    """The first session at whose close a forced roll's day is no more than `delay` sessions off."""
+    t = effective - plan.delay
+    while t - 1 + plan.delay >= foreseen(market, effective, t - 1):
+        t -= 1
+    return t
 
 
 def is_later(market: PlainMarket, contract: str, other: str) -> bool:
@@ -103,7 +116,7 @@ def find_first(market: PlainMarket, plan: PlainPlan, t: int, after: str | None =
     for contract in eligible(market, plan, t):
         if after is not None and not is_later(market, contract, after):
             continue
-        if deadline(market, plan, contract) > t and (contract, t) in market.usable:
+        if deadline(market, plan, contract, t) > t and (contract, t) in market.usable:
             return contract
     return None
 
@@ -156,7 +169,7 @@ def decide(market: PlainMarket, plan: PlainPlan, held: str, t: int) -> Decision 
     forced_on = None
     for outgoing, effective in plan.force:
         if outgoing == held:
-            forced_on = effective - plan.delay
+            forced_on = decides_force(market, plan, effective)
     if forced_on is not None and t < forced_on:
         return None
     if incoming is None:
@@ -165,7 +178,7 @@ def decide(market: PlainMarket, plan: PlainPlan, held: str, t: int) -> Decision 
         return Decision(t, held, incoming, "forced")
     if fires(market, plan, held, incoming, t):
         return Decision(t, held, incoming, plan.trigger)
-    if t + plan.delay + plan.steps - 1 >= deadline(market, plan, held):
+    if t + plan.delay + plan.steps - 1 >= deadline(market, plan, held, t):
         return Decision(t, held, incoming, "calendar" if plan.trigger == "calendar" else "backstop")
     return None
 
@@ -341,28 +354,32 @@ def lay_plain(market: PlainMarket, plan: PlainPlan) -> Laid:
                 if target is not None:
                     strand.start(target, t)
         decision = decide(market, plan, front.held, t) if front.roll is None else None
+        planned = t + plan.delay
         if decision is not None:
-            front.begin(decision, t + plan.delay)
             if decision.trigger == "forced":
-                used.add((decision.outgoing, t + plan.delay))
+                planned = dict(plan.force)[decision.outgoing]
+                used.add((decision.outgoing, planned))
+            front.begin(decision, planned)
         for strand in strands[1:]:
-            _follow(market, plan, strand, decision, t)
+            _follow(market, plan, strand, decision, t, planned)
         for strand in strands:
             strand.measure(t)
     end = len(market.sessions) - 1
     for strand in strands:
         _close(strand, end)
-    unused = [f for f in plan.force if f not in used and f[1] - plan.delay <= end]
+    unused = [f for f in plan.force if f not in used and decides_force(market, plan, f[1]) <= end]
     return Laid({s.chain.nearby: s.chain for s in strands if s.chain.nearby in plan.nearbys}, unused)
 
 
-def _follow(market: PlainMarket, plan: PlainPlan, strand: _Strand, decision: Decision | None, t: int) -> None:
+def _follow(
+    market: PlainMarket, plan: PlainPlan, strand: _Strand, decision: Decision | None, t: int, planned: int
+) -> None:
     """Roll a farther nearby with nearby 1, or as soon as its contract is known."""
-    planned = t + 1
     if decision is not None:
         strand.late = (decision.incoming, decision.trigger)
         strand.drop_waiting(t)
-        planned = t + plan.delay
+    else:
+        planned = t + 1
     if strand.late is None or strand.held is None:
         return
     counted_from, trigger = strand.late

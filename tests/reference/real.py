@@ -39,6 +39,7 @@ class RealChain:
 def declare(market: PlainMarket, plan: PlainPlan) -> Market:
     """The market and plan as a declaration."""
     months = sorted({int(name[-2:]) for name in market.contracts})
+    closed = [market.sessions[t].isoformat() for t in sorted(market.unscheduled)]
     notice = "" if market.first_notice is None else '[first_notice]\nrule = "FREQ=MONTHLY;BYMONTHDAY=1"'
     text = f"""code = "XX"
 name = "a market in a test"
@@ -49,6 +50,7 @@ point_value = 1.0
 tick_size = 0.25
 may_be_negative = true
 delivery_months = {months}
+closed = [{", ".join(closed)}]
 open_interest_lag = {market.open_interest_lag}
 
 [last_trade]
@@ -111,7 +113,7 @@ def lay_panel_of(market: PlainMarket, plan: PlainPlan) -> Panel:
         first_notice=notice,
         off_session=nothing,
         outside=nothing,
-        disagreeing=nothing,
+        disagreeing=np.array(sorted(market.unscheduled), dtype=np.int64),
     )
 
 

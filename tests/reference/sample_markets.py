@@ -80,6 +80,7 @@ def read_market(snapshot: pathlib.Path, declared: Market) -> tuple[PlainMarket, 
         first_notice={row["contract"]: days.index(row["first_notice"]) for row in terms} if has_notice else None,
         open_interest_lag=declared.open_interest_lag,
         prices=cells["clean_settle"],
+        unscheduled={place[day] for day in days.sessions if day not in set(days.open)},
     )
     for row in bars:
         cell = (row["contract"], place[row["session"]])

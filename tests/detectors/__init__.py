@@ -1,0 +1,1 @@
+"""The measuring bench: how many seeded faults the checks find in synthetic markets, and how many alarms are false."""

@@ -8,7 +8,7 @@ from collections import Counter
 from collections.abc import Iterator
 
 from tests.reference.agree import Row
-from tests.reference.declared import Case, delivery_of_name, last_trade_of, sessions_of
+from tests.reference.declared import Case, delivery_of_name, last_trade_of, sessions_of, surprises_of
 from tests.reference.plain_days import ONE, newest_rule, shift_month
 from tests.reference.plain_market import PlainMarket, PlainPlan
 from tests.reference.plain_rolls import Chain, Laid, eligible, is_later
@@ -33,13 +33,14 @@ OUTCOMES = (
     "farther dropped", "farther decided late", "farther queued behind",
     "no ratio", "settle at or below zero", "carried", "missing", "repaired",
     "equal activity", "never arrived", "listed late", "dead early", "over before the first session",
-    "alive after the last session", "two last trades on one day",
+    "alive after the last session", "two last trades on one day", "surprise session", "forced over a surprise",
 )  # fmt: skip
 
 DECLARED = (
     "last trade by rules that change", "first notice by rules that change", "no first notice",
     "rescaled once", "rescaled twice", "months listed change", "closed on a weekday", "open on a weekend",
     "several plans", "a later delivery ends earlier", "forced and never arrived", "forced outside the data",
+    "surprise session", "bar on a closed day left out",
 )  # fmt: skip
 
 
@@ -75,6 +76,7 @@ def _options(market: PlainMarket, plan: PlainPlan) -> Iterator[str]:
 
 def _of_market(market: PlainMarket) -> Iterator[str]:
     end = len(market.sessions) - 1
+    yield from ("surprise session" for _ in market.unscheduled)
     for contract, following in zip(market.contracts, market.contracts[1:], strict=False):
         if market.last_trade[contract] == market.last_trade[following]:
             yield "two last trades on one day"
@@ -126,6 +128,13 @@ def _of_row(market: PlainMarket, plan: PlainPlan, chain: Chain, row: Row) -> Ite
         yield "unmeasured"
         return
     decided = next(decision for decision in chain.decisions if decision.decided == row["decided_on"])
+    if (
+        row["step"] == 1
+        and row["trigger"] == "forced"
+        and row["effective_on"] > row["decided_on"] + plan.delay
+        and not row["postponed"]
+    ):
+        yield "forced over a surprise"
     if row["is_stale"]:
         yield "stale"
         if row["step"] > 1:
@@ -170,6 +179,10 @@ def _of_declaration(case: Case) -> Iterator[str]:
         yield "open on a weekend"
     if len(case.plans) > 1:
         yield "several plans"
+    if surprises_of(case):
+        yield "surprise session"
+    if any(day not in sessions for _, day in case.bars):
+        yield "bar on a closed day left out"
     ends = [last_trade_of(case, contract) for contract in arrived]
     if ends != sorted(ends):
         yield "a later delivery ends earlier"

@@ -80,15 +80,27 @@ def _rescaled(chance: random.Random, sessions: list[Day]) -> tuple[tuple[Day, fl
     )
 
 
-def _fill(chance: random.Random, case: Case, days: list[Day], levels: list[float]) -> None:
+def _days_with_bars(chance: random.Random, calendar: PlainCalendar, first: Day, length: int) -> dict[Day, float]:
+    """Open days, and closed ones on which there are bars all the same; by day, the share of contracts without one."""
+    missing = chance.choice([0.0, 0.0, 0.05, 0.3])
+    days = {day: missing for day in calendar.open_days(first, first + ONE * (length * 7 // 5))}
+    share = chance.choice([0.0, 0.0, 0.05, 0.2])
+    for at in range(length * 7 // 5):
+        day = first + ONE * at
+        if not calendar.is_open(day) and chance.random() < share:
+            days[day] = chance.choice([0.0, 0.0, 0.1, 0.7])
+    return dict(sorted(days.items()))
+
+
+def _fill(chance: random.Random, case: Case, days: dict[Day, float], levels: list[float]) -> None:
     """Bars of each contract from its listing to its last trade, with what can be missing missing."""
-    no_bar, no_field, repaired, corrected = (chance.choice([0.0, 0.0, 0.05, 0.3]) for _ in range(4))
+    no_field, repaired, corrected = (chance.choice([0.0, 0.0, 0.05, 0.3]) for _ in range(3))
     highest = chance.choice([1, 3, 1000])
     slope = chance.choice([-2.0, 0.0, 2.0])
     for position, contract in enumerate(case.contracts):
         end = last_trade_of(case, contract) - ONE * chance.choice([0, 0, 0, 0, 3, 10, 400])
         listed = chance.choice([0, 0, 0, 10, 30])
-        for at, day in enumerate(days):
+        for at, (day, no_bar) in enumerate(days.items()):
             if at < listed or day > end or chance.random() < no_bar:
                 continue
             price = levels[at] + slope * position + chance.randint(-2, 2) / 4
@@ -131,7 +143,7 @@ def draw_case(seed: int, length: int, contracts: int, plans: int) -> Case | None
     deliveries = _deliveries(chance, contracts)
     first = datetime.date(2024, 1, 2) + ONE * chance.randint(0, 60)
     calendar = _closed_and_opened(chance, first)
-    days = calendar.open_days(first, first + ONE * (length * 7 // 5))
+    days = _days_with_bars(chance, calendar, first, length)
     case = Case(
         contracts=tuple(f"XX-{year}-{month:02d}" for year, month in deliveries),
         delivery_months=tuple(sorted({month for _, month in deliveries})),
@@ -139,7 +151,7 @@ def draw_case(seed: int, length: int, contracts: int, plans: int) -> Case | None
         last_trade=_rules(chance, deliveries),
         first_notice=_rules(chance, deliveries) if chance.random() < 0.6 else (),
         open_interest_lag=chance.choice([0, 1, 2, 5]),
-        rescaled=_rescaled(chance, days),
+        rescaled=_rescaled(chance, list(days)),
         bars={},
         masked=frozenset(),
         repaired={},
@@ -151,13 +163,17 @@ def draw_case(seed: int, length: int, contracts: int, plans: int) -> Case | None
         walk += chance.randint(-6, 6) / 4
         levels.append(walk)
     _fill(chance, case, days, levels)
-    if not case.bars:
+    sessions = set(sessions_of(case))
+    if not sessions:
         return None
+    for changed in (case.repaired, case.corrected):
+        for place in [place for place in changed if place[1] not in sessions]:
+            del changed[place]
     share = chance.choice([0.0, 0.0, 0.1, 0.4])
     standing = sorted(
         place
         for place, bar in case.bars.items()
-        if "settle" in bar and place not in case.repaired and place not in case.corrected
+        if "settle" in bar and place[1] in sessions and place not in case.repaired and place not in case.corrected
     )
     case = replace(case, masked=frozenset(place for place in standing if chance.random() < share))
     market = plain_market(case)

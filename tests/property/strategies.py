@@ -7,7 +7,7 @@ contracts; its cells are filled from one seed, so that drawing stays quick.
 
 import os
 import random
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 from hypothesis import settings
 from hypothesis import strategies as st
@@ -255,7 +255,12 @@ def wide_case(seed: int) -> tuple[PlainMarket, PlainPlan]:
         chance.choice([5, 8, 12, 8, 3, -1]),
         chance,
     )
-    return market, draw_plan(chance, market)
+    if chance.random() < 0.3:
+        # Sessions that the calendar calls closed: nothing may count on them before they come.
+        market = replace(market, unscheduled=set(chance.sample(range(count), min(count, chance.randint(1, 4)))))
+    plan = draw_plan(chance, market)
+    # A desk refuses a decision for a day that its calendar calls closed.
+    return market, replace(plan, force=tuple(force for force in plan.force if force[1] not in market.unscheduled))
 
 
 def _draw_nearbys(chance: random.Random) -> tuple[int, ...]:

@@ -33,6 +33,7 @@ Place = tuple[str, Day]
 class Case:
     """One market: its terms, reported bars by (contract, day), what became of settles, and its plans.
 
+    A bar on a closed day is left out unless the day was a session after all.
     `contracts` stand in delivery order, also those of which no bar arrived. `rescaled` are (day, factor): prices
     reported before the day are multiplied by it. `masked` settles were taken out, `repaired` ones replaced by the value
     given (on the present scale), `corrected` ones replaced by a person. `forces` are (outgoing, effective day) by plan.
@@ -72,10 +73,23 @@ def first_notice_of(case: Case, contract: str) -> Day | None:
     return None if rule is None else rule_day(rule, case.calendar, delivery_of_name(contract))
 
 
+def surprises_of(case: Case) -> set[Day]:
+    """Closed days on which more than half of the contracts that then live have a bar."""
+    first: dict[str, Day] = {}
+    on: dict[Day, int] = {}
+    for contract, day in case.bars:
+        first[contract] = min(day, first.get(contract, day))
+        if not case.calendar.is_open(day):
+            on[day] = on.get(day, 0) + 1
+    ends = {contract: last_trade_of(case, contract) for contract in first}
+    return {day for day, seen in on.items() if 2 * seen > sum(first[c] <= day <= ends[c] for c in first)}
+
+
 def sessions_of(case: Case) -> list[Day]:
-    """Open days from the first bar to the last."""
-    days = [day for _, day in case.bars]
-    return case.calendar.open_days(min(days), max(days))
+    """Open days, and those that were not to be, from the first bar on one of them to the last; none without a bar."""
+    surprises = surprises_of(case)
+    used = {day for _, day in case.bars if day in surprises or case.calendar.is_open(day)}
+    return sorted({*case.calendar.open_days(min(used), max(used)), *surprises}) if used else []
 
 
 def present_price(case: Case, day: Day, value: float) -> float:
@@ -90,6 +104,7 @@ def plain_market(case: Case) -> PlainMarket:
     """The case as the plain telling has it."""
     sessions = sessions_of(case)
     place = {day: at for at, day in enumerate(sessions)}
+    unscheduled = {place[day] for day in surprises_of(case)}
     ends = {name: last_trade_of(case, name) for name in case.contracts}
     notices = {name: first_notice_of(case, name) or ends[name] for name in case.contracts}
     cells: dict[str, dict[Cell, float]] = {name: {} for name in BAR_FIELDS}
@@ -97,9 +112,11 @@ def plain_market(case: Case) -> PlainMarket:
         sessions, list(case.contracts), cells["settle"], cells["volume"], cells["open_interest"], set(), set(),
         {name: case.calendar.index(sessions, day) for name, day in ends.items()},
         {name: case.calendar.index(sessions, day) for name, day in notices.items()} if case.first_notice else None,
-        case.open_interest_lag, {}, cells["open"], cells["high"], cells["low"],
+        case.open_interest_lag, {}, cells["open"], cells["high"], cells["low"], unscheduled=unscheduled,
     )  # fmt: skip
     for (contract, day), bar in case.bars.items():
+        if day not in place:
+            continue
         cell = (contract, place[day])
         market.bars.add(cell)
         for name, value in bar.items():

@@ -16,6 +16,9 @@ WORKED = (
     "tests/reference/test_splice_rules.py",
     "tests/reference/test_adjustment.py",
     "tests/reference/test_index_roll.py",
+    "tests/property/test_surprise_sessions.py::test_deadline_is_counted_without_the_surprise_until_it_comes",
+    "tests/property/test_surprise_sessions.py"
+    "::test_forced_roll_is_decided_in_time_and_takes_effect_on_its_day_over_a_surprise",
     "tests/contracts/test_splice.py",
 )
 

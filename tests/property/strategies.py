@@ -221,6 +221,18 @@ def markets_and_plans(draw: st.DrawFn, longest: int = 32) -> tuple[PlainMarket, 
     return market, draw(plans(market))
 
 
+@st.composite
+def surprised(draw: st.DrawFn) -> tuple[PlainMarket, PlainPlan]:
+    """A market of which up to five sessions were not to be, and a plan."""
+    market, plan = draw(markets_and_plans())
+    days = draw(st.sets(st.integers(0, len(market.sessions) - 1), min_size=1, max_size=4))
+    if draw(st.booleans()):
+        days |= {effective - 1 for _, effective in plan.force if effective > 0}
+    # A desk refuses a decision for a day that its calendar calls closed.
+    force = tuple(decision for decision in plan.force if decision[1] not in days)
+    return replace(market, unscheduled=days), replace(plan, force=force)
+
+
 def wide_case(seed: int) -> tuple[PlainMarket, PlainPlan]:
     """A market and a plan, every choice made evenly from one seed: no shrinking, no leaning to small ones."""
     chance = random.Random(seed)
@@ -255,12 +267,15 @@ def wide_case(seed: int) -> tuple[PlainMarket, PlainPlan]:
         chance.choice([5, 8, 12, 8, 3, -1]),
         chance,
     )
-    if chance.random() < 0.3:
-        # Sessions that the calendar calls closed: nothing may count on them before they come.
-        market = replace(market, unscheduled=set(chance.sample(range(count), min(count, chance.randint(1, 4)))))
     plan = draw_plan(chance, market)
-    # A desk refuses a decision for a day that its calendar calls closed.
-    return market, replace(plan, force=tuple(force for force in plan.force if force[1] not in market.unscheduled))
+    if chance.random() > 0.3:
+        return market, plan
+    # Sessions that the calendar calls closed: nothing may count on them before they come, least of all a decision.
+    days = set(chance.sample(range(count), min(count, chance.randint(1, 4))))
+    days |= {effective - 1 for _, effective in plan.force if effective > 0}
+    # A desk refuses a decision for such a day.
+    force = tuple(decision for decision in plan.force if decision[1] not in days)
+    return replace(market, unscheduled=days), replace(plan, force=force)
 
 
 def _draw_nearbys(chance: random.Random) -> tuple[int, ...]:

@@ -12,6 +12,7 @@ Each group of examples has the source of its rule before it. The papers, with wh
   signals on returns of the most liquid contract, compounded over rolls (abstract read; the rest from memory).
 """
 
+from dataclasses import replace
 from typing import Any
 
 import pytest
@@ -433,6 +434,26 @@ def test_a_forced_roll_is_unused_once_its_decision_session_has_come(
     market = small_market(flat(6, 100, 105, 110), FAR)
     plan = PlainPlan("p", "calendar", delay=delay, nearbys=(1, 2), force=((B, effective),))
     assert tell(market, plan).unused_force == unused
+
+
+@pytest.mark.parametrize(("delay", "effective"), [(1, 0), (2, 1), (3, -4), (3, 2)])
+def test_a_forced_roll_that_would_have_been_decided_before_the_first_session_is_unused_and_the_rule_counts(
+    tell: Telling, delay: int, effective: int
+) -> None:
+    market = small_market(flat(12, 100, 105, 110), {**FAR, A: 8})
+    laid = tell(market, PlainPlan("p", "calendar", delay=delay, force=((A, effective),)))
+    assert laid.chains[1].decisions == [(8 - delay, A, B, "calendar")]
+    assert laid.unused_force == [A]
+
+
+def test_a_surprise_session_moves_the_decision_of_a_forced_roll_before_the_first_session(tell: Telling) -> None:
+    """Effective on 2 with a delay of two is decided on 0; with 1 a surprise, on the session before, which is none."""
+    market = small_market(flat(12, 100, 105, 110), {**FAR, A: 8})
+    plan = PlainPlan("p", "calendar", delay=2, force=((A, 2),))
+    assert tell(market, plan).chains[1].decisions == [(0, A, B, "forced")]
+    surprised = tell(replace(market, unscheduled={1}), plan)
+    assert surprised.chains[1].decisions == [(6, A, B, "calendar")]
+    assert surprised.unused_force == [A]
 
 
 def test_a_forced_roll_decided_on_the_last_session_is_used_and_pending(tell: Telling) -> None:

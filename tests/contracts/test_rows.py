@@ -86,9 +86,11 @@ LIMIT = "daily_limit = 4.0"
 
 def test_lone_settle_beyond_the_limit_is_told_on_its_way_out_alone() -> None:
     settle = curve()
-    # Off by less than what alone would be refuted, yet past the limit there and back.
+    # Its bars traded all the way there, so that it is kept; past the limit there and back all the same.
     settle[40:42, 1] += 5.0
     fields = bars(settle)
+    fields["low"][40:42, 1] -= 6.0
+    fields["open"][40, 1] -= 5.0
     told = [(f.kind, f.severity, str(f.session)) for f in rows(settle, LIMIT, **fields)]
     assert told == [(Kind.LIMIT_EXCEEDED, Severity.REVIEW, "2023-11-27")]
 

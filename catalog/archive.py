@@ -20,7 +20,7 @@ from pathlib import Path
 
 import pyarrow as pa
 
-from catalog.places import PART, Places, store_errors, sync_folder, write_new, write_whole
+from catalog.places import PART, Places, check_written, store_errors, sync_folder, write_new, write_whole
 from contracts.errors import IntakeError, StoreError, StoreUnsound
 from contracts.unpack import LARGEST_TEXT, list_members
 
@@ -403,14 +403,16 @@ def _append_register(places: Places, whole: int, fresh: list[Arrival]) -> None:
     lines = []
     for left, arrival in zip(range(len(fresh) - 1, -1, -1), fresh, strict=True):
         lines.append(json.dumps({**vars(arrival), "left": left}) + "\n")
-    opened = os.open(places.register, os.O_WRONLY | os.O_CREAT | os.O_NOFOLLOW | os.O_CLOEXEC, 0o644)
+    content = "".join(lines).encode()
+    opened = os.open(places.register, os.O_RDWR | os.O_CREAT | os.O_NOFOLLOW | os.O_CLOEXEC, 0o644)
     try:
         os.ftruncate(opened, whole)
         os.lseek(opened, whole, os.SEEK_SET)
-        view = memoryview("".join(lines).encode())
+        view = memoryview(content)
         while view:
             view = view[os.write(opened, view) :]
         os.fsync(opened)
+        check_written(opened, whole, content)
     finally:
         os.close(opened)
     sync_folder(places.archive)

@@ -25,6 +25,7 @@ from catalog.assignment import (
     package_versions,
     table_stamp,
 )
+from catalog.damage import damaged_owners
 from catalog.declarations import Desk, desk_from_texts, load_desk
 from catalog.gates import judge_market, silent_sessions
 from catalog.places import DESK_WIDE, Places, table_path
@@ -81,7 +82,8 @@ def begin(
 ) -> Night:  # fmt: skip
     """Load the desk, take in what arrived, and say which markets have to be built.
 
-    With `rehash` every raw file is read, and not only those whose size or time changed; `waived` are market,
+    With `rehash` every raw file is read, and not only those whose size or time changed, and markets whose
+    published tables are damaged are built again; `waived` are market,
     reason and person of gates that hold nothing back tonight. The caller holds the store's write lock. Raises
     DeskError before anything is touched, UsageError for a raw folder that is not there while the archive is
     empty, and for a waived market that the desk does not declare.
@@ -101,11 +103,13 @@ def begin(
     assignment = assign_files(desk, intake, places)
     digests = {code: inputs_digest(desk, code, files) for code, files in assignment.files.items()}
     last = _last_manifest(places)
-    unchanged = tuple(code for code in desk.markets if _is_unchanged(last, code, digests[code]))
+    damaged = damaged_owners(places, last) if rehash and last is not None else frozenset()
+    unchanged = tuple(code for code in desk.markets if _is_unchanged(last, code, digests[code]) and code not in damaged)
     told = _desk_digest(assignment)
     nothing_new = (
         last is not None
         and not waived
+        and not damaged
         and all(code in last.markets and last.markets[code].inputs == digests[code] for code in desk.markets)
         and set(last.markets) == set(desk.markets)
         and last.desk == desk.digest
@@ -275,8 +279,14 @@ def finish(night: Night, results: list[dict[str, Any]]) -> Summary:
         },
     )  # fmt: skip
     manifest = publish(places, staging, draft)
-    record_run(places, replace(run, snapshot=manifest.name))
-    return summarise(manifest, published_now=True, results=results, worst=worst)
+    told_summary = summarise(manifest, published_now=True, results=results, worst=worst)
+    try:
+        record_run(places, replace(run, snapshot=manifest.name))
+    except OSError as error:
+        # The switch is done; that it is missing in the log of runs must not say otherwise.
+        note = f"published, but the log of runs could not be written: {error.strerror} ({places.runs})"
+        return replace(told_summary, notes=(note,))
+    return told_summary
 
 
 def _now() -> str:

@@ -131,7 +131,7 @@ def current_snapshot(places: Places) -> str | None:
     if sequence_of(name) is None or not places.snapshot(name).is_dir():
         raise StoreUnsound(
             f"{places.current}: seen {name[:80]!a}; expected the name of a snapshot that is there "
-            f"(newest there: {_newest_names(places)})"
+            f"(newest there: {_newest_names(places)}); ropewalk verify --repoint --from N points to one"
         )
     return name
 
@@ -354,7 +354,8 @@ def publish(places: Places, staging: Path, manifest_draft: Manifest) -> Manifest
         manifest = unnamed.model_copy(update={"name": unnamed.proper_name()})
         problems = check_files(staging, manifest)
         if problems:
-            raise StoreError(f"nothing was published: {'; '.join(problems[:5])}")
+            mend = "where a table of the last snapshot is damaged, ropewalk build --rehash builds it again"
+            raise StoreError(f"nothing was published: {'; '.join(problems[:5])}; {mend}")
         with store_errors("nothing was published: the snapshot could not be completed"):
             write_new(staging / MANIFEST, manifest.as_bytes())
             for folder, _, _ in os.walk(staging, topdown=False):
@@ -436,7 +437,11 @@ def _prepare_switch(places: Places, manifest: Manifest) -> tuple[Path, Path]:
 def _note_catalog(places: Places, name: str, catalog: Path) -> None:
     """Record the hash of a catalog that is about to be switched to, beside that of the one it replaces."""
     known = read_catalog_hashes(places)
-    current = current_snapshot(places)
+    try:
+        current = current_snapshot(places)
+    except StoreUnsound:
+        # A CURRENT that names nothing is about to be replaced.
+        current = None
     kept = {current: known[current]} if current in known else {}
     content = {**kept, name: hash_file(catalog)[1]}
     write_whole(places.catalog_hashes, (json.dumps(content, sort_keys=True) + "\n").encode())

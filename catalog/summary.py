@@ -40,6 +40,7 @@ class Summary:
     rows: int
     unclaimed: int
     late: tuple[str, ...]
+    notes: tuple[str, ...] = ()
 
     @property
     def exit_code(self) -> int:
@@ -61,6 +62,7 @@ class Summary:
         else:
             told = [f"published snapshot {self.snapshot}: {len(self.published)} markets, {self.rows:,} rows built"]
             told.append(f"  published: {', '.join(self.published) or 'none'}")
+        told += [f"  {note}" for note in self.notes]
         told += [f"  held back: {market}: {reason}" for market, reason in self.held_back]
         told += [f"  published all the same: {market}: {reason}" for market, reason in self.waived]
         if self.late:

@@ -19,6 +19,7 @@ from catalog.store import (
     Manifest,
     check_files,
     current_snapshot,
+    find_snapshot,
     read_catalog_hashes,
     read_manifest,
     rebuild_catalog,
@@ -45,17 +46,23 @@ class Report:
 
 
 def verify_store(places: Places, snapshot: str | None = None) -> Report:
-    """Check a snapshot (the current one by default), the archive behind it and, if current, the catalog.
+    """Check a snapshot (by name or number; else the current one), the archive behind it, and a current catalog.
 
     Hashes every file of the snapshot and every raw file it names, looks for what is missing or not listed,
     and runs each rule of `soundness/`, which returns the rows that offend. Whatever is wrong is a problem of
     the report; raises UsageError where nothing is published or the snapshot named is not there.
     """
     try:
-        current = current_snapshot(places)
+        try:
+            current = current_snapshot(places)
+        except StoreUnsound:
+            # An older snapshot can be asked for by name whatever CURRENT says.
+            if snapshot is None:
+                raise
+            current = None
         if snapshot is None and current is None:
             raise UsageError(f"{places.store}: nothing is published here yet; run ropewalk build first")
-        manifest = read_manifest(places, snapshot or current)
+        manifest = read_manifest(places, find_snapshot(places, snapshot) if snapshot is not None else current)
     except StoreUnsound as error:
         return Report((str(error),), 0, 0)
     folder = places.snapshot(manifest.name)
@@ -95,13 +102,18 @@ def run_rule(connection: "duckdb.DuckDBPyConnection", rule: Path) -> list[str]:
     return [f"{rule.stem}: {meaning} {len(rows):,} {noun}: {'; '.join(shown)}{more}"]
 
 
-def repoint(places: Places) -> Manifest:
+def repoint(places: Places, snapshot: str | None = None) -> Manifest:
     """Build the catalog again for the current snapshot, where the store now lies; takes the store's lock.
 
-    Raises StoreBusy, UsageError where nothing is published, StoreUnsound where the manifest is damaged.
+    With the name or number of a snapshot, CURRENT is made to name it too: the way out where CURRENT or the newest
+    manifest is damaged. Raises StoreBusy, UsageError where nothing is published or the snapshot is not there,
+    StoreUnsound where the manifest is damaged, and where a snapshot asked for is not what was published.
     """
     with write_lock(places):
-        manifest = read_manifest(places)
+        manifest = read_manifest(places, find_snapshot(places, snapshot) if snapshot is not None else None)
+        problems = check_files(places.snapshot(manifest.name), manifest) if snapshot is not None else []
+        if problems:
+            raise StoreUnsound(f"{manifest.name}/{problems[0]}; nothing points to it now, choose another snapshot")
         rebuild_catalog(places, manifest)
     return manifest
 

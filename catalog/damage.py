@@ -6,8 +6,8 @@ is wrong with a store (`verify.py`).
 
 from pathlib import PurePosixPath
 
+from catalog.manifest import Manifest
 from catalog.places import Places, hash_file
-from catalog.store import Manifest
 
 
 def damaged_owners(places: Places, manifest: Manifest) -> frozenset[str]:

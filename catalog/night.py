@@ -28,20 +28,11 @@ from catalog.assignment import (
 from catalog.damage import damaged_owners
 from catalog.declarations import Desk, desk_from_texts, load_desk
 from catalog.gates import judge_market, silent_sessions
+from catalog.manifest import Manifest, StoredFile, Verdict
 from catalog.places import DESK_WIDE, Places, table_path
 from catalog.runs import Run, next_run, record_run, runs_table
-from catalog.store import (
-    Manifest,
-    StoredFile,
-    Verdict,
-    clean_leftovers,
-    current_snapshot,
-    link_table,
-    open_staging,
-    publish,
-    read_manifest,
-    write_table,
-)
+from catalog.standing import current_snapshot, read_manifest
+from catalog.store import clean_leftovers, link_table, open_staging, publish, write_table
 from catalog.summary import Summary, summarise
 from contracts.build import build_market
 from contracts.errors import RopewalkError, StoreError, UsageError

@@ -10,7 +10,7 @@ from typing import TYPE_CHECKING, Any
 
 from catalog.catalog_file import lay_views, quote_text
 from catalog.places import Places
-from catalog.store import current_snapshot, facts_of, read_manifest
+from catalog.standing import current_snapshot, facts_of, read_manifest
 from contracts.errors import StoreUnsound, UsageError
 from contracts.tables import DERIVED
 

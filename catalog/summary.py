@@ -6,7 +6,7 @@ Belongs here: gathering and wording the outcome. Does not belong here: deciding 
 from dataclasses import asdict, dataclass
 from typing import Any
 
-from catalog.store import Manifest, Verdict
+from catalog.manifest import Manifest, Verdict
 
 _TOLD = 10
 

@@ -12,18 +12,11 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from catalog.archive import read_archived, read_register, register_digest
+from catalog.manifest import MANIFEST, Manifest
 from catalog.places import Places, hash_file, write_lock
 from catalog.query import open_catalog, run_query
-from catalog.store import (
-    MANIFEST,
-    Manifest,
-    check_files,
-    current_snapshot,
-    find_snapshot,
-    read_catalog_hashes,
-    read_manifest,
-    rebuild_catalog,
-)
+from catalog.standing import check_files, current_snapshot, find_snapshot, read_catalog_hashes, read_manifest
+from catalog.store import rebuild_catalog
 from contracts.errors import StoreUnsound, UsageError
 from contracts.tables import TABLES
 

@@ -300,7 +300,7 @@ def verify(asked: Asked, deep: bool, repoint: bool, snapshot: str | None) -> Exi
     """
     from catalog import verify as checks
     from catalog.places import Places
-    from catalog.store import find_snapshot
+    from catalog.standing import find_snapshot
 
     where = asked.where()
     places = Places(where.store)
@@ -347,7 +347,7 @@ def sql(asked: Asked, query: str | None, snapshot: str | None) -> Exit:
     """
     from catalog.places import Places
     from catalog.query import how_to_open, open_catalog, run_query
-    from catalog.store import find_snapshot
+    from catalog.standing import find_snapshot
 
     places = Places(asked.where().store)
     if query is None:

@@ -12,18 +12,10 @@ import pyarrow as pa
 import pyarrow.parquet as pq
 import pytest
 
+from catalog.manifest import Manifest
 from catalog.places import Places, write_lock
-from catalog.store import (
-    Manifest,
-    clean_leftovers,
-    current_snapshot,
-    link_table,
-    next_sequence,
-    open_staging,
-    publish,
-    read_manifest,
-    write_table,
-)
+from catalog.standing import current_snapshot, next_sequence, read_manifest
+from catalog.store import clean_leftovers, link_table, open_staging, publish, write_table
 from catalog.verify import verify_store
 from contracts.errors import StoreError, StoreUnsound, UsageError
 from contracts.tables import BARS, FINDINGS, SERIES, make_table

@@ -11,7 +11,7 @@ from catalog.declarations import SAMPLE_DESK, load_desk
 from catalog.deep import rederive
 from catalog.night import begin, build_one, finish
 from catalog.places import Places, write_lock
-from catalog.store import current_snapshot, read_manifest
+from catalog.standing import current_snapshot, read_manifest
 from catalog.verify import verify_store
 from contracts.errors import DeskError
 from tests.integration.tiny import run_night, write_desk, write_raw

@@ -18,8 +18,7 @@ from functools import partial
 from io import FileIO
 from pathlib import Path
 
-import pyarrow as pa
-
+from catalog.packed import expand, pack
 from catalog.places import PART, Places, check_written, store_errors, sync_folder, write_new, write_whole
 from contracts.errors import IntakeError, StoreError, StoreUnsound
 from contracts.unpack import LARGEST_TEXT, list_members
@@ -168,14 +167,9 @@ def read_archived(places: Places, sha: str) -> bytes:
     except OSError as error:
         raise StoreUnsound(f"{path}: cannot be read: {error.strerror}") from error
     try:
-        with pa.CompressedInputStream(pa.BufferReader(packed), "zstd") as stream:
-            data: bytes = stream.read(_LARGEST_FILE + 1)
-    except (OSError, pa.ArrowException) as error:
-        raise StoreUnsound(f"{path}: seen damaged bytes ({error}); expected the raw file {sha}") from error
-    seen = hashlib.sha256(data).hexdigest()
-    if seen != sha:
-        raise StoreUnsound(f"{path}: seen bytes with SHA-256 {seen}; expected {sha}")
-    return data
+        return expand(packed, sha)
+    except ValueError as error:
+        raise StoreUnsound(f"{path}: {error}; expected the raw file {sha}") from error
 
 
 def keep_texts(places: Places, texts: dict[str, bytes]) -> dict[str, str]:
@@ -383,7 +377,7 @@ def _keep_bytes(
             target.parent.mkdir(exist_ok=True)
             # Two paths may bring the same bytes at once, hence a name of the thread's own.
             part = target.with_name(f".{sha}-{threading.get_ident()}{PART}")
-            write_new(part, pa.Codec("zstd").compress(data, asbytes=True))
+            write_new(part, pack(data))
             os.replace(part, target)
     return path, sha, len(data), is_container
 

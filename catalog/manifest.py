@@ -6,11 +6,13 @@ which snapshots there are (`standing.py`), how one comes to be (`store.py`).
 
 import hashlib
 import json
-from typing import Annotated, Any, Literal
+from typing import Annotated, Any, Final, Literal
 
 from pydantic import BaseModel, ConfigDict, Field, model_validator
 
 MANIFEST = "manifest.json"
+PUBLISHED: Final = "published"
+HELD_BACK: Final = "held back"
 _PATH = r"[a-z_]{1,40}(/[A-Za-z0-9_][A-Za-z0-9_.-]{0,100}){1,6}"
 
 

@@ -6,6 +6,7 @@ report of all that is wrong with a store (`verify.py`).
 
 import json
 import os
+from collections.abc import Iterable
 from concurrent.futures import ThreadPoolExecutor
 from pathlib import Path
 
@@ -138,10 +139,15 @@ def check_files(folder: Path, manifest: Manifest) -> list[str]:
         links = [os.path.join(above, name) for name in folders if os.path.islink(os.path.join(above, name))]
         problems += [f"{os.path.relpath(link, folder)}: is a link; expected a folder" for link in links]
     problems += [f"{path}: is not listed in the manifest" for path in sorted(seen - {*manifest.files, MANIFEST})]
+    return [*problems, *check_each(folder, manifest.files.values()).values()]
+
+
+def check_each(folder: Path, files: Iterable[StoredFile]) -> dict[str, str]:
+    """What is wrong with files of a snapshot's folder, by path, in words; of a sound file nothing."""
+    listed = list(files)
     with ThreadPoolExecutor(_READERS) as pool:
-        found = pool.map(lambda file: _check_file(folder, file), manifest.files.values())
-        problems += [problem for problem in found if problem]
-    return problems
+        found = pool.map(lambda file: _check_file(folder, file), listed)
+        return {file.path: problem for file, problem in zip(listed, found, strict=True) if problem}
 
 
 def _check_file(folder: Path, file: StoredFile) -> str | None:

@@ -245,7 +245,12 @@ def _switch(places: Places, catalog: Path, current: Path) -> None:
         places.catalog.with_name(f"{places.catalog.name}.wal").unlink(missing_ok=True)
         os.replace(catalog, places.catalog)
         os.replace(current, places.current)
+    try:
         sync_folder(places.store)
+    except OSError as error:
+        told = "the snapshot is switched to, and the disk does not confirm it"
+        message = f"{told}: {error.strerror}; a power cut now may bring back the one before"
+        raise StoreError(message) from error
 
 
 def rebuild_catalog(places: Places, manifest: Manifest) -> None:

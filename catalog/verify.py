@@ -17,7 +17,7 @@ from catalog.places import Places, hash_file, write_lock
 from catalog.query import open_catalog, run_query
 from catalog.standing import check_files, current_snapshot, find_snapshot, read_catalog_hashes, read_manifest
 from catalog.store import rebuild_catalog
-from contracts.errors import StoreUnsound, UsageError
+from contracts.errors import StoreError, StoreUnsound, UsageError
 from contracts.tables import TABLES
 
 if TYPE_CHECKING:
@@ -41,7 +41,7 @@ class Report:
 def verify_store(places: Places, snapshot: str | None = None) -> Report:
     """Check a snapshot (by name or number; else the current one), the archive behind it, and a current catalog.
 
-    Hashes every file of the snapshot and every raw file it names, looks for what is missing or not listed,
+    Hashes every file of the snapshot and every raw file in the register, looks for what is missing or not listed,
     and runs each rule of `soundness/`, which returns the rows that offend. Whatever is wrong is a problem of
     the report; raises UsageError where nothing is published or the snapshot named is not there.
     """
@@ -67,7 +67,8 @@ def verify_store(places: Places, snapshot: str | None = None) -> Report:
         problems += _gather(partial(_read_only, places, sha))
     if manifest.name == current:
         problems += _gather(partial(_check_catalog, places, manifest))
-    files_checked = len(manifest.files) + len({*manifest.desk_files.values(), *(file for _, file in named)})
+    raw_files = {*manifest.desk_files.values(), *(file for _, file in named), *_registered(places)}
+    files_checked = len(manifest.files) + len(raw_files)
     try:
         connection = open_catalog(places, manifest.name)
     except StoreUnsound as error:
@@ -172,8 +173,16 @@ def _raw_files_named(folder: Path, manifest: Manifest) -> list[tuple[str, str]]:
     return sorted(named)
 
 
+def _registered(places: Places) -> set[str]:
+    """SHA-256 of every raw file in the register; none where it is damaged, which has been told."""
+    try:
+        return {arrival.file for arrival in read_register(places)}
+    except StoreError:
+        return set()
+
+
 def _check_archive(places: Places, named: list[tuple[str, str]]) -> list[str]:
-    """What of a snapshot's raw files, given by path and SHA-256, is not in the archive or its register."""
+    """What of a snapshot's raw files, given by path and SHA-256, and of all registered ones is not as it was."""
     arrivals = read_register(places)
     registered = {(arrival.path, arrival.file) for arrival in arrivals}
     problems = [
@@ -181,16 +190,14 @@ def _check_archive(places: Places, named: list[tuple[str, str]]) -> list[str]:
         for path, file in named
         if (path, file) not in registered
     ]
-    hashed = sorted({file for _, file in named})
+    of_snapshot = {file for _, file in named}
+    others = {arrival.file for arrival in arrivals} - of_snapshot
+    gone = sorted(file for file in others if not places.archived(file).is_file())
+    problems += [f"{places.archived(file)}: is registered and not there" for file in gone]
     with ThreadPoolExecutor(_READERS) as pool:
+        hashed = sorted((of_snapshot | others) - set(gone))
         for found in pool.map(lambda file: _gather(partial(_read_only, places, file)), hashed):
             problems += found
-    others = sorted({arrival.file for arrival in arrivals} - set(hashed))
-    problems += [
-        f"{places.archived(file)}: is registered and not there"
-        for file in others
-        if not places.archived(file).is_file()
-    ]
     return problems
 
 

@@ -291,8 +291,8 @@ def test_a_failed_fsync_abandons_the_snapshot_whichever_it_is(
                 # Removing what was staged forces nothing more to the disk.
                 assert count == failing
                 last_failed = failing
-                if "the next run switches" in str(error):
-                    # The renames are done, and only whether they are on the disk is not known.
+                if str(error).startswith("the snapshot is switched to, and the disk does not confirm it: "):
+                    assert current_snapshot(places) != first.name
                     break
                 assert names_in(places) == [first.name]
                 assert current_snapshot(places) == first.name

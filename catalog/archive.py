@@ -19,7 +19,7 @@ from io import FileIO
 from pathlib import Path
 
 from catalog.packed import expand, pack
-from catalog.places import PART, Places, check_written, store_errors, sync_folder, write_new, write_whole
+from catalog.places import PART, Places, append_whole, store_errors, sync_folder, write_new, write_whole
 from contracts.errors import IntakeError, StoreError, StoreUnsound
 from contracts.unpack import LARGEST_TEXT, list_members
 
@@ -397,16 +397,10 @@ def _append_register(places: Places, whole: int, fresh: list[Arrival]) -> None:
     lines = []
     for left, arrival in zip(range(len(fresh) - 1, -1, -1), fresh, strict=True):
         lines.append(json.dumps({**vars(arrival), "left": left}) + "\n")
-    content = "".join(lines).encode()
     opened = os.open(places.register, os.O_RDWR | os.O_CREAT | os.O_NOFOLLOW | os.O_CLOEXEC, 0o644)
     try:
         os.ftruncate(opened, whole)
-        os.lseek(opened, whole, os.SEEK_SET)
-        view = memoryview(content)
-        while view:
-            view = view[os.write(opened, view) :]
-        os.fsync(opened)
-        check_written(opened, whole, content)
+        append_whole(opened, whole, "".join(lines).encode())
     finally:
         os.close(opened)
     sync_folder(places.archive)

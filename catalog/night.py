@@ -30,7 +30,7 @@ from catalog.gates import judge_market, silent_sessions
 from catalog.laying import lay_files
 from catalog.manifest import HELD_BACK, PUBLISHED, Manifest, StoredFile, Verdict
 from catalog.mending import damaged_owners
-from catalog.places import DESK_WIDE, Places
+from catalog.places import DESK_WIDE, Places, store_errors, write_whole
 from catalog.runs import Run, next_run, record_run, runs_table
 from catalog.standing import current_snapshot, read_manifest
 from catalog.store import clean_leftovers, open_staging, publish, write_table
@@ -149,10 +149,9 @@ def _remember(places: Places, desk: Desk, assignment: Assignment, digests: dict[
         "digests": digests,
         "told": told,
     }
-    places.intake.mkdir(parents=True, exist_ok=True)
-    draft = _memory(places).with_suffix(".draft")
-    draft.write_text(json.dumps(content), encoding="utf-8")
-    draft.replace(_memory(places))
+    with store_errors("the work of the night could not be written down"):
+        places.intake.mkdir(parents=True, exist_ok=True)
+        write_whole(_memory(places), json.dumps(content).encode())
 
 
 def _recall(places: Places) -> dict[str, Any]:

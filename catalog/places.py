@@ -159,11 +159,7 @@ def write_new(path: Path, data: bytes, mode: int = 0o444) -> None:
     opened = os.open(path, os.O_RDWR | os.O_CREAT | os.O_EXCL | os.O_NOFOLLOW | os.O_CLOEXEC, mode)
     try:
         try:
-            view = memoryview(data)
-            while view:
-                view = view[os.write(opened, view) :]
-            os.fsync(opened)
-            check_written(opened, 0, data)
+            append_whole(opened, 0, data)
         finally:
             os.close(opened)
     except BaseException:
@@ -171,7 +167,17 @@ def write_new(path: Path, data: bytes, mode: int = 0o444) -> None:
         raise
 
 
-def check_written(opened: int, start: int, data: bytes) -> None:
+def append_whole(opened: int, end: int, data: bytes) -> None:
+    """Write at the end of an open file, force it to the disk and read it back; raises OSError."""
+    os.lseek(opened, end, os.SEEK_SET)
+    view = memoryview(data)
+    while view:
+        view = view[os.write(opened, view) :]
+    os.fsync(opened)
+    _check_written(opened, end, data)
+
+
+def _check_written(opened: int, start: int, data: bytes) -> None:
     """Read an open file from `start` on; raises OSError where it does not hold just these bytes."""
     view, at = memoryview(data), 0
     while part := os.pread(opened, _READ_BACK, start + at):

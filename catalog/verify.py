@@ -107,7 +107,7 @@ def repoint(places: Places, snapshot: str | None = None) -> Manifest:
         manifest = read_manifest(places, find_snapshot(places, snapshot) if snapshot is not None else None)
         problems = check_files(places.snapshot(manifest.name), manifest) if snapshot is not None else []
         if problems:
-            raise StoreUnsound(f"{manifest.name}/{problems[0]}; nothing points to it now, choose another snapshot")
+            raise StoreUnsound(f"{manifest.name}/{problems[0]}; it was not pointed to, choose another snapshot")
         rebuild_catalog(places, manifest)
     return manifest
 

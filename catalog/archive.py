@@ -18,9 +18,8 @@ from functools import partial
 from io import FileIO
 from pathlib import Path
 
-import pyarrow as pa
-
-from catalog.places import PART, Places, store_errors, sync_folder, write_new, write_whole
+from catalog.packed import expand, pack
+from catalog.places import PART, Places, append_whole, store_errors, sync_folder, write_new, write_whole
 from contracts.errors import IntakeError, StoreError, StoreUnsound
 from contracts.unpack import LARGEST_TEXT, list_members
 
@@ -168,14 +167,9 @@ def read_archived(places: Places, sha: str) -> bytes:
     except OSError as error:
         raise StoreUnsound(f"{path}: cannot be read: {error.strerror}") from error
     try:
-        with pa.CompressedInputStream(pa.BufferReader(packed), "zstd") as stream:
-            data: bytes = stream.read(_LARGEST_FILE + 1)
-    except (OSError, pa.ArrowException) as error:
-        raise StoreUnsound(f"{path}: seen damaged bytes ({error}); expected the raw file {sha}") from error
-    seen = hashlib.sha256(data).hexdigest()
-    if seen != sha:
-        raise StoreUnsound(f"{path}: seen bytes with SHA-256 {seen}; expected {sha}")
-    return data
+        return expand(packed, sha)
+    except ValueError as error:
+        raise StoreUnsound(f"{path}: {error}; expected the raw file {sha}") from error
 
 
 def keep_texts(places: Places, texts: dict[str, bytes]) -> dict[str, str]:
@@ -383,7 +377,7 @@ def _keep_bytes(
             target.parent.mkdir(exist_ok=True)
             # Two paths may bring the same bytes at once, hence a name of the thread's own.
             part = target.with_name(f".{sha}-{threading.get_ident()}{PART}")
-            write_new(part, pa.Codec("zstd").compress(data, asbytes=True))
+            write_new(part, pack(data))
             os.replace(part, target)
     return path, sha, len(data), is_container
 
@@ -403,14 +397,10 @@ def _append_register(places: Places, whole: int, fresh: list[Arrival]) -> None:
     lines = []
     for left, arrival in zip(range(len(fresh) - 1, -1, -1), fresh, strict=True):
         lines.append(json.dumps({**vars(arrival), "left": left}) + "\n")
-    opened = os.open(places.register, os.O_WRONLY | os.O_CREAT | os.O_NOFOLLOW | os.O_CLOEXEC, 0o644)
+    opened = os.open(places.register, os.O_RDWR | os.O_CREAT | os.O_NOFOLLOW | os.O_CLOEXEC, 0o644)
     try:
         os.ftruncate(opened, whole)
-        os.lseek(opened, whole, os.SEEK_SET)
-        view = memoryview("".join(lines).encode())
-        while view:
-            view = view[os.write(opened, view) :]
-        os.fsync(opened)
+        append_whole(opened, whole, "".join(lines).encode())
     finally:
         os.close(opened)
     sync_folder(places.archive)

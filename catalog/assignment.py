@@ -15,7 +15,7 @@ from typing import Any
 
 from catalog.archive import Arrival, Intake, read_archived
 from catalog.declarations import Desk
-from catalog.places import Places
+from catalog.places import Places, write_whole
 from contracts.build import Inputs
 from contracts.errors import IntakeError
 from contracts.findings import Finding, Kind, Severity
@@ -171,9 +171,7 @@ class _MarketMemory:
         if self.is_changed:
             with contextlib.suppress(OSError):
                 self.path.parent.mkdir(parents=True, exist_ok=True)
-                draft = self.path.with_suffix(".draft")
-                draft.write_text(json.dumps(self.known, sort_keys=True), encoding="utf-8")
-                draft.replace(self.path)
+                write_whole(self.path, json.dumps(self.known, sort_keys=True).encode())
 
 
 def _raw_file(

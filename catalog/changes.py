@@ -22,8 +22,9 @@ from catalog.causes import CAUSES, Cause, Marked, Step, mark_changes
 from catalog.changed_rows import Group, Row, groups_of, reasons_of, rows_of
 from catalog.declarations import Desk
 from catalog.kept_desk import changed_keys, desk_of, market_file
+from catalog.manifest import Manifest
 from catalog.places import Places, table_path
-from catalog.store import Manifest, find_snapshot, origin_of, read_manifest
+from catalog.standing import find_snapshot, origin_of, read_manifest
 from contracts.build import build_market
 from contracts.errors import RopewalkError, StoreUnsound, UsageError
 from contracts.tables import BARS, FILES, FINDINGS, MARKET_TABLES, REJECTS, ROLLS, SERIES, TERMS

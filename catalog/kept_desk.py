@@ -9,8 +9,8 @@ from typing import Any
 
 from catalog.archive import read_archived
 from catalog.declarations import Desk, desk_from_texts
+from catalog.manifest import Manifest
 from catalog.places import Places
-from catalog.store import Manifest
 from contracts.errors import StoreUnsound
 
 # What of desk.toml can change a table.

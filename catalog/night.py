@@ -27,31 +27,20 @@ from catalog.assignment import (
 )
 from catalog.declarations import Desk, desk_from_texts, load_desk
 from catalog.gates import judge_market, silent_sessions
-from catalog.places import DESK_WIDE, Places, table_path
+from catalog.laying import lay_files
+from catalog.manifest import HELD_BACK, PUBLISHED, Manifest, StoredFile, Verdict
+from catalog.mending import damaged_owners
+from catalog.places import DESK_WIDE, Places, store_errors, write_whole
 from catalog.runs import Run, next_run, record_run, runs_table
-from catalog.store import (
-    Manifest,
-    StoredFile,
-    Verdict,
-    clean_leftovers,
-    current_snapshot,
-    link_table,
-    open_staging,
-    publish,
-    read_manifest,
-    write_table,
-)
+from catalog.standing import current_snapshot, read_manifest
+from catalog.store import clean_leftovers, open_staging, publish, write_table
 from catalog.summary import Summary, summarise
 from contracts.build import build_market
-from contracts.errors import RopewalkError, StoreError, UsageError
+from contracts.errors import RopewalkError, StoreError, StoreUnsound, UsageError
 from contracts.findings import Finding, Kind, Severity, findings_table
 from contracts.tables import COVERAGE, FINDINGS, MARKET_TABLES, RUNS, make_table
 
-PUBLISHED: Final = "published"
-HELD_BACK: Final = "held back"
 WAIVED: Final = "gate waived by"
-# Tables that tell of tonight even where a market's prices are held back.
-_TOLD_TONIGHT = ("findings", "rejects", "files")
 
 
 @dataclass(frozen=True)
@@ -81,10 +70,11 @@ def begin(
 ) -> Night:  # fmt: skip
     """Load the desk, take in what arrived, and say which markets have to be built.
 
-    With `rehash` every raw file is read, and not only those whose size or time changed; `waived` are market,
-    reason and person of gates that hold nothing back tonight. The caller holds the store's write lock. Raises
-    DeskError before anything is touched, UsageError for a raw folder that is not there while the archive is
-    empty, and for a waived market that the desk does not declare.
+    With `rehash` every raw file is read, and not only those whose size or time changed, and markets whose
+    published tables are damaged are built again; `waived` are market, reason and person of gates that hold
+    nothing back tonight. The caller holds the store's write lock. Raises DeskError before anything is touched,
+    UsageError for a raw folder that is not there while the archive is empty, and for a waived market that the
+    desk does not declare.
     """
     started = datetime.datetime.now(datetime.UTC).isoformat()
     desk = load_desk(desk_path)
@@ -101,11 +91,13 @@ def begin(
     assignment = assign_files(desk, intake, places)
     digests = {code: inputs_digest(desk, code, files) for code, files in assignment.files.items()}
     last = _last_manifest(places)
-    unchanged = tuple(code for code in desk.markets if _is_unchanged(last, code, digests[code]))
+    damaged = damaged_owners(places, last) if rehash and last is not None else frozenset()
+    unchanged = tuple(code for code in desk.markets if _is_unchanged(last, code, digests[code]) and code not in damaged)
     told = _desk_digest(assignment)
     nothing_new = (
         last is not None
         and not waived
+        and not damaged
         and all(code in last.markets and last.markets[code].inputs == digests[code] for code in desk.markets)
         and set(last.markets) == set(desk.markets)
         and last.desk == desk.digest
@@ -157,10 +149,9 @@ def _remember(places: Places, desk: Desk, assignment: Assignment, digests: dict[
         "digests": digests,
         "told": told,
     }
-    places.intake.mkdir(parents=True, exist_ok=True)
-    draft = _memory(places).with_suffix(".draft")
-    draft.write_text(json.dumps(content), encoding="utf-8")
-    draft.replace(_memory(places))
+    with store_errors("the work of the night could not be written down"):
+        places.intake.mkdir(parents=True, exist_ok=True)
+        write_whole(_memory(places), json.dumps(content).encode())
 
 
 def _recall(places: Places) -> dict[str, Any]:
@@ -176,9 +167,9 @@ def build_one(night: Night, market: str) -> dict[str, Any]:
     """Build one market into the staging folder.
 
     Returns plain values: market, files (path below the snapshot -> sha256, rows, bytes), facts, worst
-    (findings with the largest impact), error (None, or why the market cannot be built), rows, seconds. A
-    market that cannot be built is an answer, not an exception; a store that cannot be written raises
-    StoreError.
+    (findings with the largest impact), error (None, or why the market cannot be built), rows, seconds, and
+    is_unsound where a damaged archive is why. A market that cannot be built is an answer, not an exception; a
+    store that cannot be written raises StoreError.
     """
     started = time.monotonic()
     places = Places(Path(night.store))
@@ -190,10 +181,15 @@ def build_one(night: Night, market: str) -> dict[str, Any]:
         if not entries:
             raise ValueError(f"{market}: no raw file is of this market")
         built = build_market(gather_inputs(desk, market, entries, places))
+    except StoreUnsound as error:
+        # One damaged raw file in the archive holds its market back, and no other.
+        result["error"] = f"{error}; build --rehash writes it anew where the raw folder still has it"
+        result["is_unsound"] = True
     except StoreError:
         raise
     except (RopewalkError, ValueError) as error:
         result["error"] = str(error)
+    if result["error"] is not None:
         result["seconds"] = time.monotonic() - started
         return result
     metadata = table_stamp(desk, market, entries)
@@ -241,10 +237,11 @@ def finish(night: Night, results: list[dict[str, Any]]) -> Summary:
     facts |= {result["market"]: result["facts"] for result in results if result["error"] is None}
     verdicts = _judge(desk, facts, results, memory["digests"], last, night.waived)
     staging = Path(night.staging)
-    files = _lay_files(places, staging, verdicts, results, last)
+    laid = lay_files(places, staging, verdicts, results, last)
+    files, verdicts, notes = laid.files, laid.verdicts, tuple(laid.notes)
     if not any(path.startswith("series/") for path in files):
         reasons = "; ".join(f"{code}: {verdict.reason}" for code, verdict in verdicts.items())
-        raise StoreError(f"no market can be published, and none was before: {reasons}")
+        raise StoreError(f"no market can be published, and nothing of one is there to be served: {reasons}")
     metadata = {"desk": desk.digest, "code": code_digest()}
     run = Run(
         next_run(places), night.command, night.started_at, _now(), "published", len(desk.markets),
@@ -275,8 +272,12 @@ def finish(night: Night, results: list[dict[str, Any]]) -> Summary:
         },
     )  # fmt: skip
     manifest = publish(places, staging, draft)
-    record_run(places, replace(run, snapshot=manifest.name))
-    return summarise(manifest, published_now=True, results=results, worst=worst)
+    try:
+        record_run(places, replace(run, snapshot=manifest.name))
+    except OSError as error:
+        # The switch is done; that it is missing in the log of runs must not say otherwise.
+        notes += (f"published, but the log of runs could not be written: {error.strerror} ({places.runs})",)
+    return replace(summarise(manifest, published_now=True, results=results, worst=worst), notes=notes)
 
 
 def _now() -> str:
@@ -290,6 +291,7 @@ def _judge(
     """The verdict on every market of the desk."""
     waivers = {code: f"{WAIVED} {person}: {why}" for code, why, person in waived}
     errors = {result["market"]: result["error"] for result in results if result["error"] is not None}
+    unsound = {result["market"] for result in results if result.get("is_unsound")}
     dates = [datetime.date.fromisoformat(fact["last_session"]) for fact in facts.values()]
     data_date = max(dates, default=datetime.date.min)
     verdicts = {}
@@ -307,33 +309,14 @@ def _judge(
         if before is not None and before.state == PUBLISHED and last is not None:
             good = last.name
         # The facts are those of the tables served; only the findings are tonight's.
+        # Of what could not be read nothing is known; without inputs every night tries again.
+        inputs = "" if code in unsound else digests[code]
         served = dict(before.facts) if before is not None else {}
         served["findings"] = facts.get(code, {}).get("findings", {})
         verdicts[code] = Verdict(
-            state=HELD_BACK, reason="; ".join(reasons), inputs=digests[code], facts=served, last_good_snapshot=good
+            state=HELD_BACK, reason="; ".join(reasons), inputs=inputs, facts=served, last_good_snapshot=good
         )
     return verdicts
-
-
-def _lay_files(
-    places: Places, staging: Path, verdicts: dict[str, Verdict], results: list[dict[str, Any]], last: Manifest | None
-) -> dict[str, StoredFile]:
-    """Keep, link or drop each market's files; returns what the snapshot holds of them."""
-    built = {result["market"]: result["files"] for result in results}
-    files: dict[str, StoredFile] = {}
-    for code, verdict in verdicts.items():
-        fresh = {path: StoredFile(path=path, **entry) for path, entry in built.get(code, {}).items()}
-        for table in MARKET_TABLES:
-            path = table_path(table.name, code)
-            is_ours = path in fresh and (verdict.state == PUBLISHED or table.name in _TOLD_TONIGHT)
-            if is_ours:
-                files[path] = fresh[path]
-                continue
-            (staging / path).unlink(missing_ok=True)
-            if last is not None and path in last.files:
-                link_table(staging, places.snapshot(last.name), path)
-                files[path] = last.files[path]
-    return files
 
 
 def _desk_findings(memory: dict[str, Any], desk: Desk, staging: Path, files: dict[str, StoredFile]) -> list[Finding]:

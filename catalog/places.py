@@ -15,7 +15,7 @@ import stat
 import sys
 import time
 from collections.abc import Iterator
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -28,6 +28,7 @@ PART = ".part"
 _SNAPSHOT = re.compile(r"(\d{6,})-[0-9a-f]{12}")
 _MARKET = re.compile(CODE)
 _TABLE = re.compile(r"[a-z_]{1,40}")
+_READ_BACK = 1 << 20
 # DuckDB takes these for a pattern of several files wherever it is given a path.
 _UNNAMEABLE = re.compile(r"[*?\[\]\x00-\x1f\x7f]")
 
@@ -153,19 +154,38 @@ def write_new(path: Path, data: bytes, mode: int = 0o444) -> None:
     """Write a file that must not exist yet and force it to the disk; raises OSError, leaving nothing.
 
     A failed fsync is never tried again: after one, the kernel may report success for pages it has dropped.
+    What was written is read back, and other bytes are an error.
     """
-    opened = os.open(path, os.O_WRONLY | os.O_CREAT | os.O_EXCL | os.O_NOFOLLOW | os.O_CLOEXEC, mode)
+    opened = os.open(path, os.O_RDWR | os.O_CREAT | os.O_EXCL | os.O_NOFOLLOW | os.O_CLOEXEC, mode)
     try:
         try:
-            view = memoryview(data)
-            while view:
-                view = view[os.write(opened, view) :]
-            os.fsync(opened)
+            append_whole(opened, 0, data)
         finally:
             os.close(opened)
     except BaseException:
         path.unlink(missing_ok=True)
         raise
+
+
+def append_whole(opened: int, end: int, data: bytes) -> None:
+    """Write at the end of an open file, force it to the disk and read it back; raises OSError."""
+    os.lseek(opened, end, os.SEEK_SET)
+    view = memoryview(data)
+    while view:
+        view = view[os.write(opened, view) :]
+    os.fsync(opened)
+    _check_written(opened, end, data)
+
+
+def _check_written(opened: int, start: int, data: bytes) -> None:
+    """Read an open file from `start` on; raises OSError where it does not hold just these bytes."""
+    view, at = memoryview(data), 0
+    while part := os.pread(opened, _READ_BACK, start + at):
+        if part != view[at : at + len(part)]:
+            break
+        at += len(part)
+    if part or at != len(data):
+        raise OSError(errno.EIO, "what is read back differs from what was written; is the disk sound?")
 
 
 def write_whole(path: Path, data: bytes, mode: int = 0o644) -> None:
@@ -243,7 +263,9 @@ def write_lock(places: Places) -> Iterator[None]:
     finally:
         if opened in _held:
             _held.remove(opened)
-            os.ftruncate(opened, 0)
+            # Whoever holds it counts, not what the file says; a night that has published has not failed here.
+            with suppress(OSError):
+                os.ftruncate(opened, 0)
         os.close(opened)
 
 

@@ -14,7 +14,7 @@ from pathlib import Path
 
 from catalog.places import Places, store_errors, write_lock, write_whole
 from catalog.runs import read_runs
-from catalog.store import current_snapshot, find_snapshot, list_snapshots, named_snapshots, read_manifest
+from catalog.standing import current_snapshot, find_snapshot, list_snapshots, named_snapshots, read_manifest
 from contracts.errors import StoreUnsound, UsageError
 
 LEAST_DAYS = 7

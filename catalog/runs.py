@@ -11,7 +11,7 @@ from dataclasses import asdict, dataclass
 
 import pyarrow as pa
 
-from catalog.places import Places
+from catalog.places import Places, append_whole
 from contracts.tables import RUNS, make_table
 
 
@@ -51,13 +51,16 @@ def next_run(places: Places) -> int:
 
 
 def record_run(places: Places, run: Run) -> None:
-    """Append one run and see it onto the disk."""
+    """Append one run, see it onto the disk and read it back; raises OSError."""
     places.runs.parent.mkdir(parents=True, exist_ok=True)
-    is_cut = places.runs.exists() and not places.runs.read_bytes().endswith(b"\n") and places.runs.stat().st_size > 0
-    with places.runs.open("a", encoding="utf-8") as file:
-        file.write(("\n" if is_cut else "") + json.dumps(asdict(run), sort_keys=True) + "\n")
-        file.flush()
-        os.fsync(file.fileno())
+    opened = os.open(places.runs, os.O_RDWR | os.O_CREAT | os.O_NOFOLLOW | os.O_CLOEXEC, 0o644)
+    try:
+        end = os.fstat(opened).st_size
+        is_cut = end > 0 and os.pread(opened, 1, end - 1) != b"\n"
+        line = ("\n" if is_cut else "") + json.dumps(asdict(run), sort_keys=True) + "\n"
+        append_whole(opened, end, line.encode())
+    finally:
+        os.close(opened)
 
 
 def runs_table(places: Places, current: Run) -> pa.Table:

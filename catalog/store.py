@@ -1,7 +1,7 @@
 """Snapshots: staged, read back, named, and only then pointed to.
 
-Belongs here: the staging folder, the tables' files, the manifest and the switch. Does not belong here: which
-tables a night publishes (`night.py`), the views on them (`catalog_file.py`).
+Belongs here: the staging folder, the tables' files and the switch. Does not belong here: reading what stands
+(`standing.py`), which tables a night publishes (`night.py`), the views on them (`catalog_file.py`).
 """
 
 import errno
@@ -10,17 +10,15 @@ import json
 import os
 import shutil
 import stat
-from concurrent.futures import ThreadPoolExecutor
 from pathlib import Path
-from typing import Annotated, Any, Literal
 
 import pyarrow as pa
 import pyarrow.compute as pc
 import pyarrow.parquet as pq
-from pydantic import BaseModel, ConfigDict, Field, ValidationError, model_validator
 
 from catalog.archive import sweep_arriving
-from catalog.catalog_file import SnapshotFacts, build_catalog
+from catalog.catalog_file import build_catalog
+from catalog.manifest import MANIFEST, Manifest, StoredFile
 from catalog.places import (
     DESK_WIDE,
     PART,
@@ -34,190 +32,21 @@ from catalog.places import (
     write_new,
     write_whole,
 )
-from catalog.places import write_lock as write_lock  # the writer's first step, so found here too
-from contracts.errors import StoreError, StoreUnsound, UsageError
+from catalog.standing import (
+    check_files,
+    current_snapshot,
+    facts_of,
+    next_sequence,
+    read_catalog_hashes,
+    read_manifest,
+    snapshots_there,
+)
+from contracts.errors import StoreError, StoreUnsound
 from contracts.tables import Table
 
-MANIFEST = "manifest.json"
 _STAGING = ".staging-"
 # Few rows a group let a reader of one session pass over most of a file.
 _ROWS_A_GROUP = 65_536
-_READERS = 4
-_PATH = r"[a-z_]{1,40}(/[A-Za-z0-9_][A-Za-z0-9_.-]{0,100}){1,6}"
-
-
-class _Stored(BaseModel):
-    """What the parts of a manifest have in common: nothing unknown, nothing changed later."""
-
-    model_config = ConfigDict(frozen=True, extra="forbid", strict=True)
-
-
-class StoredFile(_Stored):
-    """One file of a snapshot: path below it, SHA-256, rows (0 where it is no table), size in bytes."""
-
-    path: Annotated[str, Field(pattern=f"^{_PATH}$")]
-    sha256: Annotated[str, Field(pattern="^[0-9a-f]{64}$")]
-    rows: Annotated[int, Field(ge=0)]
-    bytes: Annotated[int, Field(ge=0)]
-
-
-class Verdict(_Stored):
-    """What became of one market: its state and why, the digest of its inputs, facts for the gates."""
-
-    state: Literal["published", "held back"]
-    reason: str = ""
-    inputs: str
-    last_good_snapshot: str | None = None
-    facts: dict[str, Any] = Field(default_factory=dict)
-
-
-class Manifest(_Stored):
-    """`manifest.json`; the class is the format. The name holds the hash of all the rest of it.
-
-    `publish` sets sequence, name and parent; desk and code are digests, intake the number of the newest one,
-    desk_files the SHA-256 under which the archive keeps each file of the desk, arrivals that of the register of
-    arrivals up to that intake.
-    """
-
-    format: Literal[1] = 1
-    sequence: Annotated[int, Field(ge=0)] = 0
-    name: str = ""
-    parent: str | None = None
-    files: dict[str, StoredFile]
-    desk: str
-    desk_files: dict[str, str] = Field(default_factory=dict)
-    arrivals: str = ""
-    code: str
-    packages: dict[str, str]
-    intake: int
-    markets: dict[str, Verdict]
-    summary: dict[str, Any] = Field(default_factory=dict)
-
-    @model_validator(mode="after")
-    def _keyed_by_path(self) -> "Manifest":
-        for path, file in self.files.items():
-            if path != file.path or ".." in path:
-                raise ValueError(f"seen the file {file.path!r} under {path!r}; expected its own path")
-        return self
-
-    def proper_name(self) -> str:
-        """The name this manifest's content gives it: sequence and hash."""
-        content = self.model_dump(mode="json", exclude={"name", *self._absent()})
-        text = json.dumps(content, sort_keys=True, separators=(",", ":"), allow_nan=False)
-        return f"{self.sequence:06d}-{hashlib.sha256(text.encode()).hexdigest()[:12]}"
-
-    def _absent(self) -> set[str]:
-        # A snapshot from before desk and register were recorded keeps the name it got.
-        return {name for name in ("desk_files", "arrivals") if not getattr(self, name)}
-
-    def as_bytes(self) -> bytes:
-        """The manifest as it is stored."""
-        content = self.model_dump(mode="json", exclude=self._absent())
-        return (json.dumps(content, sort_keys=True, indent=1, allow_nan=False) + "\n").encode()
-
-
-# What stands.
-
-
-def current_snapshot(places: Places) -> str | None:
-    """Name of the newest snapshot; None before the first. Raises StoreUnsound where CURRENT names none."""
-    try:
-        text = places.current.read_bytes()
-    except FileNotFoundError:
-        return None
-    except OSError as error:
-        raise StoreUnsound(f"{places.current}: cannot be read: {error.strerror}") from error
-    name = text.decode("ascii", "replace").removesuffix("\n")
-    if sequence_of(name) is None or not places.snapshot(name).is_dir():
-        raise StoreUnsound(
-            f"{places.current}: seen {name[:80]!a}; expected the name of a snapshot that is there "
-            f"(newest there: {_newest_names(places)})"
-        )
-    return name
-
-
-def find_snapshot(places: Places, asked: str) -> str:
-    """Name of the snapshot with this name, number or given name; raises UsageError where there is none."""
-    given = named_snapshots(places)
-    for number, name in _snapshots_there(places):
-        if asked == name or (asked.isdecimal() and int(asked) == number) or given.get(asked) == name:
-            return name
-    names = f"; named: {', '.join(sorted(given))}" if given else ""
-    expected = f"expected a snapshot that is there, by name or number (newest: {_newest_names(places)}{names})"
-    raise UsageError(f"{places.store}: seen {asked!r}; {expected}")
-
-
-def list_snapshots(places: Places) -> list[str]:
-    """Names of all snapshots, oldest first."""
-    return [name for _, name in _snapshots_there(places)]
-
-
-def named_snapshots(places: Places) -> dict[str, str]:
-    """Snapshots by the names people gave them; raises StoreUnsound where they cannot be read."""
-    try:
-        names = json.loads(places.names.read_bytes())
-    except FileNotFoundError:
-        return {}
-    except (OSError, ValueError) as error:
-        raise StoreUnsound(f"{places.names}: cannot be read: {error}; expected names of snapshots as JSON") from error
-    if not isinstance(names, dict) or not all(isinstance(value, str) for value in names.values()):
-        raise StoreUnsound(f"{places.names}: expected one JSON object of names and snapshots")
-    return names
-
-
-def origin_of(places: Places, manifest: Manifest, market: str) -> Manifest:
-    """The snapshot in which a market's tables were made: an older one where it is held back."""
-    while (good := manifest.markets[market].last_good_snapshot) is not None:
-        manifest = read_manifest(places, good)
-    return manifest
-
-
-def next_sequence(places: Places) -> int:
-    """The number the next snapshot will have."""
-    return max((number for number, _ in _snapshots_there(places)), default=0) + 1
-
-
-def read_manifest(places: Places, name: str | None = None) -> Manifest:
-    """The manifest of a snapshot, the current one by default.
-
-    Raises UsageError where there is no such snapshot, StoreUnsound where the manifest is damaged: its name
-    holds the hash of its content.
-    """
-    if name is None:
-        name = current_snapshot(places)
-        if name is None:
-            raise UsageError(f"{places.store}: nothing is published here yet; run ropewalk build first")
-    if sequence_of(name) is None or not places.snapshot(name).is_dir():
-        expected = f"expected a snapshot that is there (newest: {_newest_names(places)})"
-        raise UsageError(f"{places.store}: seen {name!r}; {expected}")
-    path = places.snapshot(name) / MANIFEST
-    try:
-        manifest = Manifest.model_validate_json(path.read_bytes())
-    except OSError as error:
-        raise StoreUnsound(f"{path}: cannot be read: {error.strerror}") from error
-    except ValidationError as error:
-        first = error.errors(include_url=False)[0]
-        place = ".".join(map(str, first["loc"])) or "the file"
-        raise StoreUnsound(f"{path}: {place}: {first['msg']}; expected a manifest as published") from None
-    if not manifest.name == manifest.proper_name() == name:
-        seen = f"seen the name {manifest.name!r} and content that makes {manifest.proper_name()!r}"
-        raise StoreUnsound(f"{path}: {seen}; expected both to be {name!r}, as the folder")
-    return manifest
-
-
-def _snapshots_there(places: Places) -> list[tuple[int, str]]:
-    """Number and name of every snapshot, oldest first."""
-    try:
-        names = os.listdir(places.snapshots)
-    except FileNotFoundError:
-        return []
-    except OSError as error:
-        raise StoreError(f"{places.snapshots}: cannot be read: {error.strerror}") from error
-    return sorted((number, name) for name in names if (number := sequence_of(name)) is not None)
-
-
-def _newest_names(places: Places) -> str:
-    return ", ".join(name for _, name in _snapshots_there(places)[-3:]) or "none"
 
 
 # Staging.
@@ -354,7 +183,8 @@ def publish(places: Places, staging: Path, manifest_draft: Manifest) -> Manifest
         manifest = unnamed.model_copy(update={"name": unnamed.proper_name()})
         problems = check_files(staging, manifest)
         if problems:
-            raise StoreError(f"nothing was published: {'; '.join(problems[:5])}")
+            mend = "where a table of the last snapshot is damaged, ropewalk build --rehash builds it again"
+            raise StoreError(f"nothing was published: {'; '.join(problems[:5])}; {mend}")
         with store_errors("nothing was published: the snapshot could not be completed"):
             write_new(staging / MANIFEST, manifest.as_bytes())
             for folder, _, _ in os.walk(staging, topdown=False):
@@ -381,44 +211,6 @@ def publish(places: Places, staging: Path, manifest_draft: Manifest) -> Manifest
     return manifest
 
 
-def check_files(folder: Path, manifest: Manifest) -> list[str]:
-    """What differs between a snapshot's folder and its manifest, in words; empty where nothing does."""
-    problems = []
-    seen = set()
-    for above, folders, names in os.walk(folder):
-        seen |= {os.path.relpath(os.path.join(above, name), folder) for name in names}
-        links = [os.path.join(above, name) for name in folders if os.path.islink(os.path.join(above, name))]
-        problems += [f"{os.path.relpath(link, folder)}: is a link; expected a folder" for link in links]
-    problems += [f"{path}: is not listed in the manifest" for path in sorted(seen - {*manifest.files, MANIFEST})]
-    with ThreadPoolExecutor(_READERS) as pool:
-        found = pool.map(lambda file: _check_file(folder, file), manifest.files.values())
-        problems += [problem for problem in found if problem]
-    return problems
-
-
-def _check_file(folder: Path, file: StoredFile) -> str | None:
-    try:
-        size, digest = hash_file(folder / file.path)
-    except OSError as error:
-        return f"{file.path}: cannot be read: {error.strerror}"
-    if size != file.bytes:
-        return f"{file.path}: seen {size:,} bytes; expected {file.bytes:,}"
-    return None if digest == file.sha256 else f"{file.path}: seen SHA-256 {digest}; expected {file.sha256}"
-
-
-def facts_of(places: Places, manifest: Manifest) -> SnapshotFacts:
-    """What the catalog says of a snapshot, and where its files are."""
-    return SnapshotFacts(
-        name=manifest.name,
-        sequence=manifest.sequence,
-        parent=manifest.parent,
-        desk=manifest.desk,
-        code=manifest.code,
-        folder=places.snapshot(manifest.name),
-        files=tuple(sorted(manifest.files)),
-    )
-
-
 def _prepare_switch(places: Places, manifest: Manifest) -> tuple[Path, Path]:
     """Write the new catalog and the new CURRENT beside the old ones; raises StoreError, leaving neither."""
     with store_errors("the new catalog could not be written"):
@@ -436,19 +228,14 @@ def _prepare_switch(places: Places, manifest: Manifest) -> tuple[Path, Path]:
 def _note_catalog(places: Places, name: str, catalog: Path) -> None:
     """Record the hash of a catalog that is about to be switched to, beside that of the one it replaces."""
     known = read_catalog_hashes(places)
-    current = current_snapshot(places)
+    try:
+        current = current_snapshot(places)
+    except StoreUnsound:
+        # A CURRENT that names nothing is about to be replaced.
+        current = None
     kept = {current: known[current]} if current in known else {}
     content = {**kept, name: hash_file(catalog)[1]}
     write_whole(places.catalog_hashes, (json.dumps(content, sort_keys=True) + "\n").encode())
-
-
-def read_catalog_hashes(places: Places) -> dict[str, str]:
-    """SHA-256 of the catalog file by snapshot; empty where none can be read."""
-    try:
-        hashes = json.loads(places.catalog_hashes.read_bytes())
-    except (OSError, ValueError):
-        return {}
-    return hashes if isinstance(hashes, dict) else {}
 
 
 def _switch(places: Places, catalog: Path, current: Path) -> None:
@@ -458,7 +245,12 @@ def _switch(places: Places, catalog: Path, current: Path) -> None:
         places.catalog.with_name(f"{places.catalog.name}.wal").unlink(missing_ok=True)
         os.replace(catalog, places.catalog)
         os.replace(current, places.current)
+    try:
         sync_folder(places.store)
+    except OSError as error:
+        told = "the snapshot is switched to, and the disk does not confirm it"
+        message = f"{told}: {error.strerror}; a power cut now may bring back the one before"
+        raise StoreError(message) from error
 
 
 def rebuild_catalog(places: Places, manifest: Manifest) -> None:
@@ -496,7 +288,7 @@ def clean_leftovers(places: Places) -> list[str]:
 def _unfinished(places: Places, current: str | None, done: list[str]) -> Manifest | None:
     """The complete snapshot that a stopped run did not switch to; None where there is none."""
     known = (sequence_of(current) if current is not None else None) or 0
-    for number, name in reversed(_snapshots_there(places)):
+    for number, name in reversed(snapshots_there(places)):
         if number <= known:
             break
         try:

@@ -15,7 +15,7 @@ from catalog.declarations import Desk
 from catalog.kept_desk import desk_of
 from catalog.listings import nearest
 from catalog.places import Places, store_errors, write_whole
-from catalog.store import find_snapshot, origin_of, read_manifest
+from catalog.standing import find_snapshot, origin_of, read_manifest
 from contracts.build import lay_plans, prepare_market
 from contracts.compared import Difference, PlanFigures, differences, figures_of
 from contracts.declared import PLAIN_NAME, validate

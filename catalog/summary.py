@@ -6,7 +6,7 @@ Belongs here: gathering and wording the outcome. Does not belong here: deciding 
 from dataclasses import asdict, dataclass, field
 from typing import Any
 
-from catalog.store import Manifest, Verdict
+from catalog.manifest import Manifest, Verdict
 
 _TOLD = 10
 
@@ -27,7 +27,11 @@ class FindingLine:
 
 @dataclass(frozen=True)
 class Summary:
-    """The outcome of a night. `snapshot` is None where nothing was published; `current` always stands."""
+    """The outcome of a night. `snapshot` is None where nothing was published; `current` always stands.
+
+    held_back: market and reason; served: market held back, the snapshot its prices are of and their last session,
+    both None where nothing of it is served.
+    """
 
     snapshot: str | None
     current: str
@@ -41,6 +45,8 @@ class Summary:
     unclaimed: int
     late: tuple[str, ...]
     cleaning: dict[str, dict[str, Any]] = field(default_factory=dict)
+    served: tuple[tuple[str, str | None, str | None], ...] = ()
+    notes: tuple[str, ...] = ()
 
     @property
     def exit_code(self) -> int:
@@ -51,6 +57,7 @@ class Summary:
         """The summary as plain values."""
         values = asdict(self)
         values["held_back"] = dict(self.held_back)
+        values["served"] = {market: {"snapshot": name, "to": day} for market, name, day in self.served}
         values["waived"] = dict(self.waived)
         values["exit_code"] = self.exit_code
         return values
@@ -62,7 +69,9 @@ class Summary:
         else:
             told = [f"published snapshot {self.snapshot}: {len(self.published)} markets, {self.rows:,} rows built"]
             told.append(f"  published: {', '.join(self.published) or 'none'}")
-        told += [f"  held back: {market}: {reason}" for market, reason in self.held_back]
+        told += [f"  {note}" for note in self.notes]
+        served = {market: _tell_served(name, day) for market, name, day in self.served}
+        told += [f"  held back: {market}: {reason}; {served[market]}" for market, reason in self.held_back]
         told += [f"  published all the same: {market}: {reason}" for market, reason in self.waived]
         if self.late:
             told.append(f"  late: {', '.join(self.late)} (ropewalk findings --kind file_late)")
@@ -112,12 +121,14 @@ def summarise(
             counts[severity] = counts.get(severity, 0) + count
     if manifest.summary.get("desk_findings"):
         counts["review"] = counts.get("review", 0) + int(manifest.summary["desk_findings"])
+    held_back = {code: verdict for code, verdict in manifest.markets.items() if verdict.state != "published"}
     return Summary(
         snapshot=manifest.name if published_now else None,
         current=manifest.name,
         nothing_new=not published_now,
         published=tuple(code for code, verdict in manifest.markets.items() if verdict.state == "published"),
-        held_back=tuple((c, _since(v)) for c, v in manifest.markets.items() if v.state != "published"),
+        held_back=tuple((c, v.reason) for c, v in held_back.items()),
+        served=tuple((c, v.last_good_snapshot, _last_served(v)) for c, v in held_back.items()),
         waived=tuple((c, v.reason) for c, v in manifest.markets.items() if v.state == "published" and v.reason),
         findings=tuple(FindingLine(**row) for row in (worst or [])[:_TOLD]),
         finding_counts=counts,
@@ -128,8 +139,9 @@ def summarise(
     )
 
 
-def _since(verdict: Verdict) -> str:
-    """Why a market is held back, and since when its prices stand still."""
-    if verdict.last_good_snapshot is None:
-        return f"{verdict.reason}; it was never published"
-    return f"{verdict.reason}; served as of {verdict.last_good_snapshot}, to {verdict.facts.get('last_session')}"
+def _tell_served(snapshot: str | None, last_session: str | None) -> str:
+    return "nothing of it is served" if snapshot is None else f"served as of {snapshot}, to {last_session}"
+
+
+def _last_served(verdict: Verdict) -> str | None:
+    return verdict.facts.get("last_session") if verdict.last_good_snapshot is not None else None

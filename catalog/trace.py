@@ -19,7 +19,7 @@ import pyarrow.parquet as pq
 from catalog.declarations import Desk
 from catalog.kept_desk import desk_of
 from catalog.places import Places, table_path
-from catalog.store import find_snapshot, origin_of, read_manifest
+from catalog.standing import find_snapshot, origin_of, read_manifest
 from catalog.traced_rows import RawRows, RawVersion, Rule, repair_rule, rules_behind
 from contracts.errors import StoreUnsound, UsageError
 from contracts.findings import Kind

@@ -12,18 +12,12 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from catalog.archive import read_archived, read_register, register_digest
+from catalog.manifest import MANIFEST, Manifest
 from catalog.places import Places, hash_file, write_lock
 from catalog.query import open_catalog, run_query
-from catalog.store import (
-    MANIFEST,
-    Manifest,
-    check_files,
-    current_snapshot,
-    read_catalog_hashes,
-    read_manifest,
-    rebuild_catalog,
-)
-from contracts.errors import StoreUnsound, UsageError
+from catalog.standing import check_files, current_snapshot, find_snapshot, read_catalog_hashes, read_manifest
+from catalog.store import rebuild_catalog
+from contracts.errors import StoreError, StoreUnsound, UsageError
 from contracts.tables import TABLES
 
 if TYPE_CHECKING:
@@ -45,17 +39,23 @@ class Report:
 
 
 def verify_store(places: Places, snapshot: str | None = None) -> Report:
-    """Check a snapshot (the current one by default), the archive behind it and, if current, the catalog.
+    """Check a snapshot (by name or number; else the current one), the archive behind it, and a current catalog.
 
-    Hashes every file of the snapshot and every raw file it names, looks for what is missing or not listed,
+    Hashes every file of the snapshot and every raw file in the register, looks for what is missing or not listed,
     and runs each rule of `soundness/`, which returns the rows that offend. Whatever is wrong is a problem of
     the report; raises UsageError where nothing is published or the snapshot named is not there.
     """
     try:
-        current = current_snapshot(places)
+        try:
+            current = current_snapshot(places)
+        except StoreUnsound:
+            # An older snapshot can be asked for by name whatever CURRENT says.
+            if snapshot is None:
+                raise
+            current = None
         if snapshot is None and current is None:
             raise UsageError(f"{places.store}: nothing is published here yet; run ropewalk build first")
-        manifest = read_manifest(places, snapshot or current)
+        manifest = read_manifest(places, find_snapshot(places, snapshot) if snapshot is not None else current)
     except StoreUnsound as error:
         return Report((str(error),), 0, 0)
     folder = places.snapshot(manifest.name)
@@ -67,7 +67,8 @@ def verify_store(places: Places, snapshot: str | None = None) -> Report:
         problems += _gather(partial(_read_only, places, sha))
     if manifest.name == current:
         problems += _gather(partial(_check_catalog, places, manifest))
-    files_checked = len(manifest.files) + len({*manifest.desk_files.values(), *(file for _, file in named)})
+    raw_files = {*manifest.desk_files.values(), *(file for _, file in named), *_registered(places)}
+    files_checked = len(manifest.files) + len(raw_files)
     try:
         connection = open_catalog(places, manifest.name)
     except StoreUnsound as error:
@@ -95,13 +96,18 @@ def run_rule(connection: "duckdb.DuckDBPyConnection", rule: Path) -> list[str]:
     return [f"{rule.stem}: {meaning} {len(rows):,} {noun}: {'; '.join(shown)}{more}"]
 
 
-def repoint(places: Places) -> Manifest:
+def repoint(places: Places, snapshot: str | None = None) -> Manifest:
     """Build the catalog again for the current snapshot, where the store now lies; takes the store's lock.
 
-    Raises StoreBusy, UsageError where nothing is published, StoreUnsound where the manifest is damaged.
+    With the name or number of a snapshot, CURRENT is made to name it too: the way out where CURRENT or the newest
+    manifest is damaged. Raises StoreBusy, UsageError where nothing is published or the snapshot is not there,
+    StoreUnsound where the manifest is damaged, and where a snapshot asked for is not what was published.
     """
     with write_lock(places):
-        manifest = read_manifest(places)
+        manifest = read_manifest(places, find_snapshot(places, snapshot) if snapshot is not None else None)
+        problems = check_files(places.snapshot(manifest.name), manifest) if snapshot is not None else []
+        if problems:
+            raise StoreUnsound(f"{manifest.name}/{problems[0]}; it was not pointed to, choose another snapshot")
         rebuild_catalog(places, manifest)
     return manifest
 
@@ -167,8 +173,16 @@ def _raw_files_named(folder: Path, manifest: Manifest) -> list[tuple[str, str]]:
     return sorted(named)
 
 
+def _registered(places: Places) -> set[str]:
+    """SHA-256 of every raw file in the register; none where it is damaged, which has been told."""
+    try:
+        return {arrival.file for arrival in read_register(places)}
+    except StoreError:
+        return set()
+
+
 def _check_archive(places: Places, named: list[tuple[str, str]]) -> list[str]:
-    """What of a snapshot's raw files, given by path and SHA-256, is not in the archive or its register."""
+    """What of a snapshot's raw files, given by path and SHA-256, and of all registered ones is not as it was."""
     arrivals = read_register(places)
     registered = {(arrival.path, arrival.file) for arrival in arrivals}
     problems = [
@@ -176,16 +190,14 @@ def _check_archive(places: Places, named: list[tuple[str, str]]) -> list[str]:
         for path, file in named
         if (path, file) not in registered
     ]
-    hashed = sorted({file for _, file in named})
+    of_snapshot = {file for _, file in named}
+    others = {arrival.file for arrival in arrivals} - of_snapshot
+    gone = sorted(file for file in others if not places.archived(file).is_file())
+    problems += [f"{places.archived(file)}: is registered and not there" for file in gone]
     with ThreadPoolExecutor(_READERS) as pool:
+        hashed = sorted((of_snapshot | others) - set(gone))
         for found in pool.map(lambda file: _gather(partial(_read_only, places, file)), hashed):
             problems += found
-    others = sorted({arrival.file for arrival in arrivals} - set(hashed))
-    problems += [
-        f"{places.archived(file)}: is registered and not there"
-        for file in others
-        if not places.archived(file).is_file()
-    ]
     return problems
 
 

@@ -50,7 +50,7 @@ _jobs = click.option(
 
 
 _rehash = click.option(
-    "--rehash", is_flag=True, help="Read every raw file again, and not only those whose size or time changed."
+    "--rehash", is_flag=True, help="Read every raw file and published table again; mend what is damaged."
 )
 
 
@@ -290,16 +290,17 @@ def findings(
 def verify(asked: Asked, deep: bool, repoint: bool, snapshot: str | None) -> Exit:
     """Check what is published, to the last byte.
 
-    Every hash, the archive behind it, and the soundness rules.
+    Every hash, the archive behind it, and the soundness rules. Where CURRENT or the newest manifest is damaged,
+    --repoint --from N goes back to snapshot N.
     """
     from catalog import verify as checks
     from catalog.places import Places
-    from catalog.store import find_snapshot
+    from catalog.standing import find_snapshot
 
     where = asked.where()
     places = Places(where.store)
     if repoint:
-        checks.repoint(places)
+        checks.repoint(places, snapshot)
     snapshot = None if snapshot is None else find_snapshot(places, snapshot)
     report = checks.verify_store(places, snapshot)
     problems = list(report.problems)
@@ -336,14 +337,17 @@ def verify(asked: Asked, deep: bool, repoint: bool, snapshot: str | None) -> Exi
 def sql(asked: Asked, query: str | None, snapshot: str | None) -> Exit:
     """Run a QUERY on the catalog, or say how to open it.
 
-    A query only reads. With none, says how any client opens the catalog.
+    A query only reads. With none, says how any client opens the catalog. With --snapshot, it asks what an older
+    snapshot published.
     """
     from catalog.places import Places
     from catalog.query import how_to_open, open_catalog, run_query
-    from catalog.store import find_snapshot
+    from catalog.standing import find_snapshot
 
     places = Places(asked.where().store)
     if query is None:
+        if snapshot is not None:
+            raise UsageError("--snapshot was given without a query; expected a query to ask the snapshot")
         told = how_to_open(places)
         if asked.as_json:
             say_json({"catalog": str(places.catalog), "how_to_open": told})

@@ -7,8 +7,9 @@ from typing import Any
 import pyarrow as pa
 
 from catalog.archive import take_in
-from catalog.places import Places
-from catalog.store import Manifest, StoredFile, Verdict, open_staging, publish, write_lock, write_table
+from catalog.manifest import Manifest, StoredFile, Verdict
+from catalog.places import Places, write_lock
+from catalog.store import open_staging, publish, write_table
 from contracts.tables import TABLES, Table, make_table
 
 S = [datetime.date(2024, 1, day) for day in (8, 9, 10, 11, 12, 15)]

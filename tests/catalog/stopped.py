@@ -24,16 +24,8 @@ import pyarrow as pa
 from catalog.archive import read_archived, read_register, take_in
 from catalog.places import Places, write_lock
 from catalog.query import open_catalog, run_query
-from catalog.store import (
-    check_files,
-    clean_leftovers,
-    current_snapshot,
-    link_table,
-    open_staging,
-    publish,
-    read_manifest,
-    write_table,
-)
+from catalog.standing import check_files, current_snapshot, read_manifest
+from catalog.store import clean_leftovers, link_table, open_staging, publish, write_table
 from catalog.verify import verify_store
 from contracts.errors import StoreError
 from contracts.tables import COVERAGE, FILES

@@ -8,8 +8,10 @@ import duckdb
 import pytest
 
 from catalog.catalog_file import SnapshotFacts, build_catalog, lay_views, quote_text
+from catalog.manifest import Manifest
 from catalog.places import Places, write_lock
-from catalog.store import Manifest, link_table, open_staging, publish, read_manifest, write_table
+from catalog.standing import read_manifest
+from catalog.store import link_table, open_staging, publish, write_table
 from catalog.verify import verify_store
 from contracts.errors import StoreError
 from contracts.tables import DERIVED, TABLES, make_table

@@ -9,7 +9,7 @@ import pytest
 from catalog.places import Places
 from catalog.prune import forget_name, judge_snapshots, name_snapshot, prune
 from catalog.query import open_catalog, run_query
-from catalog.store import current_snapshot, find_snapshot, list_snapshots
+from catalog.standing import current_snapshot, find_snapshot, list_snapshots
 from catalog.verify import verify_store
 from contracts.errors import StoreBusy, StoreUnsound, UsageError
 from tests.integration.tiny import run_night, write_desk, write_raw

@@ -9,6 +9,7 @@ import duckdb
 import pyarrow as pa
 import pytest
 
+from catalog.archive import take_in
 from catalog.places import Places, write_lock
 from catalog.query import open_catalog, run_query
 from catalog.store import link_table, open_staging, publish, write_table
@@ -161,6 +162,19 @@ def _found(pattern: str, text: str) -> bool:
     import re
 
     return re.search(pattern, text) is not None
+
+
+def test_a_raw_file_that_is_registered_and_not_of_the_snapshot_is_hashed_too(places: Places, raw: Path) -> None:
+    publish_small(places, raw)
+    (raw / "later.csv").write_bytes(b"later")
+    with write_lock(places):
+        later = take_in(raw, places).arrivals[-1]
+    assert later.path == "later.csv"
+    assert (verify_store(places).problems, verify_store(places).files_checked) == ((), 11)
+    path = places.archived(later.file)
+    content = path.read_bytes()
+    _rewrite(path, content[:20] + bytes([content[20] ^ 1]) + content[21:])
+    assert [problem.partition(": ")[0] for problem in verify_store(places).problems] == [str(path)]
 
 
 def test_numbers_that_do_not_add_up_are_found_though_every_hash_is_right(places: Places, raw: Path) -> None:

@@ -27,7 +27,7 @@ import duckdb  # noqa: F401  loaded once here and not in every child
 
 from catalog.places import Places
 from catalog.query import open_catalog, run_query
-from catalog.store import current_snapshot
+from catalog.standing import current_snapshot
 from catalog.verify import verify_store
 from contracts.errors import RopewalkError
 from tests.integration.tiny import run_night, write_desk, write_raw

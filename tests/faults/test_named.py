@@ -22,7 +22,7 @@ import pytest
 
 from catalog.places import Places
 from catalog.query import open_catalog, run_query
-from catalog.store import current_snapshot, list_snapshots
+from catalog.standing import current_snapshot, list_snapshots
 from catalog.verify import verify_store
 from contracts.errors import StoreBusy
 from tests.integration.tiny import run_night, write_desk, write_raw

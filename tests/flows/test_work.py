@@ -7,7 +7,7 @@ from pathlib import Path
 import pytest
 
 from catalog.places import Places
-from catalog.store import read_manifest
+from catalog.standing import read_manifest
 from flows.work import count_workers
 from tests.flows.conftest import Run
 from tests.integration.tiny import write_raw

@@ -8,7 +8,7 @@ from typing import Any
 import pyarrow.parquet as pq
 
 from catalog.places import Places
-from catalog.store import current_snapshot
+from catalog.standing import current_snapshot
 from catalog.summary import Summary
 from contracts.markets import Market
 from tests.integration.tiny import run_night

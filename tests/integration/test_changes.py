@@ -15,7 +15,7 @@ from catalog.changed_rows import Row, rows_of
 from catalog.changes import Changes, compare_snapshots
 from catalog.kept_desk import desk_of
 from catalog.places import Places
-from catalog.store import current_snapshot, read_manifest
+from catalog.standing import current_snapshot, read_manifest
 from contracts.build import Built, Inputs, build_market
 from contracts.errors import UsageError
 from contracts.tables import MARKET_TABLES

@@ -9,7 +9,7 @@ import pytest
 from catalog.declarations import load_desk
 from catalog.deep import rederive
 from catalog.places import Places
-from catalog.store import current_snapshot, read_manifest
+from catalog.standing import current_snapshot, read_manifest
 from contracts.errors import StoreUnsound
 from tests.integration.tiny import run_night, write_desk, write_raw
 

@@ -11,7 +11,7 @@ from catalog.declarations import SAMPLE_DESK, load_desk
 from catalog.deep import rederive
 from catalog.night import begin, build_one, finish
 from catalog.places import Places, write_lock
-from catalog.store import current_snapshot, read_manifest
+from catalog.standing import current_snapshot, read_manifest
 from catalog.verify import verify_store
 from contracts.errors import DeskError
 from tests.integration.tiny import run_night, write_desk, write_raw
@@ -89,6 +89,9 @@ def test_market_that_lost_rows_is_held_back_and_serves_its_last_good_tables(tiny
     second = run_night(tiny, store)
     assert second.exit_code == 3
     assert [market for market, _ in second.held_back] == ["TINB"]
+    assert second.served == (("TINB", first.current, "2024-03-19"),)
+    (line,) = [line for line in second.lines() if line.startswith("  held back: TINB: ")]
+    assert line.endswith(f"; served as of {first.current}, to 2024-03-19")
     assert rows(store, "select * from series where market = 'TINB' order by all") == good
     (held,) = rows(store, "select state, last_good_snapshot, reason from coverage where market = 'TINB'")
     assert held[:2] == ("held back", first.snapshot)
@@ -107,6 +110,8 @@ def test_market_without_files_does_not_stop_the_other(tiny: Path, tmp_path: Path
     summary = run_night(tiny, tmp_path / "published")
     assert summary.published == ("TINA",)
     assert summary.held_back == (("TINB", "TINB: no raw file is of this market"),)
+    assert "  held back: TINB: TINB: no raw file is of this market; nothing of it is served" in summary.lines()
+    assert summary.as_json()["served"] == {"TINB": {"snapshot": None, "to": None}}
 
 
 def test_silent_market_is_held_back_by_the_data_date(tiny: Path, tmp_path: Path) -> None:

@@ -8,7 +8,7 @@ import duckdb
 import pytest
 
 from catalog.places import Places
-from catalog.store import read_manifest
+from catalog.standing import read_manifest
 from contracts.intake import TORN
 from tests.integration.tiny import DELIVERIES, HEADER, MARKETS, rows_of, run_night, sessions, write_desk, write_raw
 

@@ -17,7 +17,7 @@ import pytest
 
 from catalog.archive import read_archived
 from catalog.places import Places
-from catalog.store import read_manifest
+from catalog.standing import read_manifest
 from catalog.trace import Trace, Tracer, trace_price
 from catalog.trace_text import trace_lines
 from contracts.errors import UsageError

@@ -10,7 +10,7 @@ from typing import TYPE_CHECKING, Any
 
 from catalog.places import Places
 from catalog.query import open_catalog, run_query
-from catalog.store import read_manifest
+from catalog.standing import read_manifest
 from contracts.errors import UsageError
 from contracts.findings import Kind
 

@@ -119,9 +119,7 @@ def clean_panel(panel: Panel, bars: Bars, repairs: tuple[DeclaredRepair, ...], q
     )  # fmt: skip
 
 
-def _judge(
-    panel: Panel, values: np.ndarray, levels: np.ndarray, declared: np.ndarray, quality: Quality
-) -> Judgment:
+def _judge(panel: Panel, values: np.ndarray, levels: np.ndarray, declared: np.ndarray, quality: Quality) -> Judgment:
     """The verdicts on settles, judged on one scale and told on the scale they were reported on."""
     level = put_on_one_scale(values, levels)
     judged = judge_settles(replace(panel, values=level), level[_SETTLE], declared, quality)

@@ -23,7 +23,7 @@ from catalog.changed_rows import Group, Row, groups_of, reasons_of, rows_of
 from catalog.declarations import Desk
 from catalog.kept_desk import changed_keys, desk_of, market_file
 from catalog.places import Places, table_path
-from catalog.store import Manifest, find_snapshot, origin_of, read_manifest
+from catalog.store import Manifest, find_snapshot, origin_of, read_manifest, until_of
 from contracts.build import build_market
 from contracts.errors import RopewalkError, StoreUnsound, UsageError
 from contracts.tables import BARS, FILES, FINDINGS, MARKET_TABLES, REJECTS, ROLLS, SERIES, TERMS
@@ -207,17 +207,19 @@ class _Comparison:
             return
         present, target = self._desk(old), self._desk(new)
         made_here = (code_digest(), package_versions())
+        before, after = until_of(old, market), until_of(new, market)
         if (old.code, old.packages) != made_here:
-            yield Step.CODE, self._build(market, present, old.intake), _code_reasons(old, *made_here)
+            yield Step.CODE, self._build(market, present, old.intake, before), _code_reasons(old, *made_here)
         for step, desk, reasons in _desk_steps(present, target, market):
-            yield step, self._build(market, desk, old.intake), reasons
-        if self._files(market, target, old.intake) != self._files(market, target, new.intake):
+            yield step, self._build(market, desk, old.intake, before), reasons
+        is_same = self._files(market, target, old.intake) == self._files(market, target, new.intake)
+        if not is_same or before != after:
             end = datetime.date.fromisoformat(old.markets[market].facts["last_session"])
             yield Step.RAW, self._build(market, target, new.intake, until=end), ()
             if (new.code, new.packages) == made_here:
                 yield Step.SESSIONS, None, ()
                 return
-            yield Step.SESSIONS, self._build(market, target, new.intake), ()
+            yield Step.SESSIONS, self._build(market, target, new.intake, after), ()
         is_ours = (new.code, new.packages) == made_here
         yield (Step.NOTHING, None, ()) if is_ours else (Step.CODE, None, _code_reasons(new, *made_here))
 

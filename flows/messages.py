@@ -7,7 +7,7 @@ fail a night: what cannot be sent is a note.
 from collections.abc import Callable
 from pathlib import Path
 
-from prefect.artifacts import Artifact
+from prefect.artifacts import MarkdownArtifact
 from prefect.events import emit_event
 from prefect.logging import get_run_logger
 
@@ -66,5 +66,5 @@ def _emit(outcome: Outcome, store: Path) -> None:
 
 
 def _keep(outcome: Outcome) -> None:
-    made = Artifact(type="markdown", key=ARTIFACT_KEY, description=outcome.lines()[0][:500], data=outcome.as_markdown())
+    made = MarkdownArtifact(key=ARTIFACT_KEY, description=outcome.lines()[0][:500], markdown=outcome.as_markdown())
     made.create(_sync=True)  # type: ignore[call-arg]

@@ -13,7 +13,7 @@ import threading
 import time
 from collections.abc import Iterator
 from concurrent.futures import ThreadPoolExecutor
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from functools import partial
 from io import FileIO
 from pathlib import Path
@@ -59,7 +59,7 @@ class Problem:
 
     path: str
     reason: str
-    may_pass: bool = False
+    may_pass: bool = field(default=False, compare=False)
 
 
 @dataclass(frozen=True)

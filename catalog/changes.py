@@ -23,7 +23,8 @@ from catalog.changed_rows import Group, Row, groups_of, reasons_of, rows_of
 from catalog.declarations import Desk
 from catalog.kept_desk import changed_keys, desk_of, market_file
 from catalog.places import Places, table_path
-from catalog.store import Manifest, find_snapshot, origin_of, read_manifest, until_of
+from catalog.store import Manifest, find_snapshot, origin_of, read_manifest
+from catalog.wishes import until_of
 from contracts.build import build_market
 from contracts.errors import RopewalkError, StoreUnsound, UsageError
 from contracts.tables import BARS, FILES, FINDINGS, MARKET_TABLES, REJECTS, ROLLS, SERIES, TERMS
@@ -207,7 +208,7 @@ class _Comparison:
             return
         present, target = self._desk(old), self._desk(new)
         made_here = (code_digest(), package_versions())
-        before, after = until_of(old, market), until_of(new, market)
+        before, after = until_of(old, market)(new, market)
         if (old.code, old.packages) != made_here:
             yield Step.CODE, self._build(market, present, old.intake, before), _code_reasons(old, *made_here)
         for step, desk, reasons in _desk_steps(present, target, market):

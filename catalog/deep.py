@@ -15,7 +15,8 @@ from catalog.assignment import assign_files, code_digest, gather_inputs, table_s
 from catalog.declarations import Desk
 from catalog.kept_desk import changed_desk, desk_of
 from catalog.places import Places, hash_file, table_path
-from catalog.store import current_snapshot, read_manifest, until_of, write_table
+from catalog.store import current_snapshot, read_manifest, write_table
+from catalog.wishes import until_of
 from contracts.build import build_market
 from contracts.errors import RopewalkError
 from contracts.tables import MARKET_TABLES

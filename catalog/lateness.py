@@ -46,7 +46,9 @@ class Overdue:
             more = f" and {len(self.lacking) - 3} more" if len(self.lacking) > 3 else ""
             what = f"no bar of {', '.join(self.lacking[:3])}{more} on {self.session}"
         else:
-            newest = f"the newest bar is of {self.newest}" if self.newest else f"nothing of the {_RECENT.days} days before"
+            newest = (
+                f"the newest bar is of {self.newest}" if self.newest else f"nothing of the {_RECENT.days} days before"
+            )
             what = f"nothing of {self.session}; {newest}"
         return f"{self.market}: {what}; due {self.due}"
 

@@ -4,7 +4,6 @@ Belongs here: the staging folder, the tables' files, the manifest and the switch
 tables a night publishes (`night.py`), the views on them (`catalog_file.py`).
 """
 
-import datetime
 import errno
 import hashlib
 import json
@@ -171,12 +170,6 @@ def origin_of(places: Places, manifest: Manifest, market: str) -> Manifest:
     while (good := manifest.markets[market].last_good_snapshot) is not None:
         manifest = read_manifest(places, good)
     return manifest
-
-
-def until_of(manifest: Manifest, market: str) -> datetime.date | None:
-    """The session after which bars were left out of a market's tables; None where none were."""
-    text = manifest.markets[market].facts.get("until")
-    return None if text is None else datetime.date.fromisoformat(text)
 
 
 def next_sequence(places: Places) -> int:

@@ -15,7 +15,8 @@ from catalog.declarations import Desk
 from catalog.kept_desk import desk_of
 from catalog.listings import nearest
 from catalog.places import Places, store_errors, write_whole
-from catalog.store import find_snapshot, origin_of, read_manifest, until_of
+from catalog.store import find_snapshot, origin_of, read_manifest
+from catalog.wishes import until_of
 from contracts.build import Laid, lay_plans, prepare_market
 from contracts.compared import Difference, PlanFigures, differences, figures_of
 from contracts.declared import PLAIN_NAME, validate

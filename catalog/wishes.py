@@ -50,3 +50,9 @@ def _insist(desk: Desk, codes: Iterable[str], purpose: str) -> None:
     for code in codes:
         if code not in desk.markets:
             raise UsageError(f"no market {code!r} {purpose}; there is {', '.join(desk.markets)}")
+
+
+def until_of(manifest: Manifest, market: str) -> datetime.date | None:
+    """The session after which bars were left out of a market's tables; None where none were."""
+    text = manifest.markets[market].facts.get("until")
+    return None if text is None else datetime.date.fromisoformat(text)

@@ -4,6 +4,7 @@ Belongs here: what Prefect is told of a night, and what happens when Prefect can
 here: the steps of a night (`work.py`), where a Prefect API comes from (`watched.py`).
 """
 
+import sys
 from collections.abc import Iterable, Iterator
 from contextvars import ContextVar
 from dataclasses import dataclass, field, replace
@@ -31,6 +32,7 @@ from flows.clock import WALL, Clock
 from flows.messages import send_outcome
 from flows.outcome import Outcome, outcome_of_failure
 from flows.progress import Tick
+from flows.render import complain, say
 from flows.settings import Where
 from flows.tasks import build_market
 from flows.work import (
@@ -70,6 +72,7 @@ class Told:
     expected: int = 0
     recorded: int = 0
     is_lost: bool = False
+    is_alone: bool = False
     notes: list[str] = field(default_factory=list)
 
     def end(self, outcome: Outcome) -> None:
@@ -176,10 +179,10 @@ def _run_id() -> UUID | None:
     return None if context is None or context.flow_run is None else context.flow_run.id
 
 
-def _current() -> Told:
+def _current() -> Told | None:
     """Where the run under way tells its outcome. The flow may not name the variable itself: Prefect hands the
     flow's function with all it names to worker processes, and a ContextVar cannot go there."""
-    return _TOLD.get() or Told()
+    return _TOLD.get()
 
 
 @flow(
@@ -202,6 +205,9 @@ def night(
     this is said of what was known.
     """
     told = _current()
+    if told is None:
+        # Started by Prefect itself: nobody else tells the terminal.
+        told = Told(is_alone=True)
     told.run = _run_id()
     gates = tuple((market, why, person) for market, why, person in waived or ())
     where = Where(
@@ -237,6 +243,11 @@ def night(
 def _send(told: Told, where: Where) -> None:
     if told.outcome is not None and told.run is not None and not told.is_lost:
         told.notes += send_outcome(told.outcome, where.store)
+    if told.outcome is not None and told.is_alone:
+        say(told.outcome.lines())
+        sys.stdout.flush()
+        for note in told.notes:
+            complain(note)
 
 
 def _task_builder(jobs: int | None, told: Told) -> Builder:

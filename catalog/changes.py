@@ -210,17 +210,17 @@ class _Comparison:
         made_here = (code_digest(), package_versions())
         before, after = until_of(old, market)(new, market)
         if (old.code, old.packages) != made_here:
-            yield Step.CODE, self._build(market, present, old.intake, before), _code_reasons(old, *made_here)
+            yield Step.CODE, self._build(market, present, old.intake, old_until), _code_reasons(old, *made_here)
         for step, desk, reasons in _desk_steps(present, target, market):
-            yield step, self._build(market, desk, old.intake, before), reasons
+            yield step, self._build(market, desk, old.intake, old_until), reasons
         is_same = self._files(market, target, old.intake) == self._files(market, target, new.intake)
-        if not is_same or before != after:
+        if not is_same or old_until != new_until:
             end = datetime.date.fromisoformat(old.markets[market].facts["last_session"])
             yield Step.RAW, self._build(market, target, new.intake, until=end), ()
             if (new.code, new.packages) == made_here:
                 yield Step.SESSIONS, None, ()
                 return
-            yield Step.SESSIONS, self._build(market, target, new.intake, after), ()
+            yield Step.SESSIONS, self._build(market, target, new.intake, new_until), ()
         is_ours = (new.code, new.packages) == made_here
         yield (Step.NOTHING, None, ()) if is_ours else (Step.CODE, None, _code_reasons(new, *made_here))
 

@@ -56,7 +56,7 @@ def keep_schedule(where: Where, schedule: Schedule, jobs: int | None) -> Exit:
     Raises Terminated, KeyboardInterrupt.
     """
     try:
-        with reach_api() as api:
+        with reach_api(is_lasting=True) as api:
             place = "an own Prefect server" if api.is_own else "the configured Prefect server"
             (following,) = night_times(schedule, datetime.datetime.now(datetime.UTC), 1)
             say(

@@ -1,6 +1,7 @@
 """The schedule, reckoned by Prefect itself from moments that tests choose; and one kept for real."""
 
 import datetime
+import itertools
 import os
 import signal
 import subprocess
@@ -39,9 +40,7 @@ def test_every_day_too_there_is_exactly_one(zone: str) -> None:
     start = datetime.datetime(2026, 1, 1, 12, 0, tzinfo=datetime.UTC)
     times = night_times(Schedule(cron="30 19 * * *", timezone=zone), start, 365)
     dates = [moment.date() for moment in times]
-    assert [later - earlier for earlier, later in zip(dates, dates[1:], strict=False)] == [
-        datetime.timedelta(days=1)
-    ] * 364
+    assert [later - earlier for earlier, later in itertools.pairwise(dates)] == [datetime.timedelta(days=1)] * 364
 
 
 def test_the_next_nights_are_told_without_a_server(desk: Path, run: Run, monkeypatch: pytest.MonkeyPatch) -> None:

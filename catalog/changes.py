@@ -208,7 +208,7 @@ class _Comparison:
             return
         present, target = self._desk(old), self._desk(new)
         made_here = (code_digest(), package_versions())
-        before, after = until_of(old, market)(new, market)
+        old_until, new_until = until_of(old, market), until_of(new, market)
         if (old.code, old.packages) != made_here:
             yield Step.CODE, self._build(market, present, old.intake, old_until), _code_reasons(old, *made_here)
         for step, desk, reasons in _desk_steps(present, target, market):

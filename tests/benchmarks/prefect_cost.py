@@ -41,6 +41,12 @@ def write_markets(folder: Path, count: int) -> Path:
     return desk
 
 
+def tell(line: str) -> None:
+    """Print one line at once."""
+    sys.stdout.write(f"{line}\n")
+    sys.stdout.flush()
+
+
 def main() -> int:
     """Measure and print; returns the exit code."""
     parser = argparse.ArgumentParser(description=__doc__)
@@ -59,9 +65,7 @@ def main() -> int:
             is_right = done.returncode == 0 and not strange and kept is not None and kept[1] == kept[2]
             failed += not is_right
             told = kept[0] if kept else done.stderr[-200:]
-            print(
-                f"fresh home {number}: exit {done.returncode}, {strange} bad lines, {told}, {seconds:.1f} s", flush=True
-            )  # noqa: T201
+            tell(f"fresh home {number}: exit {done.returncode}, {strange} bad lines, {told}, {seconds:.1f} s")
         failed += _against_a_server(folder, desk)
     return 1 if failed else 0
 
@@ -81,11 +85,8 @@ def _against_a_server(folder: Path, desk: Path) -> int:
             )  # fmt: skip
             failed += bool(one.returncode or two.returncode or two.stderr)
             kept = re.search(r"Prefect keeps .*", two.stdout)
-            print(  # noqa: T201
-                f"build {plain:.1f} s, nightly {watched:.1f} s, Prefect {watched - plain:.1f} s; "
-                f"{kept[0] if kept else two.stderr[-200:]}",
-                flush=True,
-            )
+            told = kept[0] if kept else two.stderr[-200:]
+            tell(f"build {plain:.1f} s, nightly {watched:.1f} s, Prefect {watched - plain:.1f} s; {told}")
     return failed
 
 

@@ -276,6 +276,7 @@ def _facts(
         "expected": len(panel.sessions),
         "first_session": day_of(panel.sessions[0]).isoformat(),
         "last_session": day_of(panel.sessions[-1]).isoformat(),
+        "newest_contracts": [panel.contracts[at] for at in np.flatnonzero(panel.bar[-1] >= 0)],
         "findings": severities,
         "blocking": _blocking(findings, panel, laid),
         "first_plan": next(iter(panel.market.plans)),

@@ -226,8 +226,7 @@ def surprised(draw: st.DrawFn) -> tuple[PlainMarket, PlainPlan]:
     """A market of which up to five sessions were not to be, and a plan."""
     market, plan = draw(markets_and_plans())
     days = draw(st.sets(st.integers(0, len(market.sessions) - 1), min_size=1, max_size=4))
-    if draw(st.booleans()):
-        days |= {effective - 1 for _, effective in plan.force if effective > 0}
+    days |= {effective - 1 for _, effective in plan.force if effective > 0}
     # A desk refuses a decision for a day that its calendar calls closed.
     force = tuple(decision for decision in plan.force if decision[1] not in days)
     return replace(market, unscheduled=days), replace(plan, force=force)

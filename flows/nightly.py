@@ -236,7 +236,8 @@ def night(
     if summary.nothing_new:
         message = f"nothing new, snapshot {summary.current} stands"
     else:
-        message = f"snapshot {summary.snapshot}" + (f"; held back {held_back}" if held_back else "")
+        parts = [f"snapshot {summary.snapshot}", *summary.notes]
+        message = "; ".join([*parts, f"held back {held_back}"] if held_back else parts)
     return Completed(name="Held back" if summary.exit_code else "Completed", message=message)
 
 

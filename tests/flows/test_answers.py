@@ -209,7 +209,7 @@ def test_verify_deep_with_another_desk_is_5_and_says_so(published: Path, tmp_pat
     (other / "desk.toml").write_text((other / "desk.toml").read_text().replace("[5, 10]", "[5, 11]"))
     result = run("verify", "--deep", "--desk", other, "--store", published / "published")
     assert result.exit_code == 5
-    assert "was made with desk" in result.stdout
+    assert "the desk is another: desk.toml look_backs: [5, 10] -> [5, 11]" in result.stdout
 
 
 def test_a_store_that_was_moved_says_so_and_is_pointed_right(published: Path, tmp_path: Path, run: Run) -> None:

@@ -250,7 +250,10 @@ def tell_real(case: Case) -> tuple[list[Row], list[Row], dict[str, list[str]]]:
         settle[at(key)], is_repaired[at(key)], usable[at(key)] = value, True, False
     for key, value in case.corrected.items():
         settle[at(key)], is_repaired[at(key)] = value, True
-    clean = Clean(prices, panel.field("volume"), panel.field("open_interest"), is_repaired, is_masked, usable, (), ())
+    levels = np.ones(panel.shape)
+    clean = Clean(
+        prices, panel.field("volume"), panel.field("open_interest"), is_repaired, is_masked, usable, levels, (), ()
+    )
     traded = clean.traded(panel)
     laid = lay_plans(traded, clean)
     ledger = rolls_table(traded, [(one.name, one.held, [0] * len(one.held.steps)) for one in laid]).to_pylist()

@@ -58,6 +58,14 @@ class Terminated(BaseException):
     """SIGTERM arrived. Like KeyboardInterrupt it passes every `except Exception` on its way out."""
 
 
+_ended: list[int] = []
+
+
+def was_terminated() -> bool:
+    """Whether SIGTERM has arrived, for where what was raised on it got lost, as within a query of DuckDB."""
+    return bool(_ended)
+
+
 @contextmanager
 def sigterm_raises() -> Iterator[None]:
     """Turn the first SIGTERM into Terminated, so that locks and staging folders are freed on the way out.
@@ -70,9 +78,11 @@ def sigterm_raises() -> Iterator[None]:
 
     def stop(_signal: int, _frame: FrameType | None) -> None:
         signal.signal(signal.SIGTERM, signal.SIG_DFL)
+        _ended.append(signal.SIGTERM)
         raise Terminated
 
     before = signal.signal(signal.SIGTERM, stop)
+    _ended.clear()
     try:
         yield
     finally:

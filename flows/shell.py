@@ -17,13 +17,15 @@ from typing import Any
 import click
 
 from contracts.errors import DeskError, RopewalkError
-from flows.exits import Exit, Terminated, code_of, exit_table, sigterm_raises
+from flows.exits import Exit, Terminated, code_of, exit_table, sigterm_raises, was_terminated
 from flows.render import complain, say, say_json
 from flows.settings import Where, find_desk, find_where
 
-# The world, not the program: a full disk, a folder that may not be written, a broken drive.
+# What DuckDB says in the place of what a signal raised.
+_CUT_QUERY = "Query interrupted"
 # What is said where not even a library can be loaded or a thread started.
 _SHORT_OF_MEMORY = ("failed to map segment", "annot allocate memory", "can't start new thread")
+# The world, not the program: a full disk, a folder that may not be written, a broken drive.
 _WORLD = frozenset({errno.ENOSPC, errno.EDQUOT, errno.EROFS, errno.EACCES, errno.EPERM, errno.EIO, errno.EMFILE})
 
 
@@ -144,14 +146,14 @@ def _run(run: Callable[[], Any]) -> int:
         error.show()
         return Exit.REFUSED
     except (KeyboardInterrupt, click.Abort):
-        complain("stopped by Ctrl-C; the last snapshot stands")
-        return Exit.INTERRUPTED
+        return _tell_stopped(Exit.INTERRUPTED)
     except Terminated:
-        complain("stopped by SIGTERM; the last snapshot stands")
-        return Exit.TERMINATED
+        return _tell_stopped(Exit.TERMINATED)
     except SystemExit as end:
         return end.code if isinstance(end.code, int) else Exit.BUG
     except Exception as error:
+        if isinstance(error, RuntimeError) and str(error) == _CUT_QUERY:
+            return _tell_stopped(Exit.TERMINATED if was_terminated() else Exit.INTERRUPTED)
         if isinstance(error, MemoryError) or any(sign in str(error) for sign in _SHORT_OF_MEMORY):
             complain("out of memory; nothing was published, the last snapshot stands; give it more, or fewer --jobs")
             return Exit.NOT_PUBLISHED
@@ -160,6 +162,11 @@ def _run(run: Callable[[], Any]) -> int:
             return Exit.NOT_PUBLISHED
         complain(f"{traceback.format_exc()}this is a bug in ropewalk; the last snapshot stands")
         return Exit.BUG
+
+
+def _tell_stopped(code: Exit) -> Exit:
+    complain(f"stopped by {'SIGTERM' if code is Exit.TERMINATED else 'Ctrl-C'}; the last snapshot stands")
+    return code
 
 
 def _leave(code: int) -> None:

@@ -13,7 +13,7 @@ import threading
 import time
 from collections.abc import Iterator
 from concurrent.futures import ThreadPoolExecutor
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from functools import partial
 from io import FileIO
 from pathlib import Path
@@ -51,10 +51,14 @@ class Arrival:
 
 @dataclass(frozen=True, order=True)
 class Problem:
-    """A path below the raw folder of which something could not be taken in, and why."""
+    """A path below the raw folder of which something could not be taken in, and why.
+
+    `may_pass` marks a file that was being written: another look may find it whole.
+    """
 
     path: str
     reason: str
+    may_pass: bool = field(default=False, compare=False)
 
 
 @dataclass(frozen=True)
@@ -85,6 +89,10 @@ class _NotTaken(Exception):
     """A raw file that is left where it is; the text says why."""
 
 
+class _StillWritten(_NotTaken):
+    """A raw file that changes while it is read."""
+
+
 def take_in(raw: Path, places: Places, rehash: bool = False) -> Intake:
     """Archive whatever is new below the raw folder and register it; the caller holds the store's lock.
 
@@ -92,7 +100,7 @@ def take_in(raw: Path, places: Places, rehash: bool = False) -> Intake:
     and a damaged archive file is written anew. Whatever is wrong in the raw folder is a problem, never an
     error. Raises StoreError where the archive cannot be written, StoreUnsound where the register is damaged.
     """
-    arrivals, whole = _parse_register(places)
+    arrivals, whole = parse_register(places)
     newest = {arrival.path: arrival.file for arrival in arrivals}
     remembered = {} if rehash else _read_memory(places)
     problems: list[Problem] = []
@@ -135,7 +143,7 @@ def take_in(raw: Path, places: Places, rehash: bool = False) -> Intake:
             for folder in sorted({places.archived(arrival.file).parent for arrival in fresh}):
                 sync_folder(folder)
             sync_folder(places.archive)
-            _append_register(places, whole, fresh)
+            append_register(places, whole, fresh)
         number += 1
     if root is not None and (memory != remembered or rehash):
         _write_memory(places, memory)
@@ -144,12 +152,12 @@ def take_in(raw: Path, places: Places, rehash: bool = False) -> Intake:
 
 def read_register(places: Places) -> tuple[Arrival, ...]:
     """All arrivals ever, in order; empty before the first intake. Raises StoreUnsound where it is damaged."""
-    return _parse_register(places)[0]
+    return parse_register(places)[0]
 
 
 def register_digest(places: Places, intake: int) -> str:
     """SHA-256 of the register's lines up to an intake; raises StoreUnsound where it is damaged."""
-    arrivals, whole = _parse_register(places)
+    arrivals, whole = parse_register(places)
     count = sum(arrival.taken_in <= intake for arrival in arrivals)
     lines = places.register.read_bytes()[:whole].splitlines(keepends=True) if count else []
     return hashlib.sha256(b"".join(lines[:count])).hexdigest()
@@ -292,7 +300,7 @@ def _keep_file(places: Places, root: int, rehash: bool, path: str, size: int) ->
                 return _keep_read(places, root, path, rehash)
         return _keep_read(places, root, path, rehash)
     except _NotTaken as error:
-        return _Kept(path, (), (Problem(path, str(error)),), None)
+        return _Kept(path, (), (Problem(path, str(error), isinstance(error, _StillWritten)),), None)
 
 
 def _keep_read(places: Places, root: int, path: str, rehash: bool) -> _Kept:
@@ -355,7 +363,7 @@ def _read_steady(root: int, path: str) -> tuple[bytes, os.stat_result]:
             raise _NotTaken(f"cannot be read: {error.strerror}; it is left for the next night") from error
         if _signature(before) == _signature(after) and len(data) == after.st_size:
             return data, after
-    raise _NotTaken("changed twice while it was read; it is left for the next night")
+    raise _StillWritten("changed twice while it was read; it is left for the next night")
 
 
 def _read_up_to(file: FileIO, most: int) -> bytes:
@@ -393,7 +401,8 @@ def _is_damaged(places: Places, sha: str) -> bool:
 # The register. Every line says how many of its intake follow, so that an intake counts whole or not at all.
 
 
-def _append_register(places: Places, whole: int, fresh: list[Arrival]) -> None:
+def append_register(places: Places, whole: int, fresh: list[Arrival]) -> None:
+    """Put one intake's arrivals behind the whole lines of the register, and see them onto the disk."""
     lines = []
     for left, arrival in zip(range(len(fresh) - 1, -1, -1), fresh, strict=True):
         lines.append(json.dumps({**vars(arrival), "left": left}) + "\n")
@@ -406,7 +415,7 @@ def _append_register(places: Places, whole: int, fresh: list[Arrival]) -> None:
     sync_folder(places.archive)
 
 
-def _parse_register(places: Places) -> tuple[tuple[Arrival, ...], int]:
+def parse_register(places: Places) -> tuple[tuple[Arrival, ...], int]:
     """The arrivals of whole intakes, and the bytes of the register that hold them."""
     try:
         data = places.register.read_bytes()

@@ -5,6 +5,7 @@ here: reading prices, writing a snapshot.
 """
 
 import contextlib
+import datetime
 import hashlib
 import importlib.metadata
 import json
@@ -21,6 +22,7 @@ from contracts.errors import IntakeError
 from contracts.findings import Finding, Kind, Severity
 from contracts.intake import RawFile, split_file
 from contracts.layouts import Claim, Layout, claim_file
+from contracts.markets import OF_THE_CLOCK
 from contracts.unpack import unpack
 
 # Packages whose version can change the bytes of a table.
@@ -220,7 +222,7 @@ def declarations_digest(desk: Desk, market: str, layouts: list[str]) -> str:
     """SHA-256 of all that is declared of a market; the same while nothing that concerns it changes."""
     return _digest(
         {
-            "market": desk.markets[market].model_dump(mode="json", by_alias=True),
+            "market": desk.markets[market].model_dump(mode="json", by_alias=True, exclude=set(OF_THE_CLOCK)),
             # Which plan is the first one matters, and a digest sorts.
             "plans": list(desk.markets[market].plans),
             "layouts": {name: desk.layouts[name].model_dump(mode="json") for name in layouts},
@@ -239,10 +241,12 @@ def table_stamp(desk: Desk, market: str, files: tuple[FileOfMarket, ...]) -> dic
     return {"desk": declarations_digest(desk, market, layouts), "code": code_digest()}
 
 
-def inputs_digest(desk: Desk, market: str, files: tuple[FileOfMarket, ...]) -> str:
-    """SHA-256 of all that decides a market's tables: code, packages, declarations, and the files' content."""
+def inputs_digest(desk: Desk, market: str, files: tuple[FileOfMarket, ...], until: datetime.date | None = None) -> str:
+    """SHA-256 of all that decides a market's tables: code, packages, declarations, the files' content, and the
+    session after which bars are left out."""
     return _digest(
         {
+            **({} if until is None else {"until": until.isoformat()}),
             **table_stamp(desk, market, files),
             "packages": package_versions(),
             "files": [[e.path, e.file, e.taken_in, e.is_old, e.is_told_here] for e in files],

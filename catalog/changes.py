@@ -25,6 +25,7 @@ from catalog.kept_desk import changed_keys, desk_of, market_file
 from catalog.manifest import Manifest
 from catalog.places import Places, table_path
 from catalog.standing import find_snapshot, origin_of, read_manifest
+from catalog.wishes import until_of
 from contracts.build import build_market
 from contracts.errors import RopewalkError, StoreUnsound, UsageError
 from contracts.tables import BARS, FILES, FINDINGS, MARKET_TABLES, REJECTS, ROLLS, SERIES, TERMS
@@ -208,17 +209,19 @@ class _Comparison:
             return
         present, target = self._desk(old), self._desk(new)
         made_here = (code_digest(), package_versions())
+        old_until, new_until = until_of(old, market), until_of(new, market)
         if (old.code, old.packages) != made_here:
-            yield Step.CODE, self._build(market, present, old.intake), _code_reasons(old, *made_here)
+            yield Step.CODE, self._build(market, present, old.intake, old_until), _code_reasons(old, *made_here)
         for step, desk, reasons in _desk_steps(present, target, market):
-            yield step, self._build(market, desk, old.intake), reasons
-        if self._files(market, target, old.intake) != self._files(market, target, new.intake):
+            yield step, self._build(market, desk, old.intake, old_until), reasons
+        is_same = self._files(market, target, old.intake) == self._files(market, target, new.intake)
+        if not is_same or old_until != new_until:
             end = datetime.date.fromisoformat(old.markets[market].facts["last_session"])
             yield Step.RAW, self._build(market, target, new.intake, until=end), ()
             if (new.code, new.packages) == made_here:
                 yield Step.SESSIONS, None, ()
                 return
-            yield Step.SESSIONS, self._build(market, target, new.intake), ()
+            yield Step.SESSIONS, self._build(market, target, new.intake, new_until), ()
         is_ours = (new.code, new.packages) == made_here
         yield (Step.NOTHING, None, ()) if is_ours else (Step.CODE, None, _code_reasons(new, *made_here))
 

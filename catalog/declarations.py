@@ -13,8 +13,9 @@ from functools import lru_cache
 from pathlib import Path
 from typing import Annotated, Any
 
-from pydantic import AfterValidator, BeforeValidator, Field
+from pydantic import AfterValidator, BeforeValidator, Field, model_validator
 
+from catalog.cron import cron_mistake
 from contracts.calendar_table import calendar_mistakes
 from contracts.declared import Declared, Model, line_of, read_declaration, read_toml
 from contracts.errors import CalendarError, DeskError, Mistake
@@ -73,12 +74,21 @@ class Schedule(Declared):
     cron: Annotated[str, AfterValidator(_cron)] = "30 19 * * 1-5"
     timezone: Annotated[str, AfterValidator(_timezone)] = "UTC"
 
+    @model_validator(mode="after")
+    def _once_a_night(self) -> "Schedule":
+        seen = cron_mistake(self.cron, self.timezone)
+        if seen is not None:
+            raise ValueError(f"seen {seen}; expected a time that comes once every night, outside 01:00 to 03:00")
+        return self
+
 
 class Run(Declared):
     """What carries it."""
 
     workers: Annotated[Workers, BeforeValidator(_workers)] = Workers.THREADS
     dask_address: str = ""
+    # How long a night waits for files that are overdue by their market's own clock; 0 does not wait.
+    wait_minutes: Annotated[int, Field(ge=0, le=1440)] = 0
 
 
 class DeskFile(Declared):

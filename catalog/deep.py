@@ -5,6 +5,7 @@ there (`verify.py`).
 """
 
 import tempfile
+from dataclasses import replace
 from pathlib import Path
 
 import pyarrow.parquet as pq
@@ -16,6 +17,7 @@ from catalog.kept_desk import changed_desk, desk_of
 from catalog.places import Places, hash_file, table_path
 from catalog.standing import current_snapshot, read_manifest
 from catalog.store import write_table
+from catalog.wishes import until_of
 from contracts.build import build_market
 from contracts.errors import RopewalkError
 from contracts.tables import MARKET_TABLES
@@ -28,8 +30,8 @@ def rederive(places: Places, desk: Desk | None = None, snapshot: str | None = No
 
     Without a desk the one the snapshot was made with is taken from the archive. With one, each of its keys
     that is another is told, and what the tables would then be. Only the code that made a snapshot can make it
-    again; where it is another, that is the answer. Markets held back are passed over: their tables are those
-    of an older snapshot.
+    again; where it is another, that is the answer. Markets held back or not asked for are passed over: their
+    tables are those of an older snapshot.
     """
     name = snapshot if snapshot is not None else current_snapshot(places)
     manifest = read_manifest(places, name)
@@ -47,13 +49,14 @@ def rederive(places: Places, desk: Desk | None = None, snapshot: str | None = No
     assignment = assign_files(desk, Intake(manifest.intake, 0, arrivals, ()), places)
     with tempfile.TemporaryDirectory() as folder:
         for market, verdict in manifest.markets.items():
-            if verdict.state != "published":
+            if verdict.state != "published" or verdict.last_good_snapshot is not None:
                 continue
             if market not in desk.markets:
                 problems.append(f"{market}: is published, and the desk does not declare it")
                 continue
             try:
-                built = build_market(gather_inputs(desk, market, assignment.files[market], places))
+                inputs = gather_inputs(desk, market, assignment.files[market], places)
+                built = build_market(replace(inputs, until=until_of(manifest, market)))
             except (RopewalkError, ValueError) as error:
                 problems.append(f"{market}: cannot be built again: {error}")
                 continue

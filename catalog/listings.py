@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING, Any
 
 from catalog.places import Places
 from catalog.query import open_catalog, run_query
+from catalog.standing import read_manifest
 from contracts.errors import UsageError
 from contracts.findings import Kind
 
@@ -71,6 +72,19 @@ def list_findings(
         total = int(run_query(connection, _COUNT_FINDINGS, values)[1][0][0])
         columns, rows = run_query(connection, _LIST_FINDINGS, [*values, total if limit is None else limit])
     return columns, rows, total
+
+
+def read_cleaning(places: Places, market: str | None = None) -> dict[str, dict[str, Any]]:
+    """By market and plan, what cleaning did to the sign score (`contracts.impact.tell_cleaning`), of one market or all.
+
+    Raises UsageError where nothing is published, StoreUnsound where the manifest cannot be read.
+    """
+    verdicts = read_manifest(places).markets
+    return {
+        code: verdict.facts["cleaning"]
+        for code, verdict in verdicts.items()
+        if market in (None, code) and "cleaning" in verdict.facts
+    }
 
 
 def list_rolls(

@@ -14,7 +14,7 @@ from typing import Any, Final
 
 import pyarrow as pa
 
-from catalog.archive import keep_texts, register_digest, take_in
+from catalog.archive import Intake, keep_texts, read_register, register_digest, take_in
 from catalog.assignment import (
     Assignment,
     FileOfMarket,
@@ -27,6 +27,7 @@ from catalog.assignment import (
 )
 from catalog.declarations import Desk, desk_from_texts, load_desk
 from catalog.gates import judge_market, silent_sessions
+from catalog.lateness import Overdue, SeenBars, find_overdue
 from catalog.laying import lay_files
 from catalog.manifest import HELD_BACK, PUBLISHED, Manifest, StoredFile, Verdict
 from catalog.mending import damaged_owners
@@ -35,12 +36,14 @@ from catalog.runs import Run, next_run, record_run, runs_table
 from catalog.standing import current_snapshot, read_manifest
 from catalog.store import clean_leftovers, open_staging, publish, write_table
 from catalog.summary import Summary, summarise
+from catalog.wishes import Wishes
 from contracts.build import build_market
 from contracts.errors import RopewalkError, StoreError, StoreUnsound, UsageError
 from contracts.findings import Finding, Kind, Severity, findings_table
 from contracts.tables import COVERAGE, FINDINGS, MARKET_TABLES, RUNS, make_table
 
 WAIVED: Final = "gate waived by"
+_ORDINARY: Final = Wishes()
 
 
 @dataclass(frozen=True)
@@ -60,60 +63,71 @@ class Night:
     dask_address: str
     files_taken_in: int
     intake: int
-    # Market, reason and person of each gate that is waived tonight.
-    waived: tuple[tuple[str, str, str], ...] = ()
+    wishes: Wishes = _ORDINARY
+    # Markets that would have been built, had they been asked for.
+    left: tuple[str, ...] = ()
+    # By the markets' own clocks; it goes into the manifest's summary and into no table.
+    overdue: tuple[Overdue, ...] = ()
 
 
 def begin(
-    desk_path: Path, raw: Path | None, store: Path | None, command: str, rehash: bool = False,
-    waived: tuple[tuple[str, str, str], ...] = (),
+    desk_path: Path, raw: Path | None, store: Path | None, command: str, wishes: Wishes | None = None,
+    now: datetime.datetime | None = None, seen: SeenBars | None = None,
 ) -> Night:  # fmt: skip
     """Load the desk, take in what arrived, and say which markets have to be built.
 
-    With `rehash` every raw file is read, and not only those whose size or time changed, and markets whose
-    published tables are damaged are built again; `waived` are market, reason and person of gates that hold
-    nothing back tonight. The caller holds the store's write lock. Raises DeskError before anything is touched,
-    UsageError for a raw folder that is not there while the archive is empty, and for a waived market that the
-    desk does not declare.
+    Where every raw file is to be read again, markets whose published tables are damaged are built again. `now` is
+    the moment by which files may be overdue; without it none is asked to be. The caller holds the store's write
+    lock. Raises DeskError before anything is touched, UsageError for a raw folder that is not there while the
+    archive is empty, and for wishes the desk or the store cannot grant.
     """
-    started = datetime.datetime.now(datetime.UTC).isoformat()
-    desk = load_desk(desk_path)
-    for code, _, _ in waived:
-        if code not in desk.markets:
-            raise UsageError(f"no market {code!r} to waive the gate of; there is {', '.join(desk.markets)}")
+    started = _now()
+    wishes, desk = wishes or Wishes(), load_desk(desk_path)
     raw_path, places = (raw or desk.raw).resolve(), Places((store or desk.store).resolve())
     clean_leftovers(places)
-    intake = take_in(raw_path, places, rehash)
+    last = _last_manifest(places)
+    wishes.check(desk, last)
+    if wishes.known is None:
+        intake = take_in(raw_path, places, wishes.rehash)
+    else:
+        arrivals = read_register(places)
+        intake = Intake(arrivals[-1].taken_in if arrivals else 0, 0, arrivals, ())
     if not intake.arrivals:
         raise UsageError(
             f"{raw_path}: no raw file there, and none in the archive of {places.store}; name another with --raw"
         )
     assignment = assign_files(desk, intake, places)
-    digests = {code: inputs_digest(desk, code, files) for code, files in assignment.files.items()}
-    last = _last_manifest(places)
-    damaged = damaged_owners(places, last) if rehash and last is not None else frozenset()
+    digests = {code: inputs_digest(desk, code, files, wishes.until) for code, files in assignment.files.items()}
+    damaged = damaged_owners(places, last) if wishes.rehash and last is not None else frozenset()
     unchanged = tuple(code for code in desk.markets if _is_unchanged(last, code, digests[code]) and code not in damaged)
     told = _desk_digest(assignment)
     nothing_new = (
         last is not None
-        and not waived
+        and not wishes.waived
         and not damaged
-        and all(code in last.markets and last.markets[code].inputs == digests[code] for code in desk.markets)
-        and set(last.markets) == set(desk.markets)
-        and last.desk == desk.digest
-        and last.code == code_digest()
-        and last.summary.get("files_of_no_market") == told
+        and all(code in last.markets and last.markets[code].inputs == digests[code] for code in wishes.asked(desk))
+        and (bool(wishes.markets) or (set(last.markets) == set(desk.markets) and _is_same_desk(last, desk, told)))
     )
+    overdue: tuple[Overdue, ...] = ()
+    if now is not None and wishes.until is None:
+        overdue = find_overdue(desk, assignment.files, last, places, now, seen or SeenBars())
     staging = ""
     if not nothing_new:
         staging = str(open_staging(places))
         _remember(places, desk, assignment, digests, told)
-    building = () if nothing_new else tuple(code for code in desk.markets if code not in unchanged)
+    changed = () if nothing_new else tuple(code for code in desk.markets if code not in unchanged)
+    building = tuple(code for code in changed if code in wishes.asked(desk))
     return Night(
         str(desk.path), str(raw_path), str(places.store), staging, command, started, building,
         unchanged if not nothing_new else tuple(desk.markets), nothing_new, str(desk.run.workers),
-        desk.run.dask_address, intake.new, intake.number, waived,
+        desk.run.dask_address, intake.new, intake.number, wishes,
+        tuple(code for code in changed if code not in building), overdue,
     )  # fmt: skip
+
+
+def _is_same_desk(last: Manifest, desk: Desk, told: list[str]) -> bool:
+    """Whether desk, code and the files of no market are those of the last snapshot."""
+    return last.desk == desk.digest and last.code == code_digest() and last.summary.get("files_of_no_market") == told
 
 
 def _last_manifest(places: Places) -> Manifest | None:
@@ -180,7 +194,8 @@ def build_one(night: Night, market: str) -> dict[str, Any]:
     try:
         if not entries:
             raise ValueError(f"{market}: no raw file is of this market")
-        built = build_market(gather_inputs(desk, market, entries, places))
+        until = night.wishes.until
+        built = build_market(replace(gather_inputs(desk, market, entries, places), until=until))
     except StoreUnsound as error:
         # One damaged raw file in the archive holds its market back, and no other.
         result["error"] = f"{error}; build --rehash writes it anew where the raw folder still has it"
@@ -197,7 +212,7 @@ def build_one(night: Night, market: str) -> dict[str, Any]:
         stored = write_table(Path(night.staging), table, market, built.tables[table.name], metadata)
         result["files"][stored.path] = stored.model_dump(exclude={"path"})
         result["rows"] += stored.rows
-    result["facts"] = built.facts
+    result["facts"] = built.facts if until is None else {**built.facts, "until": until.isoformat()}
     result["worst"] = _worst(built.tables["findings"])
     result["seconds"] = time.monotonic() - started
     return result
@@ -228,27 +243,55 @@ def finish(night: Night, results: list[dict[str, Any]]) -> Summary:
     if night.nothing_new:
         if last is None:
             raise StoreError(f"{places.store}: the snapshot this night was compared with is gone")
-        run = Run(next_run(places), night.command, night.started_at, _now(), "nothing new", len(last.markets), 0, 0)
-        record_run(places, run)
-        return summarise(last, published_now=False, results=[])
+        run = Run(
+            next_run(places),
+            night.command,
+            night.started_at,
+            _now(),
+            "nothing new",
+            len(last.markets),
+            0,
+            0,
+            intake=night.intake,
+        )
+        if not night.wishes.is_dry:
+            record_run(places, run)
+        return summarise(last, night.wishes.is_dry, False, [], overdue=night.overdue)
     memory = _recall(places)
     desk = _desk_tonight(night, memory)
-    facts = {code: last.markets[code].facts for code in night.unchanged} if last is not None else {}
+    stood = last.markets if last is not None else {}
+    stay = {code: stood[code].facts for code in (*night.unchanged, *night.left) if code in stood}
+    facts = {code: fact for code, fact in stay.items() if "last_session" in fact}
     facts |= {result["market"]: result["facts"] for result in results if result["error"] is None}
-    verdicts = _judge(desk, facts, results, memory["digests"], last, night.waived)
+    verdicts = _judge(desk, facts, results, memory["digests"], last, night)
     staging = Path(night.staging)
-    laid = lay_files(places, staging, verdicts, results, last)
-    files, verdicts, notes = laid.files, laid.verdicts, tuple(laid.notes)
-    if not any(path.startswith("series/") for path in files):
+    notes: tuple[str, ...] = ()
+    files: dict[str, StoredFile] = {}
+    if not night.wishes.is_dry:
+        laid = lay_files(places, staging, verdicts, results, last)
+        files, verdicts, notes = laid.files, laid.verdicts, tuple(laid.notes)
+    is_any_out = any(verdict.state == PUBLISHED for verdict in verdicts.values())
+    held_files = last.files if night.wishes.is_dry and last is not None else files
+    if not any(path.startswith("series/") for path in held_files) and not (night.wishes.is_dry and is_any_out):
         reasons = "; ".join(f"{code}: {verdict.reason}" for code, verdict in verdicts.items())
         raise StoreError(f"no market can be published, and nothing of one is there to be served: {reasons}")
     metadata = {"desk": desk.digest, "code": code_digest()}
     run = Run(
         next_run(places), night.command, night.started_at, _now(), "published", len(desk.markets),
         sum(verdict.state == PUBLISHED for verdict in verdicts.values()),
-        sum(verdict.state == HELD_BACK for verdict in verdicts.values()),
+        sum(verdict.state == HELD_BACK for verdict in verdicts.values()), intake=night.intake,
     )  # fmt: skip
     late = late_markets(desk, verdicts)
+    worst = sorted((row for result in results for row in result["worst"]), key=lambda row: -row["impact_sessions"])
+    if night.wishes.is_dry:
+        abandon(night)
+        would = last.name if last is not None else ""
+        told = {"unclaimed": memory["unclaimed"], "late": [f.market for f in late], **_told_of(night)}
+        draft = Manifest(
+            name=would, files={}, desk=desk.digest, code=code_digest(), packages={}, intake=night.intake,
+            markets=verdicts, summary=told,
+        )  # fmt: skip
+        return summarise(draft, True, True, results, worst, night.overdue)
     desk_findings = [*_desk_findings(memory, desk, staging, files), *late]
     for table, market, data in (
         (FINDINGS, DESK_WIDE, findings_table(desk_findings)),
@@ -257,7 +300,6 @@ def finish(night: Night, results: list[dict[str, Any]]) -> Summary:
     ):
         stored = write_table(staging, table, market, data, metadata)
         files[stored.path] = stored
-    worst = sorted((row for result in results for row in result["worst"]), key=lambda row: -row["impact_sessions"])
     draft = Manifest(
         sequence=0, name="", parent=current_snapshot(places), files=files, desk=desk.digest,
         arrivals=register_digest(places, night.intake),
@@ -266,9 +308,9 @@ def finish(night: Night, results: list[dict[str, Any]]) -> Summary:
         summary={
             "files_of_no_market": memory["told"],
             "unclaimed": memory["unclaimed"],
-            "files_taken_in": night.files_taken_in,
             "desk_findings": len(desk_findings),
             "late": [finding.market for finding in late],
+            **_told_of(night),
         },
     )  # fmt: skip
     manifest = publish(places, staging, draft)
@@ -277,7 +319,21 @@ def finish(night: Night, results: list[dict[str, Any]]) -> Summary:
     except OSError as error:
         # The switch is done; that it is missing in the log of runs must not say otherwise.
         notes += (f"published, but the log of runs could not be written: {error.strerror} ({places.runs})",)
-    return replace(summarise(manifest, published_now=True, results=results, worst=worst), notes=notes)
+    return replace(summarise(manifest, False, True, results, worst, night.overdue), notes=notes)
+
+
+def _told_of(night: Night) -> dict[str, Any]:
+    """What the manifest says of the night itself."""
+    told: dict[str, Any] = {"files_taken_in": night.files_taken_in}
+    if night.overdue:
+        told["overdue"] = [vars(overdue) | {"lacking": list(overdue.lacking)} for overdue in night.overdue]
+    if night.left:
+        told["not_asked_for"] = list(night.left)
+    if night.wishes.until is not None:
+        told["until"] = night.wishes.until.isoformat()
+    if night.wishes.known is not None:
+        told["known"] = night.wishes.known
+    return told
 
 
 def _now() -> str:
@@ -286,16 +342,19 @@ def _now() -> str:
 
 def _judge(
     desk: Desk, facts: dict[str, dict[str, Any]], results: list[dict[str, Any]], digests: dict[str, str],
-    last: Manifest | None, waived: tuple[tuple[str, str, str], ...] = (),
+    last: Manifest | None, night: Night,
 ) -> dict[str, Verdict]:  # fmt: skip
     """The verdict on every market of the desk."""
-    waivers = {code: f"{WAIVED} {person}: {why}" for code, why, person in waived}
+    waivers = {code: f"{WAIVED} {person}: {why}" for code, why, person in night.wishes.waived}
     errors = {result["market"]: result["error"] for result in results if result["error"] is not None}
     unsound = {result["market"] for result in results if result.get("is_unsound")}
     dates = [datetime.date.fromisoformat(fact["last_session"]) for fact in facts.values()]
     data_date = max(dates, default=datetime.date.min)
     verdicts = {}
     for code, market in desk.markets.items():
+        if code in night.left:
+            verdicts[code] = _stays(code, last)
+            continue
         reasons = (errors[code],) if code in errors else judge_market(market, facts[code], desk.gates, data_date)
         before = last.markets.get(code) if last is not None else None
         # A market that cannot be built has nothing to publish, whoever waives what.
@@ -317,6 +376,16 @@ def _judge(
             state=HELD_BACK, reason="; ".join(reasons), inputs=inputs, facts=served, last_good_snapshot=good
         )
     return verdicts
+
+
+def _stays(market: str, last: Manifest | None) -> Verdict:
+    """The verdict on a market that was not asked for: its tables are those of the snapshot that made them."""
+    before = last.markets.get(market) if last is not None else None
+    if before is None or last is None:
+        return Verdict(state=HELD_BACK, reason="not asked for, and never published", inputs="")
+    if before.state == PUBLISHED and before.last_good_snapshot is None:
+        return before.model_copy(update={"last_good_snapshot": last.name})
+    return before
 
 
 def _desk_findings(memory: dict[str, Any], desk: Desk, staging: Path, files: dict[str, StoredFile]) -> list[Finding]:

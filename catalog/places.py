@@ -103,6 +103,11 @@ class Places:
         return self.store / "runs.jsonl"
 
     @property
+    def last_night(self) -> Path:
+        """What the last night came to, as JSON."""
+        return self.store / "last_night.json"
+
+    @property
     def names(self) -> Path:
         """Names that people gave snapshots, one JSON object."""
         return self.store / "names.json"

@@ -28,6 +28,8 @@ class Run:
     published: int
     held_back: int
     snapshot: str | None = None
+    # The newest intake it built from; in the log alone.
+    intake: int | None = None
 
 
 def read_runs(places: Places) -> list[Run]:

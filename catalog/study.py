@@ -16,11 +16,13 @@ from catalog.kept_desk import desk_of
 from catalog.listings import nearest
 from catalog.places import Places, store_errors, write_whole
 from catalog.standing import find_snapshot, origin_of, read_manifest
-from contracts.build import Laid, lay_plans, prepare_market
+from catalog.wishes import until_of
+from contracts.build import lay_plans, prepare_market
 from contracts.compared import Difference, PlanFigures, differences, figures_of
 from contracts.declared import PLAIN_NAME, validate
 from contracts.errors import DeskError, Mistake, UsageError
 from contracts.evidence import Evidence, gather_evidence
+from contracts.impact import Laid
 from contracts.markets import Market, Plan, inconsistencies
 from contracts.panel import Panel
 from contracts.repairs import Clean
@@ -100,7 +102,8 @@ def carry_plans(
     studied = replace_plans(declared, read_plans(extra, declared))
     arrivals = tuple(arrival for arrival in read_register(places) if arrival.taken_in <= manifest.intake)
     files = assign_files(made_with, Intake(manifest.intake, 0, arrivals, ()), places).files[market]
-    made = prepare_market(replace(gather_inputs(made_with, market, files, places), market=studied))
+    inputs = gather_inputs(made_with, market, files, places)
+    made = prepare_market(replace(inputs, market=studied, until=until_of(manifest, market)))
     panel = made.clean.traded(made.panel)
     notes = []
     if manifest.code != code_digest():

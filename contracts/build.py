@@ -5,7 +5,7 @@ reads or writes a file.
 """
 
 import datetime
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field
 from typing import Any
 
 import numpy as np
@@ -14,22 +14,25 @@ import pyarrow as pa
 from contracts.arrivals import Arrived, settle_arrivals
 from contracts.checks.arrived import account_for_rows, check_days, check_files, check_meetings
 from contracts.checks.gaps import check_gaps
+from contracts.checks.lag import check_lag
 from contracts.checks.rolled import check_back_adjusted, check_rolls
 from contracts.checks.rows import check_rows
 from contracts.checks.shocks import check_shocks
-from contracts.checks.stale import find_stale_runs
+from contracts.checks.stale import StaleRun, find_stale_runs
+from contracts.checks.volumes import check_volumes
 from contracts.deliveries import delivery_of
 from contracts.errors import IntakeError
-from contracts.findings import Action, Finding, Kind, Severity, Waiver, findings_table, waive
+from contracts.findings import Finding, Kind, Severity, Waiver, findings_table, waive
+from contracts.impact import Laid, tell_cleaning, weigh_findings, weight_of
 from contracts.intake import FileRows, ParsedRows, RawFile, parse_rows, split_file
 from contracts.markets import Market
 from contracts.panel import Panel, lay_panel
 from contracts.quality import Gates, Quality
 from contracts.repairs import Clean, DeclaredRepair, clean_panel
-from contracts.rolls import NEVER, Held, lay_rolls
+from contracts.rolls import NEVER, lay_rolls
 from contracts.sessions import day_number, day_of, last_trade_day
-from contracts.splice import Series, carry_forward, check_identities, splice
-from contracts.trend import impact_of_gap, impact_of_price
+from contracts.splice import carry_forward, check_identities, splice
+from contracts.trend import impact_of_gap
 from contracts.written import (
     bars_table,
     files_table,
@@ -41,7 +44,6 @@ from contracts.written import (
 
 # Gates look back so many sessions.
 RECENT_SESSIONS = 60
-_REPLACED = frozenset({Action.REPAIRED, Action.MASKED})
 
 
 # Path, contract (None where its rows say it) and message of a file of which nothing can be read.
@@ -74,15 +76,6 @@ class Built:
 
     tables: dict[str, pa.Table]
     facts: dict[str, Any]
-
-
-@dataclass(frozen=True, eq=False)
-class Laid:
-    """One plan carried through: its name, what was held, and the series (None where nothing ever was)."""
-
-    name: str
-    held: Held
-    series: Series | None
 
 
 @dataclass(frozen=True, eq=False)
@@ -137,18 +130,21 @@ def build_market(inputs: Inputs) -> Built:
     findings += check_files(market.code, files, is_old)
     findings += check_meetings(market.code, parsed, arrived, files, inputs.gates)
     findings += check_days(panel, _left_out(panel, arrived))
-    findings += check_rows(panel, clean.prices)
+    findings += check_rows(panel, clean.prices, clean.levels, clean.is_repaired & ~clean.usable)
     findings += clean.findings
-    findings += _tell_stale(panel, clean, inputs.quality)
-    findings += check_shocks(panel, clean.settle)
+    stale = find_stale_runs(panel, panel.field("settle"), inputs.quality)
+    findings += _tell_stale(panel, stale, inputs.quality)
+    findings += check_shocks(panel, clean.settle * clean.levels)
     findings += check_gaps(panel)
+    findings += check_volumes(panel)
+    findings += check_lag(panel)
     traded = clean.traded(panel)
     laid = lay_plans(traded, clean)
     for one in laid:
         findings += check_rolls(panel, one.name, market.plans[one.name], one.held)
         if one.series is not None:
             findings += check_back_adjusted(panel, one.name, one.held, one.series.settle, one.series.back_adjusted)
-    findings = _weigh(findings, panel, clean, laid, inputs.look_backs)
+    findings = weigh_findings(findings, panel, clean, laid, stale, inputs.look_backs)
     findings = waive(findings, inputs.waivers, market.code, data_date)
     counts = _counts(findings)
     impacts = [_gap_impacts(one, inputs.look_backs) for one in laid]
@@ -161,7 +157,9 @@ def build_market(inputs: Inputs) -> Built:
         "files": files_table(market.code, files, parsed),
         "terms": terms_table(panel),
     }
-    return Built(tables, _facts(findings, panel, files, is_old, laid))
+    facts = _facts(findings, panel, files, is_old, laid)
+    facts["cleaning"] = tell_cleaning(laid, panel, clean, inputs.look_backs)
+    return Built(tables, facts)
 
 
 def _read(inputs: Inputs) -> tuple[list[FileRows], list[bool], list[Failure]]:
@@ -198,9 +196,9 @@ def _left_out(panel: Panel, arrived: Arrived) -> list[tuple[int, str, int]]:
     return [(bar, bars.contracts[bars.contract[bar]], int(bars.session[bar])) for bar in places]
 
 
-def _tell_stale(panel: Panel, clean: Clean, quality: Quality) -> list[Finding]:
+def _tell_stale(panel: Panel, runs: list[StaleRun], quality: Quality) -> list[Finding]:
     found = []
-    for run in find_stale_runs(panel, panel.field("settle"), quality):
+    for run in runs:
         label, first = panel.contracts[run.contract], day_of(panel.sessions[run.first])
         price = float(panel.field("settle")[run.first, run.contract])
         count = run.last - run.first + 1
@@ -228,49 +226,6 @@ def lay_plans(panel: Panel, clean: Clean) -> list[Laid]:
                 check_identities(series, f"{panel.market.code}, plan {name}, nearby {held.nearby}")
             laid.append(Laid(name, held, series))
     return laid
-
-
-def _weigh(
-    findings: list[Finding], panel: Panel, clean: Clean, laid: list[Laid], look_backs: tuple[int, ...]
-) -> list[Finding]:
-    """Give each finding on a replaced settle the sessions whose score it would have turned, at its worst plan."""
-    first_nearbys = [one for one in laid if one.held.nearby == 1 and one.series is not None]
-    weighed = []
-    for finding in findings:
-        if finding.field == "settle" and finding.action in _REPLACED and finding.session is not None:
-            session = int(np.searchsorted(panel.sessions, day_number(finding.session)))
-            contract = panel.contracts.index(finding.contract or "")
-            finding = replace(
-                finding, impact_sessions=_price_impact(panel, clean, first_nearbys, session, contract, look_backs)
-            )
-        weighed.append(finding)
-    return weighed
-
-
-def _price_impact(
-    panel: Panel, clean: Clean, laid: list[Laid], session: int, contract: int, look_backs: tuple[int, ...]
-) -> int:
-    reported = panel.field("settle")[session, contract]
-    worst = 0
-    for one in laid:
-        series = one.series
-        if series is None or session < one.held.start:
-            continue
-        weight = _weight(one.held, session, contract)
-        at = session - one.held.start
-        used = clean.settle[session, contract]
-        if not weight or np.isnan(series.back_adjusted[at]):
-            continue
-        if np.isnan(used):
-            used = series.settle[at]
-        worst = max(worst, impact_of_price(series.back_adjusted, at, weight * (reported - used), look_backs))
-    return worst
-
-
-def _weight(held: Held, session: int, contract: int) -> float:
-    if held.contract[session] == contract:
-        return float(1.0 - held.weight[session])
-    return float(held.weight[session]) if held.incoming[session] == contract else 0.0
 
 
 def _gap_impacts(one: Laid, look_backs: tuple[int, ...]) -> list[int]:
@@ -321,6 +276,7 @@ def _facts(
         "expected": len(panel.sessions),
         "first_session": day_of(panel.sessions[0]).isoformat(),
         "last_session": day_of(panel.sessions[-1]).isoformat(),
+        "newest_contracts": [panel.contracts[at] for at in np.flatnonzero(panel.bar[-1] >= 0)],
         "findings": severities,
         "blocking": _blocking(findings, panel, laid),
         "first_plan": next(iter(panel.market.plans)),
@@ -341,7 +297,7 @@ def _blocking(findings: list[Finding], panel: Panel, laid: list[Laid]) -> list[s
             session = int(np.searchsorted(panel.sessions, day_number(finding.session)))
             contract = panel.contracts.index(finding.contract)
             around = range(max(0, session - 1), min(len(panel.sessions), session + 1))
-            if not any(_weight(one.held, at, contract) for one in laid for at in around):
+            if not any(weight_of(one.held, at, contract) for one in laid for at in around):
                 continue
         messages.append(finding.message)
     return messages

@@ -73,7 +73,7 @@ _ALL = (
     Column("incoming_open_interest", _BIG, COUNT, "incoming contract's open interest as known at the close of decided_on"),
     Column("last_trade", _DAY, "day", "last trading session by the declared rule; in rolls the outgoing contract's"),
     Column("first_notice", _DAY, "day", "first notice day by the declared rule; in rolls the outgoing contract's"),
-    Column("impact_sessions", _INT, "sessions", "sessions whose trend-sign score would differ had the reported price stood, or the gap been left in"),
+    Column("impact_sessions", _INT, "sessions", "sessions whose trend-sign score would differ had the reported price stood (with those of its run), had a kept one been as expected, or the gap been left in"),
     Column("finding", _TEXT, "", "stable identifier of the finding"),
     Column("kind", _TEXT, "", "what was found"),
     Column("severity", _TEXT, "", "note, review or block"),

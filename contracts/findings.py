@@ -62,19 +62,33 @@ class Kind(StrEnum):
     # the prices
     DECIMAL_SHIFT = "decimal_shift"  # a power of ten away from the curve
     REVERTING_SPIKE = "reverting_spike"  # stands alone for a session and comes back
+    DIGITS_SWAPPED = "digits_swapped"  # two neighbouring digits changed about
+    SIGN_FLIPPED = "sign_flipped"  # the price with the other sign
+    NEIGHBOURS_PRICE = "neighbours_price"  # another contract's row under this one's name
+    CURVE_KINKED = "curve_kinked"  # drifted off its neighbours without a jump
     CURVE_BREAK = "curve_break"  # stands alone against the curve, not (yet) seen to come back
     STALE_PRICE = "stale_price"  # unchanged while the rest of the curve moves
+    SCALE_CHANGED = "scale_changed"  # on another power of ten from a session on, undeclared
     LONE_MOVE = "lone_move"  # stands alone, but its own range and volume bear it out
     MARKET_SHOCK = "market_shock"  # the whole curve moved far out of its ordinary size
     # the gaps
     SESSION_MISSING = "session_missing"  # no contract has a bar
+    SESSIONS_MISSING = "sessions_missing"  # no contract has a bar on several sessions in a row
+    MARKET_SILENT = "market_silent"  # no contract has a bar for more than ten sessions in a row
     CONTRACT_MISSING = "contract_missing"  # a contract lacks bars between bars
+    ENDED_EARLY = "ended_early"  # a contract's bars stop well before its last trading session
+    # the volumes
+    VOLUME_IMPLAUSIBLE = "volume_implausible"  # many times its past, its open interest and its bar
+    OPEN_INTEREST_IMPLAUSIBLE = "open_interest_implausible"  # stands alone between the sessions about it
+    OPEN_INTEREST_LAG_WRONG = "open_interest_lag_wrong"  # changes with the volume of another session than its own
     # the rolls and the series
     ROLL_BY_DEADLINE = "roll_forced"  # the backstop came before the trigger
     ROLL_POSTPONED = "roll_postponed"  # waited for two usable settles
     ROLL_MEASURED_STALE = "roll_measured_stale"  # measured on an earlier session than it should be
     ROLL_UNMEASURED = "roll_unmeasured"  # no session has both settles: the series is cut
     ROLL_PENDING = "roll_pending"  # decided, takes effect after the data's end
+    THIN_INCOMING = "thin_incoming"  # rolled into a contract that hardly trades
+    AFTER_FIRST_NOTICE = "after_first_notice"  # held on sessions on which delivery may be called
     FORCE_UNUSED = "force_unused"  # a person's decision found nothing to decide
     RATIO_UNDEFINED = "ratio_undefined"  # a leg at or below zero
     PERCENT_OF_BACK_ADJUSTED_UNDEFINED = "percent_of_back_adjusted_undefined"  # at or below zero, the settle above
@@ -83,6 +97,13 @@ class Kind(StrEnum):
     REPAIR_REFUSED = "repair_refused"  # the value it names does not stand
     WAIVER_EXPIRED = "waiver_expired"  # past its day
     WAIVER_UNMATCHED = "waiver_unmatched"  # covers no finding
+
+
+# What is said of one settle that stands alone may change when tomorrow comes; it stays one finding.
+_ONE_SETTLE = frozenset({
+    Kind.DECIMAL_SHIFT, Kind.REVERTING_SPIKE, Kind.DIGITS_SWAPPED, Kind.SIGN_FLIPPED, Kind.NEIGHBOURS_PRICE,
+    Kind.CURVE_BREAK, Kind.LONE_MOVE,
+})  # fmt: skip
 
 
 @dataclass(frozen=True)
@@ -109,8 +130,9 @@ class Finding:
 
     @property
     def identity(self) -> str:
-        """Stable identifier: the same fault has it in every build."""
-        parts = (self.market, self.contract, self.session, self.kind, self.field, self.detail)
+        """Stable identifier: the same fault has it in every build, by whatever kind of wrong settle it is called."""
+        kind = Kind.CURVE_BREAK if self.kind in _ONE_SETTLE else self.kind
+        parts = (self.market, self.contract, self.session, kind, self.field, self.detail)
         text = "|".join("" if part is None else str(part) for part in parts)
         return hashlib.sha256(text.encode()).hexdigest()[:12]
 

@@ -7,6 +7,7 @@ days its rules give (`sessions.py`), rolling by its plans (`rolls.py`).
 import datetime
 import itertools
 import re
+import zoneinfo
 from enum import StrEnum
 from functools import lru_cache
 from typing import Annotated, Any
@@ -93,6 +94,20 @@ def _rising(values: tuple[int, ...]) -> tuple[int, ...]:
 def _date_only(value: Any) -> Any:
     if isinstance(value, datetime.datetime) or not isinstance(value, datetime.date):
         raise ValueError(f"seen {value!r}; expected a date without quotes, such as 2024-12-25")
+    return value
+
+
+def _time_of_day(value: str) -> str:
+    if re.fullmatch(r"([01]\d|2[0-3]):[0-5]\d", value) is None:
+        raise ValueError(f"seen {value!r}; expected a time of day from 00:00 to 23:59, such as '18:30'")
+    return value
+
+
+def _zone(value: str) -> str:
+    try:
+        zoneinfo.ZoneInfo(value)
+    except (zoneinfo.ZoneInfoNotFoundError, ValueError, OSError):
+        raise ValueError(f"seen {value!r}; expected a time zone such as 'Europe/Oslo'") from None
     return value
 
 
@@ -238,10 +253,18 @@ class Market(Declared):
     opened: Days = ()
     open_interest_lag: Annotated[int, Field(ge=0, le=20)] = 0
     currency_note: str = ""
+    # By when a session's files are due, that day or so many calendar days after it; decides no table.
+    due: Annotated[str, AfterValidator(_time_of_day)] | None = None
+    due_zone: Annotated[str, AfterValidator(_zone)] | None = None
+    due_days_after: Annotated[int, Field(ge=0, le=7)] = 0
     last_trade: Rules
     first_notice: Rules = ()
     rescaled: Annotated[tuple[Rescaled, ...], BeforeValidator(_tuple)] = ()
     plans: dict[PlanName, Plan] = Field(min_length=1)
+
+
+# What of a market plays no part in its tables.
+OF_THE_CLOCK = frozenset({"due", "due_zone", "due_days_after"})
 
 
 def rule_for(rules: tuple[DayRule, ...], delivery: Delivery) -> DayRule | None:
@@ -274,6 +297,11 @@ def inconsistencies(market: Market, text: str, file: str) -> list[Mistake]:
     both = sorted(set(market.closed) & set(market.opened))
     if both:
         add(("closed",), f"{both[0]} in closed and in opened", "a day in one of them")
+    if (market.due is None) != (market.due_zone is None):
+        given, lacking = ("due", "due_zone") if market.due_zone is None else ("due_zone", "due")
+        add((given,), f"{given} without {lacking}", "due, such as '18:30', and due_zone, such as 'Europe/Oslo'")
+    if market.due_days_after and market.due is None:
+        add(("due_days_after",), "due_days_after without due", "due and due_zone beside it")
     for name, plan in market.plans.items():
         if plan.before is not Before.LAST_TRADE and not market.first_notice:
             add(

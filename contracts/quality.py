@@ -24,6 +24,8 @@ class Quality(Declared):
     refuted_score: Annotated[float, BeforeValidator(_number), Field(ge=1, le=1000)] = 8.0
     # ... and ticks, so that a quiet curve does not make a tick look large.
     refuted_ticks: Annotated[float, BeforeValidator(_number), Field(ge=1, le=100000)] = 6.0
+    # Scales, by the root of the sessions it took, by which a contract must have drifted off its neighbours.
+    kinked_score: Annotated[float, BeforeValidator(_number), Field(ge=1, le=1000)] = 4.0
     # Contracts of the curve that are asked, the nearest in delivery.
     nearest_contracts: Annotated[int, Field(ge=2, le=50)] = 5
     # Sessions a settle may stand unchanged while the rest of the curve moves.

@@ -12,7 +12,9 @@ import numpy as np
 from pydantic import AfterValidator, Field
 
 from contracts.arrivals import Bars
-from contracts.checks.prices import Ruling, Verdict, judge_settles
+from contracts.checks.kinks import Kink, find_kinks
+from contracts.checks.prices import Judgment, Ruling, Verdict, judge_settles
+from contracts.checks.scale import check_scale, find_scale_changes, lay_levels, put_on_one_scale
 from contracts.declared import Declared
 from contracts.findings import Action, Finding, Kind, Severity
 from contracts.intake import scale_prices
@@ -60,6 +62,7 @@ class Clean:
     is_repaired: np.ndarray
     is_masked: np.ndarray
     usable: np.ndarray
+    levels: np.ndarray
     verdicts: tuple[Verdict, ...]
     findings: tuple[Finding, ...]
 
@@ -79,9 +82,17 @@ def clean_panel(panel: Panel, bars: Bars, repairs: tuple[DeclaredRepair, ...], q
     """Make the declared repairs, then replace or mask what the checks refute."""
     values = panel.values.copy()
     declared, findings = _make_declared(panel, bars, values, repairs)
+    changes = find_scale_changes(panel, values[_SETTLE])
+    findings += check_scale(panel, changes)
+    # One contract off the curve's scale is a misplaced decimal; a whole market's scale is for a person to say.
+    own = lay_levels(panel.shape, [change for change in changes if change.contract is not None])
+    levels = lay_levels(panel.shape, [change for change in changes if change.contract is None])
+    is_moved = (own != 1.0) & ~np.isnan(values[_SETTLE])
+    values = put_on_one_scale(values, own)
     settle = values[_SETTLE]
-    verdicts = judge_settles(panel, settle, declared, quality)
-    is_repaired, is_masked = declared.copy(), np.zeros(panel.shape, dtype=bool)
+    judged = _judge(panel, values, levels, declared, quality)
+    verdicts = judged.verdicts
+    is_repaired, is_masked = declared | is_moved, np.zeros(panel.shape, dtype=bool)
     for verdict in verdicts:
         findings.append(_tell(panel, settle, verdict))
         if verdict.ruling is not Ruling.REFUTED:
@@ -89,6 +100,8 @@ def clean_panel(panel: Panel, bars: Bars, repairs: tuple[DeclaredRepair, ...], q
         at = (verdict.session, verdict.contract)
         if verdict.power:
             _shift_back(values, at, settle[at], verdict.power)
+    for kink in find_kinks(judged.curve, judged.refuted, judged.kept, quality):
+        findings.append(_tell_kink(panel, settle, kink))
     for verdict in verdicts:
         if verdict.ruling is Ruling.REFUTED:
             at = (verdict.session, verdict.contract)
@@ -96,12 +109,26 @@ def clean_panel(panel: Panel, bars: Bars, repairs: tuple[DeclaredRepair, ...], q
             is_repaired[at] = not math.isnan(verdict.expected)
             is_masked[at] = math.isnan(verdict.expected)
     prices = values[: len(PRICE_FIELDS)]
-    _drop_misfits(prices, panel.market.may_be_negative, panel.market.tick_size)
+    level = put_on_one_scale(values, levels)[: len(PRICE_FIELDS)]
+    _drop_misfits(level, panel.market.may_be_negative, panel.market.tick_size)
+    prices[np.isnan(level)] = np.nan
     usable = ~np.isnan(panel.field("settle")) & ~is_masked & (~is_repaired | declared)
     return Clean(
         prices, values[BAR_FIELDS.index("volume")], values[BAR_FIELDS.index("open_interest")],
-        is_repaired, is_masked, usable, tuple(verdicts), tuple(findings),
+        is_repaired, is_masked, usable, levels, verdicts, tuple(findings),
     )  # fmt: skip
+
+
+def _judge(panel: Panel, values: np.ndarray, levels: np.ndarray, declared: np.ndarray, quality: Quality) -> Judgment:
+    """The verdicts on settles, judged on one scale and told on the scale they were reported on."""
+    level = put_on_one_scale(values, levels)
+    judged = judge_settles(replace(panel, values=level), level[_SETTLE], declared, quality)
+    at = [levels[verdict.session, verdict.contract] for verdict in judged.verdicts]
+    verdicts = tuple(
+        verdict if one == 1.0 else replace(verdict, expected=round(verdict.expected / one, 10))
+        for verdict, one in zip(judged.verdicts, at, strict=True)
+    )
+    return replace(judged, verdicts=verdicts)
 
 
 def _make_declared(
@@ -185,9 +212,22 @@ def _drop_misfits(prices: np.ndarray, may_be_negative: bool, tick: float) -> Non
 _SAYS = {
     Kind.REVERTING_SPIKE: "stands {distance:+.10g} from where the curve puts it and comes back",
     Kind.CURVE_BREAK: "stands {distance:+.10g} from where the curve puts it",
-    Kind.LONE_MOVE: "moved {distance:+.10g} against the curve, borne out by its own range and volume",
+    Kind.LONE_MOVE: "moved {distance:+.10g} against the curve",
     Kind.NOT_POSITIVE: "is not above zero, which this market's price cannot be",
+    Kind.SIGN_FLIPPED: "has the wrong sign",
+    Kind.DIGITS_SWAPPED: "has two digits changed about, {distance:+.10g} from where the curve puts it",
 }
+
+
+def _say(panel: Panel, verdict: Verdict, price: float) -> str:
+    """What is said against the settle, or for it."""
+    if verdict.kind is Kind.DECIMAL_SHIFT:
+        size = f"{10 ** abs(verdict.power)}"
+        return f"is {size} times too large" if verdict.power > 0 else f"is 1/{size} of what it should be"
+    if verdict.kind is Kind.NEIGHBOURS_PRICE:
+        return f"and its whole row are those of {panel.contracts[verdict.other]}"
+    says = _SAYS[verdict.kind].format(distance=round(price - verdict.expected, 10))
+    return f"{says}, {verdict.why_kept}" if verdict.why_kept else says
 
 
 def _tell(panel: Panel, settle: np.ndarray, verdict: Verdict) -> Finding:
@@ -196,25 +236,34 @@ def _tell(panel: Panel, settle: np.ndarray, verdict: Verdict) -> Finding:
     label, day = panel.contracts[verdict.contract], day_of(panel.sessions[verdict.session])
     price = float(settle[at])
     is_known = not math.isnan(verdict.expected)
-    if verdict.kind is Kind.DECIMAL_SHIFT:
-        size = f"{10 ** abs(verdict.power)}"
-        says = f"is {size} times too large" if verdict.power > 0 else f"is 1/{size} of what it should be"
-    elif verdict.kind is Kind.LONE_MOVE and price <= 0:
-        says = "lies at or below zero, as this market's price may"
-    else:
-        says = _SAYS[verdict.kind].format(distance=round(price - verdict.expected, 10))
+    says = _say(panel, verdict, price)
     if verdict.ruling is Ruling.KEPT:
         action, done = Action.KEPT, "kept"
         severity = Severity.NOTE if verdict.kind is Kind.LONE_MOVE else Severity.REVIEW
     elif is_known:
-        action, done, severity = Action.REPAIRED, f"repaired to {verdict.expected:.10g}", Severity.REVIEW
+        action, severity = Action.REPAIRED, Severity.REVIEW
+        done = f"repaired to {verdict.expected:.10g} from its neighbours' moves, within about {2 * verdict.error:.2g}"
     else:
         why = "its bar traded down to it: see whether may_be_negative is right" if verdict.is_borne_out else ""
         action, severity = Action.MASKED, Severity.REVIEW
         done = f"masked, for {why or 'the curve cannot say'}"
     return Finding(
         verdict.kind, severity, f"{label}, {day}: settle {price:.10g} {says}; {done}", panel.market.code, label, day,
-        "settle", price, verdict.expected if is_known else None,
-        None if math.isnan(verdict.score) else verdict.score, None, action,
-        verdict.expected if action is Action.REPAIRED else None,
+        "settle", price, verdict.expected if is_known else None, _known(verdict.score), _known(verdict.threshold),
+        action, verdict.expected if action is Action.REPAIRED else None,
     )  # fmt: skip
+
+
+def _tell_kink(panel: Panel, settle: np.ndarray, kink: Kink) -> Finding:
+    """A drift, for a person to look at; no session of it is wrong by itself."""
+    label, day = panel.contracts[kink.contract], day_of(panel.sessions[kink.session])
+    price, drift = float(settle[kink.session, kink.contract]), round(kink.drift, 6)
+    message = f"{label}, {day}: settle {price:.10g} has drifted {drift:+.6g} off its neighbours without a leap; kept"
+    return Finding(
+        Kind.CURVE_KINKED, Severity.REVIEW if kink.is_plain else Severity.NOTE, message, panel.market.code, label, day,
+        "settle", price, round(price - drift, 10), kink.score, kink.threshold,
+    )  # fmt: skip
+
+
+def _known(value: float) -> float | None:
+    return None if math.isnan(value) else value

@@ -125,8 +125,6 @@ class _Market:
     def first_hold(self, start: int, after: int) -> tuple[int, int]:
         """First session from `start`, and the contract, that rule 2 holds there; (NEVER, NEVER) for none."""
         able = self.eligible[self.eligible > after]
-        if not len(able) or start >= self.length:
-            return NEVER, NEVER
         sessions = np.arange(start, self.length)
         open_to = self.usable[start:, able] & (self.deadline(able, sessions[:, None]) > sessions[:, None])
         rows = np.flatnonzero(open_to.any(axis=1))
@@ -144,8 +142,8 @@ class _Market:
             chosen[sessions >= self.first_bar[contract]] = contract
         if self.plan.incoming is Incoming.MOST_ACTIVE:
             activity = self.volume if self.plan.trigger is Trigger.VOLUME else self.known_interest
-            values = activity[np.ix_(sessions, after)]
-            values = np.where(np.isnan(values) | (self.first_bar[after] > sessions[:, None]), -np.inf, values)
+            # Before its first bar a contract has neither volume nor open interest.
+            values = np.nan_to_num(activity[np.ix_(sessions, after)], nan=-np.inf)
             best = values.argmax(axis=1)
             known = values[np.arange(len(sessions)), best] > -np.inf
             chosen = np.where(known, after[best], chosen)
@@ -177,20 +175,16 @@ class _Market:
 def decide(market: _Market, outgoing: int, start: int) -> Decision | None:
     """The next decision to leave a contract, from the close of `start` on; None where the data hold none."""
     plan = market.plan
-    if start >= market.length:
-        return None
     forced = market.forces.get(outgoing)
     if forced is not None:
         decided = market.decides_force(forced)
         if decided >= start:
             if decided >= market.length:
                 return None
-            incoming = int(market.incoming_from(outgoing, np.array([decided]))[0])
+            incoming = market.incoming_from(outgoing, np.array([decided])).item()
+            # Where none was known then, none was before: the rule below finds nothing earlier.
             if incoming != NEVER:
                 return Decision(decided, outgoing, incoming, FORCED, forced)
-        start = max(start, decided + 1)
-        if start >= market.length:
-            return None
     sessions = np.arange(start, market.length)
     incoming_by_session = market.incoming_from(outgoing, sessions)
     fired = market.fires(outgoing, incoming_by_session, sessions)
@@ -210,24 +204,18 @@ def carry_out(market: _Market, decision: Decision) -> tuple[list[RollStep], bool
     steps = market.plan.steps
     outgoing, incoming = decision.outgoing, decision.incoming
     last = int(market.last_trade[outgoing])
+    both = market.usable[:, outgoing] & market.usable[:, incoming]
     rows: list[RollStep] = []
     earliest = decision.planned - 1
     for step in range(steps):
-        planned = max(decision.planned - 1 + step, earliest)
-        if planned >= market.length:
+        found = np.flatnonzero(both[earliest : last + 1])
+        if not len(found):
+            return _close_stale(market, decision, rows, step, last)
+        measured = earliest + int(found[0])
+        earliest = measured + 1
+        if earliest >= market.length:
             return rows, False
-        both = market.usable[:, outgoing] & market.usable[:, incoming]
-        found = np.flatnonzero(both[planned : max(last, planned - 1) + 1]) if planned <= last else np.empty(0, np.int64)
-        if len(found):
-            measured = planned + int(found[0])
-            if measured + 1 >= market.length:
-                return rows, False
-            rows.append(_row(market, decision, step, incoming, measured, measured + 1, (step + 1) / steps, rows))
-            earliest = measured + 1
-            continue
-        if last >= market.length:
-            return rows, False
-        return _close_stale(market, decision, rows, step, last)
+        rows.append(_row(market, decision, step, incoming, measured, earliest, (step + 1) / steps, rows))
     return rows, True
 
 
@@ -236,37 +224,31 @@ def _row(
     earlier: list[RollStep], is_stale: bool = False,
 ) -> RollStep:  # fmt: skip
     settle = market.settle
-    planned = decision.planned - 1 + step
     return RollStep(
         decision, step + 1, measured, effective, incoming, earlier[-1].weight_after if earlier else 0.0, weight,
         float(settle[measured, decision.outgoing]), float(settle[measured, incoming]), is_stale,
-        max(0, measured - planned) if not is_stale else max(0, effective - 1 - planned),
+        effective - decision.planned - step,
     )  # fmt: skip
 
 
 def _close_stale(
     market: _Market, decision: Decision, rows: list[RollStep], step: int, last: int
 ) -> tuple[list[RollStep], bool]:
-    """The outgoing's last trading session passed without two usable settles: measure on an earlier session."""
+    """No two usable settles up to the outgoing's last trading session: measure earlier, once it has passed."""
     effective = max(decision.planned + step, last + 1)
     if effective >= market.length:
         return rows, False
-    until = last + 1
-    candidates = [decision.incoming]
-    if not rows:
-        candidates += [int(other) for other in market.later(decision.outgoing, last) if other > decision.incoming]
-    for incoming in candidates:
-        both = market.usable[:until, decision.outgoing] & market.usable[:until, incoming]
-        found = np.flatnonzero(both)
+    # A step that has moved was measured with the incoming on a session that serves again: only a first step looks on.
+    for incoming in [decision.incoming, *market.later(decision.incoming, last).tolist()]:
+        both = market.usable[:, decision.outgoing] & market.usable[:, incoming]
+        found = np.flatnonzero(both[: last + 1])
         if len(found):
             rows.append(_row(market, decision, step, incoming, int(found[-1]), effective, 1.0, rows, is_stale=True))
             return rows, True
     restart, contract = market.first_hold(max(last + 1, decision.planned), decision.outgoing)
     if restart == NEVER:
         return rows, False
-    before = rows[-1].weight_after if rows else 0.0
-    rows.append(RollStep(decision, step + 1, NEVER, restart, contract, before, 1.0, math.nan, math.nan))
-    return rows, True
+    return [RollStep(decision, 1, NEVER, restart, contract, 0.0, 1.0, math.nan, math.nan)], True
 
 
 def lay_rolls(panel: Panel, usable: np.ndarray, settle: np.ndarray, plan: Plan) -> list[Held]:
@@ -276,11 +258,14 @@ def lay_rolls(panel: Panel, usable: np.ndarray, settle: np.ndarray, plan: Plan) 
     settles those rolls are measured with. Returns one Held for each of `plan.nearbys`, in that order.
     """
     market = _Market(panel, usable, settle, plan)
-    first = _lay_first(market, panel)
-    return [first if nearby == 1 else _lay_later(market, first, nearby) for nearby in plan.nearbys]
+    first = _lay_first(market)
+    laid = [first if nearby == 1 else _lay_later(market, first, nearby) for nearby in plan.nearbys]
+    # A plan that publishes farther nearbys only must still say that a person's decision had no effect.
+    laid[0].unused = _unused_forces(market, panel, first)
+    return laid
 
 
-def _lay_first(market: _Market, panel: Panel) -> Held:
+def _lay_first(market: _Market) -> Held:
     start, contract = market.first_hold(0, NEVER)
     held = _empty(market.length, 1, start)
     first, at = contract, start
@@ -292,18 +277,18 @@ def _lay_first(market: _Market, panel: Panel) -> Held:
             held.pending = decision
             break
         contract, at = rows[-1].incoming, rows[-1].effective
-    done = {decision.outgoing for decision in held.decisions if decision.trigger == FORCED}
-    due = {outgoing for outgoing, effective in market.forces.items() if market.decides_force(effective) < market.length}
-    # A contract that never arrived cannot have been left either.
-    unknown = {
-        force.outgoing
-        for force in market.plan.force
-        if force.outgoing not in panel.contracts and day_number(force.effective) <= panel.sessions[-1]
-    }
-    held.unused = sorted({panel.contracts[c] for c in due - done} | unknown)
     if start != NEVER:
         _fill(held, first)
     return held
+
+
+def _unused_forces(market: _Market, panel: Panel, first: Held) -> list[str]:
+    """Outgoing contracts of forced rolls that were due within the data and found nothing to decide."""
+    done = {panel.contracts[decision.outgoing] for decision in first.decisions if decision.trigger == FORCED}
+    # A session so late is decided on after the end of the data. A contract that never arrived is told of too.
+    later = panel.calendar.shift(int(panel.sessions[-1]), market.plan.delay + 1)
+    due = {force.outgoing for force in market.plan.force if day_number(force.effective) < later}
+    return sorted(due - done)
 
 
 @dataclass
@@ -358,9 +343,8 @@ class _Strand:
         if self.roll is None:
             self.roll = self._decide(Decision(session, leaving, target, trigger, planned))
         elif math.isinf(self.roll.ends):
-            decision = Decision(session, leaving, target, trigger, planned)
-            self.held.decisions.append(decision)
-            self.queued = _Roll(decision, [], False)
+            # What it waits for does not end within the data.
+            self.held.decisions.append(Decision(session, leaving, target, trigger, planned))
         else:
             behind = max(planned, int(self.roll.ends) + 1)
             self.queued = self._decide(Decision(session, leaving, target, trigger, behind))
@@ -390,9 +374,8 @@ def _lay_later(market: _Market, first: Held, nearby: int) -> Held:
     strand = _Strand(market, held, holding)
     ends = [*(event.decided for event in first.decisions), market.length][1:]
     for event, following in zip(first.decisions, ends, strict=True):
-        if event.decided >= start:
-            strand.complete_until(event.decided)
-            strand.drop_waiting(event.decided)
+        strand.complete_until(event.decided)
+        strand.drop_waiting(event.decided)
         known = _known_from(market, event.incoming, nearby)
         session = max(event.decided, known, start)
         if known == NEVER or session >= following:
@@ -421,16 +404,16 @@ def _start_later(market: _Market, first: Held, nearby: int) -> tuple[int, int]:
 
 
 def _counted(market: _Market, base: int, session: int, nearby: int) -> int:
-    """The n-th contract counted from `base` among those known at the close of a session."""
-    return base if nearby == 1 else int(market.later(base, session)[nearby - 2])
+    """The n-th contract (n of 2 or more) counted from `base` among those known at the close of a session."""
+    return int(market.later(base, session)[nearby - 2])
 
 
 def _known_from(market: _Market, base: int, nearby: int) -> int:
-    """The first session that knows n contracts counted from `base`; NEVER where there are fewer."""
+    """The first session that knows n (2 or more) contracts counted from `base`; NEVER where there are fewer."""
     after = market.eligible[market.eligible > base]
     if len(after) < nearby - 1:
         return NEVER
-    return 0 if nearby == 1 else int(np.sort(market.first_bar[after])[nearby - 2])
+    return int(np.sort(market.first_bar[after])[nearby - 2])
 
 
 def _empty(length: int, nearby: int, start: int) -> Held:

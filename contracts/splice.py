@@ -56,10 +56,13 @@ def carry_forward(settle: np.ndarray, is_repaired: np.ndarray) -> tuple[np.ndarr
 
 def mix(held: Held, values: np.ndarray) -> np.ndarray:
     """A field of the held contracts by their weights, (T - start,); NaN where a leg has none."""
-    rows = np.arange(held.start, len(values))
+    return _mix_on(held, values, np.arange(held.start, len(values)))
+
+
+def _mix_on(held: Held, values: np.ndarray, rows: np.ndarray) -> np.ndarray:
+    """What is held through each session from the start on, valued on another session each, (T - start,)."""
     contract, incoming, weight = (part[held.start :] for part in (held.contract, held.incoming, held.weight))
-    outgoing_leg = values[rows, contract]
-    incoming_leg = np.where(incoming == NEVER, 0.0, values[rows, np.maximum(incoming, 0)])
+    outgoing_leg, incoming_leg = values[rows, contract], values[rows, incoming]
     return np.where(incoming == NEVER, outgoing_leg, (1 - weight) * outgoing_leg + weight * incoming_leg)
 
 
@@ -74,15 +77,15 @@ def splice(held: Held, carried: np.ndarray, status: np.ndarray) -> Series:
     rows = np.arange(start, length)
     settle = mix(held, carried)
     row_status = status[rows, held.contract[start:]]
-    second = np.where(held.incoming[start:] == NEVER, REPORTED, status[rows, np.maximum(held.incoming[start:], 0)])
+    second = np.where(held.incoming[start:] == NEVER, REPORTED, status[rows, held.incoming[start:]])
     row_status = np.maximum(row_status, second)
-    shift, scale, is_cut = _later_rolls(held, start, length)
+    shift, scale, first_whole = _later_rolls(held, start, length)
     base, base_of_return = _held_before(held, carried, settle)
     change = settle - base
     with np.errstate(invalid="ignore", divide="ignore"):
         is_positive = (settle > 0) & (base_of_return > 0)
         simple_return = np.where(is_positive, settle / base_of_return - 1.0, np.nan)
-    growth = _growth(simple_return, settle, scale, is_cut)
+    growth = _growth(simple_return, settle, first_whole)
     rolled = np.zeros(length - start, dtype=bool)
     for step in held.steps:
         rolled[step.effective - start] = True
@@ -91,27 +94,20 @@ def splice(held: Held, carried: np.ndarray, status: np.ndarray) -> Series:
     )
 
 
-def _later_rolls(held: Held, start: int, length: int) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-    """Shift and scale of every session, and a mask of those from which the unbroken scale runs."""
+def _later_rolls(held: Held, start: int, length: int) -> tuple[np.ndarray, np.ndarray, int]:
+    """Shift and scale of every session, and the place from which on there is a scale."""
     shift, scale = np.zeros(length - start), np.ones(length - start)
     gaps: list[float] = []
-    product, is_whole = 1.0, True
-    total = 0.0
-    first_whole = 0
-    until = length
+    product, first_whole = 1.0, 0
     for step in reversed(held.steps):
-        shift[step.effective - start : until - start] = total
-        scale[step.effective - start : until - start] = product if is_whole else math.nan
-        until = step.effective
+        at = step.effective - start
         gaps.append(step.gap)
-        # fsum is exact until its one rounding, so that the sum can be done again with a pencil.
-        total = math.fsum(gaps)
         product *= step.ratio
-        if is_whole and math.isnan(product):
-            is_whole, first_whole = False, step.effective - start
-    shift[: until - start] = total
-    scale[: until - start] = product if is_whole else math.nan
-    return shift, scale, np.arange(length - start) >= first_whole
+        # fsum is exact until its one rounding, so that the sum can be done again with a pencil.
+        shift[:at], scale[:at] = math.fsum(gaps), product
+        if math.isnan(product):
+            first_whole = max(first_whole, at)
+    return shift, scale, first_whole
 
 
 def _held_before(held: Held, carried: np.ndarray, settle: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
@@ -122,16 +118,10 @@ def _held_before(held: Held, carried: np.ndarray, settle: np.ndarray) -> tuple[n
     are counted from, and as the outgoing's times their ratio, where there is one, for the second, which
     returns are.
     """
-    start, length = held.start, len(carried)
-    count = length - start
-    priced = np.maximum.accumulate(np.where(np.isnan(settle), -1, np.arange(count)))
+    start = held.start
+    priced = np.maximum.accumulate(np.where(np.isnan(settle), -1, np.arange(len(settle))))
     before = np.concatenate(([-1], priced[:-1]))
-    at = np.maximum(before, 0) + start
-    contract, incoming, weight = (part[start:] for part in (held.contract, held.incoming, held.weight))
-    outgoing_leg = carried[at, contract]
-    incoming_leg = np.where(incoming == NEVER, 0.0, carried[at, np.maximum(incoming, 0)])
-    base = np.where(incoming == NEVER, outgoing_leg, (1 - weight) * outgoing_leg + weight * incoming_leg)
-    base = np.where(before < 0, np.nan, base)
+    base = np.where(before < 0, np.nan, _mix_on(held, carried, before + start))
     base_of_return = base.copy()
     places = np.flatnonzero(~np.isnan(settle))
     since_last: dict[int, list[RollStep]] = {}
@@ -150,13 +140,11 @@ def _held_before(held: Held, carried: np.ndarray, settle: np.ndarray) -> tuple[n
     return base, base_of_return
 
 
-def _growth(simple_return: np.ndarray, settle: np.ndarray, scale: np.ndarray, is_whole: np.ndarray) -> np.ndarray:
+def _growth(simple_return: np.ndarray, settle: np.ndarray, first_whole: int) -> np.ndarray:
     """Compounded return, 100 on its first session; it begins after the last break."""
     priced = ~np.isnan(settle)
-    breaks = np.flatnonzero(priced & (settle <= 0))
-    first = int(np.argmax(is_whole & ~np.isnan(scale))) if (is_whole & ~np.isnan(scale)).any() else len(settle)
-    if len(breaks):
-        first = max(first, int(breaks[-1]) + 1)
+    breaks = np.flatnonzero(settle <= 0)
+    first = max(first_whole, int(breaks[-1]) + 1) if len(breaks) else first_whole
     growth = np.full(len(settle), np.nan)
     places = np.flatnonzero(priced[first:]) + first
     if len(places):
@@ -176,18 +164,20 @@ def check_identities(series: Series, label: str) -> None:
     places = np.flatnonzero(~np.isnan(back))
     size = np.maximum(1.0, np.abs(back[places]))
     off = np.abs(np.diff(back[places]) - series.change[places][1:])
-    _refuse(off > _TOLERANCE * size[1:], places, label, "back-adjusted change is not the held position's change")
-    places = np.flatnonzero(~np.isnan(series.ratio_adjusted) & ~np.isnan(series.simple_return))
-    follows = places[1:][np.diff(places) == 1] if len(places) else places
-    ratio = series.ratio_adjusted[follows] / series.ratio_adjusted[follows - 1] - 1.0
-    off = np.abs(ratio - series.simple_return[follows])
+    _refuse(off > _TOLERANCE * size[1:], places[1:], label, "back-adjusted change is not the held position's change")
+    places = np.flatnonzero(~np.isnan(series.ratio_adjusted))
+    ratio_adjusted = series.ratio_adjusted[places]
+    with np.errstate(divide="ignore", invalid="ignore"):
+        moved = ratio_adjusted[1:] / ratio_adjusted[:-1] - 1.0
+        # There is no return on or from a price at or below zero, and nothing to hold the quotient against.
+        off = np.abs(moved - series.simple_return[places][1:])
     _refuse(
-        off > _TOLERANCE * np.maximum(1.0, np.abs(ratio)), follows, label, "ratio-adjusted return is not its return"
+        off > _TOLERANCE * np.maximum(1.0, np.abs(moved)), places[1:], label, "ratio-adjusted return is not its return"
     )
 
 
 def _refuse(wrong: np.ndarray, places: np.ndarray, label: str, text: str) -> None:
     found = np.flatnonzero(wrong)
     if len(found):
-        at = int(places[min(int(found[0]) + 1, len(places) - 1)])
+        at = int(places[found[0]])
         raise IdentityError(f"{label}, session {at} of the series: {text}; nothing of this market is published")

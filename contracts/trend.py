@@ -33,11 +33,13 @@ def turned_sessions(before: np.ndarray, after: np.ndarray, look_backs: tuple[int
     return int(np.count_nonzero(~same))
 
 
-def impact_of_price(back_adjusted: np.ndarray, at: int, difference: float, look_backs: tuple[int, ...]) -> int:
-    """Sessions whose score would differ had the price of one session stood `difference` higher."""
-    low, high = _window(at, 1, len(back_adjusted), look_backs)
+def impact_of_prices(
+    back_adjusted: np.ndarray, at: np.ndarray, differences: np.ndarray, look_backs: tuple[int, ...]
+) -> int:
+    """Sessions whose score would differ had the prices of some sessions together stood so much higher."""
+    low, high = _window(int(at[0]), int(at[-1] - at[0]) + 1, len(back_adjusted), look_backs)
     altered = back_adjusted[low:high].copy()
-    altered[at - low] += difference
+    altered[at - low] += differences
     return turned_sessions(back_adjusted[low:high], altered, look_backs)
 
 

@@ -5,32 +5,26 @@ frame around a command (`shell.py`), any computation. Heavy modules are imported
 """
 
 import datetime
-import os
 import re
 from collections.abc import Sized
-from dataclasses import replace
-from typing import TYPE_CHECKING, Any
 
 import click
 
 from contracts.errors import UsageError
 from flows.changes import changes
 from flows.exits import Exit
+from flows.nights import build, nightly, read_day
 from flows.propose import propose
 from flows.prune import prune
-from flows.render import complain, say, say_json, say_table
+from flows.render import say, say_json, say_table
 from flows.rolls import rolls
-from flows.settings import Where
+from flows.schedule_command import schedule
 from flows.shell import Asked, Ropewalk, command, show_version
 from flows.study import study
-
-if TYPE_CHECKING:
-    from catalog.summary import Summary
 
 # What a person reads of the quality log in one go; a machine gets all of it.
 _FINDINGS_SHOWN = 50
 _CONTRACT_COLUMNS = ("contract", "last_trade", "first_notice")
-_FINDING_COLUMNS = ("impact_sessions", "severity", "action", "waived_until", "message", "finding")
 
 
 @click.group(cls=Ropewalk, context_settings={"max_content_width": 100})
@@ -40,107 +34,6 @@ def main() -> None:
 
     Without options every command works on the sample desk that comes with the program, in ./published.
     """
-
-
-_jobs = click.option(
-    "--jobs",
-    type=click.IntRange(min=1),
-    metavar="N",
-    help="Number of workers.  [default: one a processor, at least 2]",
-)
-
-
-_rehash = click.option(
-    "--rehash", is_flag=True, help="Read every raw file and published table again; mend what is damaged."
-)
-
-
-_waive_gate = click.option(
-    "--waive-gate",
-    nargs=2,
-    multiple=True,
-    metavar="MARKET REASON",
-    help="Publish MARKET tonight though its gate would hold it back; reason and person are recorded.",
-)
-
-
-def _with_waived(where: Where, waive_gate: tuple[tuple[str, str], ...]) -> Where:
-    if any(not why.strip() for _, why in waive_gate):
-        raise UsageError("--waive-gate: seen an empty reason; expected why the market may go out")
-    return replace(where, waived=tuple((market, why, _person()) for market, why in waive_gate))
-
-
-def _person() -> str:
-    import getpass
-
-    try:
-        return getpass.getuser()
-    except (OSError, KeyError):
-        # A container may run under a number that has no name.
-        return f"user {os.getuid()}"
-
-
-@command(main, "nightly", "ropewalk nightly --desk /srv/desk")
-@_jobs
-@_rehash
-@_waive_gate
-def nightly(asked: Asked, jobs: int | None, rehash: bool, waive_gate: tuple[tuple[str, str], ...]) -> Exit:
-    """Run one night under Prefect: take in, build, check, publish.
-
-    Reports to the Prefect API that Prefect's settings name. Where none is named, an own server is started for
-    the length of the run; its records stay in Prefect's home folder. Where the API cannot be reached, the
-    same work is done unwatched.
-    """
-    where = _with_waived(replace(_checked(asked), rehash=rehash), waive_gate)
-    from flows.nightly import run_watched
-
-    told = run_watched(where, jobs)
-    assert told.summary is not None
-    code = _tell_summary(told.summary, asked.as_json)
-    if not asked.as_json and not told.notes:
-        kept = f"{told.recorded} of {told.expected} task runs" if told.expected else "the run"
-        say([f"  Prefect keeps {kept}"])
-    for note in told.notes:
-        complain(note)
-    return code
-
-
-@command(main, "build", "ropewalk build --desk /srv/desk --jobs 4")
-@_jobs
-@_rehash
-@_waive_gate
-def build(asked: Asked, jobs: int | None, rehash: bool, waive_gate: tuple[tuple[str, str], ...]) -> Exit:
-    """Do the work of one night without a scheduler.
-
-    Takes in, builds, checks, publishes. What carries the markets is declared in desk.toml: [run] workers =
-    "threads", "processes" or "dask".
-    """
-    where = _with_waived(replace(_checked(asked), rehash=rehash), waive_gate)
-    from flows.work import pool_builder, run_night
-
-    return _tell_summary(run_night(where, "build", pool_builder(jobs)), asked.as_json)
-
-
-def _checked(asked: Asked) -> Where:
-    """The folders to work on, once all that can be wrong with them was told."""
-    from catalog.declarations import load_desk
-    from flows.work import check_usage
-
-    # First the desk as a whole: all its mistakes, and not only that it names no store.
-    load_desk(asked.desk_folder())
-    where = asked.where()
-    check_usage(where)
-    return where
-
-
-def _tell_summary(summary: "Summary", as_json: bool) -> Exit:
-    if as_json:
-        say_json(summary.as_json())
-    else:
-        say(summary.lines())
-    if summary.snapshot is None and not summary.nothing_new:
-        return Exit.NOT_PUBLISHED
-    return Exit(summary.exit_code)
 
 
 @command(main, "desk", "ropewalk desk NWHT --years 2019:2026")
@@ -214,7 +107,7 @@ def trace(asked: Asked, market: str, session: str, plan: str | None, nearby: int
 
     The arithmetic, the rolls, the repair, the raw line. SESSION is a day written as 2024-11-05.
     """
-    day = _read_day(session, "SESSION")
+    day = read_day(session, "SESSION")
     from catalog.places import Places
     from catalog.trace import trace_price
     from catalog.trace_text import trace_lines
@@ -225,15 +118,6 @@ def trace(asked: Asked, market: str, session: str, plan: str | None, nearby: int
     else:
         say(trace_lines(found))
     return Exit.DONE
-
-
-def _read_day(text: str, name: str) -> datetime.date:
-    try:
-        if re.fullmatch(r"\d{4}-\d{2}-\d{2}", text):
-            return datetime.date.fromisoformat(text)
-    except ValueError:
-        pass
-    raise UsageError(f"{name}: seen {text!r}; expected a day, as 2024-11-05")
 
 
 @command(main, "findings", "ropewalk findings NWHT --since 2024-11-01 --severity block")
@@ -257,33 +141,29 @@ def findings(
 ) -> Exit:
     """Print the quality log, most harmful first.
 
-    The order is by impact: the number of sessions whose trend-sign score would differ had the reported price
-    stood.
+    Each finding says what, where, why it is believed, what was done and what it would have cost. The order is
+    by impact: the number of sessions whose trend-sign score would differ had the reported price stood. With a
+    MARKET the log ends with what its score would have been without any cleaning.
     """
-    day = None if since is None else _read_day(since, "--since")
-    from catalog.listings import list_findings
+    day = None if since is None else read_day(since, "--since")
+    from catalog.listings import list_findings, read_cleaning
     from catalog.places import Places
+    from flows.notes import word_cleaning, word_findings
 
     places = Places(asked.where().store)
     shown = limit if limit is not None or asked.as_json else _FINDINGS_SHOWN
     columns, rows, total = list_findings(places, market, day, kind, severity, shown)
+    cleaning = read_cleaning(places, market)
+    told = [dict(zip(columns, row, strict=True)) for row in rows]
     if asked.as_json:
-        say_json({"findings": [dict(zip(columns, row, strict=True)) for row in rows], "total": total})
+        say_json({"findings": told, "total": total, "cleaning": cleaning})
         return Exit.DONE
-    if not rows:
-        say(["no findings"])
-        return Exit.DONE
-    is_any_waived = any(row[columns.index("waived_until")] is not None for row in rows)
-    names = tuple(name for name in _FINDING_COLUMNS if is_any_waived or name != "waived_until")
-    say_table(names, _pick(columns, rows, names))
+    say(word_findings(told) or ["no findings"])
     if total > len(rows):
         say(["", f"the first {len(rows):,} of {total:,}; --limit {total} shows all"])
+    if market is not None and told:
+        say(["", *word_cleaning(market, cleaning.get(market, {}))])
     return Exit.DONE
-
-
-def _pick(columns: list[str], rows: list[tuple[Any, ...]], wanted: tuple[str, ...]) -> list[tuple[Any, ...]]:
-    places = [columns.index(name) for name in wanted]
-    return [tuple(row[at] for at in places) for row in rows]
 
 
 @command(main, "verify", "ropewalk verify --deep")
@@ -369,6 +249,9 @@ def sql(asked: Asked, query: str | None, snapshot: str | None) -> Exit:
     return Exit.DONE
 
 
+main.add_command(nightly)
+main.add_command(build)
+main.add_command(schedule)
 main.add_command(propose)
 main.add_command(prune)
 main.add_command(rolls)

@@ -3,6 +3,7 @@
 Belongs here: the codes and which error means which. Does not belong here: how an error is shown (`shell.py`).
 """
 
+import errno
 import signal
 import threading
 from collections.abc import Iterator
@@ -54,16 +55,39 @@ def code_of(error: RopewalkError) -> Exit:
     return Exit.REFUSED
 
 
+# The world, not the program: a full disk, a folder that may not be written, a broken drive.
+_WORLD = frozenset({errno.ENOSPC, errno.EDQUOT, errno.EROFS, errno.EACCES, errno.EPERM, errno.EIO, errno.EMFILE})
+# What DuckDB raises in the place of what a signal raised.
+_CUT_QUERY = "Query interrupted"
+# What is said where not even a library can be loaded or a thread started.
+_SHORT_OF_MEMORY = ("failed to map segment", "annot allocate memory", "can't start new thread")
+
+
+def is_short_of_memory(error: BaseException) -> bool:
+    """Whether there was too little memory."""
+    return isinstance(error, MemoryError) or any(sign in str(error) for sign in _SHORT_OF_MEMORY)
+
+
+def code_of_any(error: BaseException) -> Exit:
+    """The exit code of whatever ends a command."""
+    if isinstance(error, RopewalkError):
+        return code_of(error)
+    if isinstance(error, KeyboardInterrupt):
+        return Exit.INTERRUPTED
+    if isinstance(error, Terminated):
+        return Exit.TERMINATED
+    if isinstance(error, RuntimeError) and str(error) == _CUT_QUERY:
+        return Exit.TERMINATED if _ended else Exit.INTERRUPTED
+    if is_short_of_memory(error) or (isinstance(error, OSError) and error.errno in _WORLD):
+        return Exit.NOT_PUBLISHED
+    return Exit.BUG
+
+
 class Terminated(BaseException):
     """SIGTERM arrived. Like KeyboardInterrupt it passes every `except Exception` on its way out."""
 
 
 _ended: list[int] = []
-
-
-def was_terminated() -> bool:
-    """Whether SIGTERM has arrived, for where what was raised on it got lost, as within a query of DuckDB."""
-    return bool(_ended)
 
 
 @contextmanager

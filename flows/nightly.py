@@ -4,6 +4,8 @@ Belongs here: what Prefect is told of a night, and what happens when Prefect can
 here: the steps of a night (`work.py`), where a Prefect API comes from (`watched.py`).
 """
 
+import sys
+from collections.abc import Iterable, Iterator
 from contextvars import ContextVar
 from dataclasses import dataclass, field, replace
 from pathlib import Path
@@ -11,7 +13,7 @@ from typing import TYPE_CHECKING, Any
 from uuid import UUID
 
 # Before Prefect: it sets how that starts.
-from flows.watched import Api, Unreachable, count_recorded, drain, note_loss, reach_api
+from flows.watched import Api, Unreachable, count_recorded, drain, is_lost, note_loss, reach_api
 
 # isort: split
 from contextlib import ExitStack, suppress
@@ -24,8 +26,13 @@ from prefect.futures import as_completed
 from prefect.states import Completed, Failed
 from prefect.task_runners import ProcessPoolTaskRunner, ThreadPoolTaskRunner
 
+from catalog.places import Places
 from contracts.errors import RopewalkError, UsageError
+from flows.clock import WALL, Clock
+from flows.messages import send_outcome
+from flows.outcome import Outcome, outcome_of_failure
 from flows.progress import Tick
+from flows.render import complain, say
 from flows.settings import Where
 from flows.tasks import build_market
 from flows.work import (
@@ -57,13 +64,20 @@ class Lost(Exception):
 class Told:
     """What came of a night that Prefect watched: the work's own outcome, and what Prefect keeps of it."""
 
+    clock: Clock = WALL
     summary: "Summary | None" = None
+    outcome: Outcome | None = None
     error: BaseException | None = None
     run: UUID | None = None
     expected: int = 0
     recorded: int = 0
     is_lost: bool = False
+    is_alone: bool = False
     notes: list[str] = field(default_factory=list)
+
+    def end(self, outcome: Outcome) -> None:
+        """Remember what the night came to."""
+        self.outcome = outcome
 
 
 # A flow hands back a state, and where Prefect is lost not even that; this is how its caller learns the
@@ -71,48 +85,69 @@ class Told:
 _TOLD: ContextVar[Told | None] = ContextVar("told", default=None)
 
 
-def run_watched(where: Where, jobs: int | None = None) -> Told:
+def run_watched(where: Where, jobs: int | None = None, clock: Clock = WALL) -> Told:
     """Run one night under Prefect; where Prefect cannot be reached, or is lost on the way, without it.
 
     Returns the summary, and notes on what Prefect kept. Raises what the night itself raises: DeskError,
     UsageError, StoreBusy, StoreError.
     """
-    told = Told()
-    token = _TOLD.set(told)
-    try:
-        with reach_api() as api:
-            try:
-                _run_flow(where, jobs, told)
-            except BaseException:
-                drain(STOPPED_SECONDS)
-                raise
-            if not told.is_lost:
-                drain()
-                _count(told, api)
-    except Unreachable as error:
-        told.notes.append(f"{error}; the night runs unwatched")
-    finally:
-        _TOLD.reset(token)
+    (told,) = watch_nights([where], jobs, clock)
+    return told
+
+
+def watch_nights(nights: Iterable[Where], jobs: int | None = None, clock: Clock = WALL) -> Iterator[Told]:
+    """Run nights one after the other against one Prefect API, each as `run_watched` does."""
+    with ExitStack() as stack:
+        api, why = None, ""
+        try:
+            api = stack.enter_context(reach_api())
+        except Unreachable as error:
+            why = f"{error}; the night runs unwatched"
+        for where in nights:
+            yield _run_one(where, jobs, Told(clock), None if is_lost() else api, why)
+
+
+def _run_one(where: Where, jobs: int | None, told: Told, api: Api | None, why: str) -> Told:
+    if api is None and why:
+        told.notes.append(why)
+    elif api is not None:
+        token = _TOLD.set(told)
+        try:
+            _run_flow(where, jobs, told)
+        except BaseException:
+            drain(STOPPED_SECONDS)
+            raise
+        finally:
+            _TOLD.reset(token)
+        if not told.is_lost:
+            drain()
+            _count(told, api)
     if told.error is not None:
         raise told.error
     if told.summary is None:
-        told.summary = run_night(where, "nightly", pool_builder(jobs))
+        told.summary = run_night(where, "nightly", pool_builder(jobs), told.clock)
     return told
 
 
 def _run_flow(where: Where, jobs: int | None, told: Told) -> None:
-    raw = None if where.raw is None else str(where.raw)
     try:
         # Typed as if it were awaited; a flow without async gives the state itself.
-        state: State[Any] = night(  # type: ignore[assignment]
-            str(where.desk), raw, str(where.store), jobs, where.rehash, [*map(list, where.waived)], return_state=True
-        )
+        state: State[Any] = night(**night_parameters(where, jobs), return_state=True)  # type: ignore[assignment]
         failure = state.message or str(state.name)
     except Exception as error:  # Prefect's own: what the night itself raises stands in `told` already
         failure = _in_short(error)
         _note_loss(told, failure)
     if told.error is None and told.summary is None:
         _note_loss(told, failure)
+
+
+def night_parameters(where: Where, jobs: int | None) -> dict[str, Any]:
+    """A night's folders and wishes as the flow's parameters."""
+    return {
+        "desk": str(where.desk), "raw": None if where.raw is None else str(where.raw), "store": str(where.store),
+        "jobs": jobs, "rehash": where.rehash, "waived": [*map(list, where.waived)], "markets": [*where.markets],
+        "as_of": where.until, "dry_run": where.is_dry, "known": where.known,
+    }  # fmt: skip
 
 
 def _count(told: Told, api: Api) -> None:
@@ -144,10 +179,10 @@ def _run_id() -> UUID | None:
     return None if context is None or context.flow_run is None else context.flow_run.id
 
 
-def _current() -> Told:
+def _current() -> Told | None:
     """Where the run under way tells its outcome. The flow may not name the variable itself: Prefect hands the
     flow's function with all it names to worker processes, and a ContextVar cannot go there."""
-    return _TOLD.get() or Told()
+    return _TOLD.get()
 
 
 @flow(
@@ -160,31 +195,60 @@ def _current() -> Told:
 )
 def night(
     desk: str, raw: str | None, store: str, jobs: int | None = None, rehash: bool = False,
-    waived: list[list[str]] | None = None,
+    waived: list[list[str]] | None = None, markets: list[str] | None = None, as_of: str | None = None,
+    dry_run: bool = False, known: str | None = None,
 ) -> Any:  # fmt: skip
-    """Take in what is new, build each market as a task, publish; paths are absolute."""
+    """Take in what is new, build each market as a task, publish; paths are absolute.
+
+    `waived`: market, reason and person of gates waived; `markets`: only these; `as_of`: a session, as
+    2024-03-28, after which bars are left out; `dry_run`: publish nothing; `known`: from the archive alone, and
+    this is said of what was known.
+    """
     told = _current()
+    if told is None:
+        # Started by Prefect itself: nobody else tells the terminal.
+        told = Told(is_alone=True)
     told.run = _run_id()
     gates = tuple((market, why, person) for market, why, person in waived or ())
-    where = Where(Path(desk), None if raw is None else Path(raw), Path(store), rehash, gates)
+    where = Where(
+        Path(desk), None if raw is None else Path(raw), Path(store), rehash, gates, tuple(markets or ()), as_of,
+        dry_run, known,
+    )  # fmt: skip
     try:
-        told.summary = run_night(where, "nightly", _task_builder(jobs, told))
+        told.summary = run_night(where, "nightly", _task_builder(jobs, told), told.clock, on_end=told.end)
     except Lost:
         raise
     except RopewalkError as error:
         told.error = error
+        # One that never got the lock, or whose desk is wrong, has no outcome in the store.
+        told.outcome = told.outcome or outcome_of_failure(Places(where.store), "nightly", error, told.clock)
+        _send(told, where)
         return Failed(message=str(error))
     except BaseException as error:
         told.error = error
+        _send(told, where)
         raise
+    _send(told, where)
     summary = told.summary
     held_back = "; ".join(f"{market}: {reason}" for market, reason in summary.held_back)
+    if summary.is_dry:
+        return Completed(name="Dry run", message=summary.lines()[0])
     if summary.nothing_new:
         message = f"nothing new, snapshot {summary.current} stands"
     else:
         parts = [f"snapshot {summary.snapshot}", *summary.notes]
         message = "; ".join([*parts, f"held back {held_back}"] if held_back else parts)
     return Completed(name="Held back" if summary.exit_code else "Completed", message=message)
+
+
+def _send(told: Told, where: Where) -> None:
+    if told.outcome is not None and told.run is not None and not told.is_lost:
+        told.notes += send_outcome(told.outcome, where.store)
+    if told.outcome is not None and told.is_alone:
+        say(told.outcome.lines())
+        sys.stdout.flush()
+        for note in told.notes:
+            complain(note)
 
 
 def _task_builder(jobs: int | None, told: Told) -> Builder:
@@ -212,8 +276,9 @@ def _task_builder(jobs: int | None, told: Told) -> Builder:
             for future in as_completed(list(futures)):
                 # A market whose worker died has no result; it is built again below.
                 with suppress(*death_errors(night)):
-                    results.append(future.result())
-                    tick(futures[future])
+                    result = future.result()
+                    results.append(result)
+                    tick(futures[future], int(result["rows"]))
         if len(results) < len(night.markets):
             told.notes.append("a worker died; the markets it left were built again, unwatched, one by one")
         results += build_missing(night, results, tick)
@@ -237,8 +302,10 @@ def _task_runner(night: "Night", jobs: int | None) -> Any:
 
 
 def _count_markets(night: "Night") -> str:
-    built, all_of_them = len(night.markets), len(night.markets) + len(night.unchanged)
-    return f"{built} of {all_of_them} markets"
+    built = len(night.markets)
+    all_of_them = built + len(night.unchanged) + len(night.left)
+    dry = "dry run, " if night.wishes.is_dry else ""
+    return f"{dry}{built} of {all_of_them} markets"
 
 
 def _data_date(results: list[Result]) -> str:

@@ -16,10 +16,10 @@ DEFAULT_STORE = "published"
 
 @dataclass(frozen=True)
 class Where:
-    """The folders of one command, absolute. `raw` is None where the desk's own declaration counts.
+    """The folders of one command, absolute, and what it asks of a night.
 
-    `rehash` asks for every raw file to be read again, and not only those whose size or time changed; `waived`
-    holds market, reason and person of each gate that is waived for this run.
+    `raw` is None where the desk's own declaration counts; the others are those of `catalog.wishes.Wishes`, with
+    `until` as written.
     """
 
     desk: Path
@@ -27,6 +27,10 @@ class Where:
     store: Path
     rehash: bool = False
     waived: tuple[tuple[str, str, str], ...] = ()
+    markets: tuple[str, ...] = ()
+    until: str | None = None
+    is_dry: bool = False
+    known: str | None = None
 
 
 def find_where(desk: str | None, raw: str | None, store: str | None) -> Where:

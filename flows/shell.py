@@ -4,7 +4,6 @@ Belongs here: the frame around a command. Does not belong here: what a command d
 error has which code (`exits.py`). Only light modules are imported here, so that --help answers at once.
 """
 
-import errno
 import functools
 import os
 import sys
@@ -17,16 +16,11 @@ from typing import Any
 import click
 
 from contracts.errors import DeskError, RopewalkError
-from flows.exits import Exit, Terminated, code_of, exit_table, sigterm_raises, was_terminated
+from flows.exits import Exit, Terminated, code_of, code_of_any, exit_table, is_short_of_memory, sigterm_raises
 from flows.render import complain, say, say_json
 from flows.settings import Where, find_desk, find_where
 
-# What DuckDB says in the place of what a signal raised.
-_CUT_QUERY = "Query interrupted"
-# What is said where not even a library can be loaded or a thread started.
-_SHORT_OF_MEMORY = ("failed to map segment", "annot allocate memory", "can't start new thread")
-# The world, not the program: a full disk, a folder that may not be written, a broken drive.
-_WORLD = frozenset({errno.ENOSPC, errno.EDQUOT, errno.EROFS, errno.EACCES, errno.EPERM, errno.EIO, errno.EMFILE})
+_STOPPED = (Exit.INTERRUPTED, Exit.TERMINATED)
 
 
 @dataclass(frozen=True)
@@ -152,12 +146,12 @@ def _run(run: Callable[[], Any]) -> int:
     except SystemExit as end:
         return end.code if isinstance(end.code, int) else Exit.BUG
     except Exception as error:
-        if isinstance(error, RuntimeError) and str(error) == _CUT_QUERY:
-            return _tell_stopped(Exit.TERMINATED if was_terminated() else Exit.INTERRUPTED)
-        if isinstance(error, MemoryError) or any(sign in str(error) for sign in _SHORT_OF_MEMORY):
+        if code_of_any(error) in _STOPPED:
+            return _tell_stopped(code_of_any(error))
+        if is_short_of_memory(error):
             complain("out of memory; nothing was published, the last snapshot stands; give it more, or fewer --jobs")
             return Exit.NOT_PUBLISHED
-        if isinstance(error, OSError) and error.errno in _WORLD:
+        if code_of_any(error) is Exit.NOT_PUBLISHED:
             complain(f"{error}; nothing was published, the last snapshot stands")
             return Exit.NOT_PUBLISHED
         complain(f"{traceback.format_exc()}this is a bug in ropewalk; the last snapshot stands")

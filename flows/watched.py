@@ -7,6 +7,8 @@ not belong here: the night (`nightly.py`). Values below were measured with Prefe
 import logging
 import os
 import signal
+import subprocess
+import sys
 import threading
 import time
 from collections.abc import Iterator
@@ -84,8 +86,10 @@ class Api:
 
 
 @contextmanager
-def reach_api() -> Iterator[Api]:
+def reach_api(is_lasting: bool = False) -> Iterator[Api]:
     """The API that Prefect's settings name, else an own server that is stopped at the end.
+
+    One that `is_lasting` also runs what keeps schedules, which one for a single night has no use for.
 
     Raises Unreachable where the configured one does not answer or an own one does not start.
     """
@@ -99,20 +103,33 @@ def reach_api() -> Iterator[Api]:
             # Its thread alone makes an empty flow last a second longer.
             stack.enter_context(temporary_settings({PREFECT_FLOWS_HEARTBEAT_FREQUENCY: None}))
         configured = settings.api.url
-        api = Api(configured, False) if configured else stack.enter_context(_own_server())
+        api = Api(configured, False) if configured else stack.enter_context(_own_server(is_lasting))
         _check(api)
         yield api
 
 
+class _LastingServer(SubprocessASGIServer):
+    """An own server with all its services; Prefect's one for a short time makes no run of any schedule."""
+
+    def _run_uvicorn_command(self) -> "subprocess.Popen[Any]":
+        app = ["--factory", "prefect.server.api.server:create_app", "--log-level", "error", "--lifespan", "on"]
+        place = ["--host", "127.0.0.1", "--port", str(self.port)]
+        settings = get_current_settings().to_environment_variables(exclude_unset=True)
+        return subprocess.Popen(  # noqa: S603  our own interpreter, and no word of it from outside
+            [sys.executable, "-m", "uvicorn", *app, *place],
+            env={**os.environ, "PREFECT_UI_ENABLED": "0", "PREFECT__SERVER_FINAL": "1", **settings},
+        )
+
+
 @contextmanager
-def _own_server() -> Iterator[Api]:
+def _own_server(is_lasting: bool) -> Iterator[Api]:
     batches: dict[Any, Any] = {
         PREFECT_SERVER_SERVICES_TASK_RUN_RECORDER_BATCH_SIZE: 500,
         PREFECT_SERVER_SERVICES_TASK_RUN_RECORDER_READ_BATCH_SIZE: 500,
         PREFECT_SERVER_SERVICES_TASK_RUN_RECORDER_FLUSH_INTERVAL: 1,
     }
     with temporary_settings(batches):
-        server = SubprocessASGIServer()
+        server = _LastingServer() if is_lasting else SubprocessASGIServer()
         try:
             _start_deaf(server)
             with temporary_settings({PREFECT_API_URL: server.api_url}):

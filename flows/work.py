@@ -4,6 +4,7 @@ Belongs here: the order of the steps, and threads, processes and Dask. Does not 
 (`catalog/night.py`), Prefect (`nightly.py`).
 """
 
+import datetime
 import importlib.util
 import multiprocessing
 import os
@@ -21,9 +22,13 @@ from contextlib import ExitStack, contextmanager, suppress
 from typing import TYPE_CHECKING, Any
 
 from catalog.places import Places, write_lock
-from contracts.errors import UsageError
+from contracts.errors import DeskError, UsageError
+from flows.clock import WALL, Clock
+from flows.outcome import Outcome, keep_outcome, outcome_of, outcome_of_failure
 from flows.progress import Tick, show_progress
+from flows.render import complain
 from flows.settings import Where
+from flows.waiting import wait_for_files
 
 if TYPE_CHECKING:
     from catalog.night import Night
@@ -31,31 +36,61 @@ if TYPE_CHECKING:
 
 Result = dict[str, Any]
 Builder = Callable[["Night", Tick], list[Result]]
+Tell = Callable[[str], None]
 
 
-def run_night(where: Where, command: str, build: Builder) -> "Summary":
-    """Take in what is new, build the markets it concerns, publish.
+def run_night(
+    where: Where, command: str, build: Builder, clock: Clock = WALL, tell: Tell = complain,
+    on_end: Callable[[Outcome], None] = lambda _outcome: None,
+) -> "Summary":  # fmt: skip
+    """Wait for what is overdue as the desk allows, take in what is new, build the markets it concerns, publish.
 
     `build` is handed the night and a function to call with each market that is done; it returns the result of
-    every market of the night, in any order. The store's write lock is held throughout. Whatever goes wrong,
-    or stops the run, the staging folder is removed and the last snapshot stands.
+    every market of the night, in any order. `tell` is called with one line for what the night waits for,
+    `on_end` with what it came to, also where that is then raised. The store's write lock is held throughout.
+    Whatever goes wrong, or stops the run, the staging folder is removed and the last snapshot stands. What the
+    night came to is left in the store as JSON.
 
-    Raises DeskError, StoreBusy, StoreError.
+    Raises DeskError, UsageError, StoreBusy, StoreError.
     """
-    from catalog.night import abandon, begin, finish
-
     check_usage(where)
-    with write_lock(Places(where.store)):
-        night = begin(where.desk, where.raw, where.store, command, where.rehash, where.waived)
+    places = Places(where.store)
+    with write_lock(places):
         try:
-            results: list[Result] = []
-            if night.markets:
-                with show_progress(len(night.markets), "building markets") as tick:
-                    results = build(night, tick)
-            return finish(night, sorted(results, key=lambda result: str(result["market"])))
-        except BaseException:
-            abandon(night)
+            summary = _work(where, command, build, clock, tell)
+            outcome = outcome_of(summary, command, clock)
+        except BaseException as error:
+            outcome = outcome_of_failure(places, command, error, clock)
+            # Where nothing was touched, this file is not either.
+            if not where.is_dry and not isinstance(error, DeskError | UsageError):
+                keep_outcome(places, outcome, tell)
+            on_end(outcome)
             raise
+        if not where.is_dry:
+            keep_outcome(places, outcome, tell)
+        on_end(outcome)
+        return summary
+
+
+def _work(where: Where, command: str, build: Builder, clock: Clock, tell: Tell) -> "Summary":
+    from catalog.lateness import SeenBars
+    from catalog.night import abandon, begin, finish
+    from catalog.wishes import Wishes
+
+    until = None if where.until is None else datetime.date.fromisoformat(where.until)
+    wishes = Wishes(where.rehash, where.waived, where.markets, until, where.is_dry, where.known)
+    seen = SeenBars()
+    wait_for_files(where, clock, seen, tell)
+    night = begin(where.desk, where.raw, where.store, command, wishes, clock.now(), seen)
+    try:
+        results: list[Result] = []
+        if night.markets:
+            with show_progress(len(night.markets), "building") as tick:
+                results = build(night, tick)
+        return finish(night, sorted(results, key=lambda result: str(result["market"])))
+    except BaseException:
+        abandon(night)
+        raise
 
 
 def check_usage(where: Where) -> None:
@@ -68,7 +103,7 @@ def check_usage(where: Where) -> None:
 
     desk = load_desk(where.desk)
     raw = where.raw or desk.raw
-    if not raw.is_dir() and not Places(where.store).archive.is_dir():
+    if where.known is None and not raw.is_dir() and not Places(where.store).archive.is_dir():
         raise UsageError(f"{raw}: no such folder, and no archive in {where.store}; name the raw files with --raw")
     if desk.run.workers == "dask" and not all(map(importlib.util.find_spec, ("distributed", "prefect_dask"))):
         raise UsageError(
@@ -157,7 +192,7 @@ def _submit(pool: Executor, night: "Night", markets: tuple[str, ...]) -> Iterato
 
 
 def _ticked(result: Result, tick: Tick) -> Result:
-    tick(str(result["market"]))
+    tick(str(result["market"]), int(result["rows"]))
     return result
 
 

@@ -10,10 +10,10 @@ ROOMS = ("contracts", "catalog", "flows")
 # The way the data goes; a file may import those before it.
 ORDER = (
     "errors", "columns", "tables", "lined_up", "deliveries", "declared", "markets", "layouts", "notation", "sessions",
-    "calendar_table", "unpack", "intake", "proposal_marks", "proposal_columns", "proposal_text",
+    "calendar_table", "due", "unpack", "intake", "proposal_marks", "proposal_columns", "proposal_text",
     "proposal_paths", "proposal_trial", "proposal_choices", "proposal", "arrivals", "panel", "quality",
-    "findings", "checks", "repairs", "rolls", "checks.rolled", "splice", "trend", "compared", "evidence", "written",
-    "build",
+    "findings", "checks", "repairs", "rolls", "checks.rolled", "splice", "trend", "impact", "compared", "evidence",
+    "written", "build",
 )  # fmt: skip
 
 

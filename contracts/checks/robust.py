@@ -39,3 +39,27 @@ def row_medians(values: np.ndarray) -> np.ndarray:
         return np.full(len(values), np.nan)
     middle = 0.5 * (ordered[rows, low] + ordered[rows, np.minimum(high, values.shape[1] - 1)])
     return np.where(count > 0, middle, np.nan)
+
+
+def weighted_medians(values: np.ndarray, weights: np.ndarray) -> np.ndarray:
+    """Weighted median of each column, (n,): the least value up to which half of the weight lies.
+
+    `values`, `weights` (k, n); a value of no weight does not count, and a column of none gives nought.
+    """
+    order = np.argsort(values, axis=0)
+    ordered = np.take_along_axis(values, order, axis=0)
+    summed = np.cumsum(np.take_along_axis(weights, order, axis=0), axis=0)
+    reached = summed >= 0.5 * summed[-1]
+    found = ordered[reached.argmax(axis=0), np.arange(values.shape[1])]
+    return np.where(summed[-1] > 0, found, 0.0)
+
+
+def weighted_median(values: list[float], weights: list[float]) -> float:
+    """Weighted median of a few values: the least up to which half of the weight lies."""
+    half = 0.5 * sum(weights)
+    summed = 0.0
+    for value, weight in sorted(zip(values, weights, strict=True)):
+        summed += weight
+        if summed >= half:
+            return value
+    return max(values)

@@ -6,15 +6,20 @@ roll (`rolls.py`), computing a series (`splice.py`).
 
 import datetime
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from contracts.findings import Finding, Kind, Severity
-from contracts.markets import Plan
+from contracts.markets import Before, Plan
 from contracts.panel import Panel
 from contracts.rolls import BACKSTOP, NEVER, Held, RollStep
 from contracts.sessions import day_of
+
+# Shares of the most active contract under which an incoming is thin, and under which it hardly trades.
+_THIN = 0.1
+_HARDLY_TRADES = 0.02
+_FEW_SESSIONS = 5
 
 
 def check_rolls(panel: Panel, name: str, plan: Plan, held: Held) -> list[Finding]:
@@ -36,6 +41,10 @@ def check_rolls(panel: Panel, name: str, plan: Plan, held: Held) -> list[Finding
         # A market may well list too few contracts for a farther nearby; without the first there is no series.
         severity = Severity.BLOCK if held.nearby == 1 else Severity.REVIEW
         found.append(teller.tell(Kind.ROLL_UNMEASURED, severity, None, None, text))
+    if held.nearby == 1:
+        # A farther nearby is thinner by nature, and nobody holds it into delivery.
+        found += _thin_incomings(teller, held)
+        found += _after_first_notice(teller, plan, held)
     return found
 
 
@@ -110,3 +119,57 @@ def _about_step(teller: _Teller, plan: Plan, step: RollStep) -> list[Finding]:
         text = f"rolled to {incoming} by the deadline, before its {plan.trigger} trigger"
         found.append(tell(Kind.ROLL_BY_DEADLINE, Severity.NOTE, text))
     return found
+
+
+def _thin_incomings(teller: _Teller, held: Held) -> list[Finding]:
+    """Rolls into a contract that hardly trades, against the market's most active contract as known when decided.
+
+    The share is the larger of two: median volume of the last five sessions, and open interest. Common practice, no
+    source: under a tenth is told, under a fiftieth wants eyes, since such a position cannot well be carried over.
+    """
+    panel = teller.panel
+    volume, interest = panel.field("volume"), panel.field("open_interest")
+    found = []
+    for decision in dict.fromkeys(step.decision for step in held.steps):
+        traded = np.nan_to_num(volume[max(0, decision.decided - _FEW_SESSIONS + 1) : decision.decided + 1])
+        known = decision.decided - panel.market.open_interest_lag
+        open_ = np.nan_to_num(interest[known]) if known >= 0 else np.zeros(panel.shape[1])
+        counts = [size for size in (np.median(traded, axis=0), open_) if size.max() > 0]
+        if not counts:
+            continue
+        share = max(float(size[decision.incoming] / size.max()) for size in counts)
+        if share >= _THIN:
+            continue
+        incoming, day = panel.contracts[decision.incoming], day_of(panel.sessions[decision.decided])
+        busiest = panel.contracts[int(counts[0].argmax())]
+        text = (
+            f"the roll to {incoming} ({decision.trigger}) was decided when it had {share:.1%} of the volume and open "
+            f"interest of the most active contract, {busiest}"
+        )
+        severity = Severity.REVIEW if share < _HARDLY_TRADES else Severity.NOTE
+        finding = teller.tell(Kind.THIN_INCOMING, severity, panel.contracts[decision.outgoing], day, text, share)
+        found.append(replace(finding, threshold=_THIN))
+    return found
+
+
+def _after_first_notice(teller: _Teller, plan: Plan, held: Held) -> list[Finding]:
+    """How often a plan holds a contract on or after first notice, unless it says that it counts from the last trade.
+
+    From first notice on the holder of a bought contract may be made to take delivery.
+    """
+    panel = teller.panel
+    is_meant = "before" in plan.model_fields_set and plan.before is Before.LAST_TRADE
+    if not panel.market.first_notice or is_meant or held.start == NEVER:
+        return []
+    sessions = np.arange(held.start, len(panel.sessions))
+    contract, incoming = held.contract[sessions], held.incoming[sessions]
+    late = (contract >= 0) & (sessions >= panel.first_notice[contract])
+    late |= (incoming >= 0) & (sessions >= panel.first_notice[incoming])
+    if not late.any():
+        return []
+    count, several = int(late.sum()), len(np.unique(contract[late]))
+    text = (
+        f'held on {count} sessions on or after first notice, in {several} contracts; before = "first notice" rolls '
+        'in time, before = "last trade" says that it is meant'
+    )
+    return [teller.tell(Kind.AFTER_FIRST_NOTICE, Severity.NOTE, None, None, text, float(count))]

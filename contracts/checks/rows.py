@@ -14,23 +14,32 @@ from contracts.sessions import day_of
 # More off-tick prices than these in one field of a contract are told once, with their count.
 _TOLD_ONE_BY_ONE = 3
 _TICK_TOLERANCE = 1e-6
+# Sessions within which a wrong price that was let stand comes back.
+_LONGEST_WAY_BACK = 10
 
 
-def check_rows(panel: Panel, clean_prices: np.ndarray) -> list[Finding]:
-    """All findings of this family; `clean_prices` (4, T, N) says which open, high and low were kept."""
+def check_rows(panel: Panel, clean_prices: np.ndarray, levels: np.ndarray, is_replaced: np.ndarray) -> list[Finding]:
+    """All findings of this family; `clean_prices` (4, T, N) says which open, high and low were kept.
+
+    `levels` (T, N) put prices on one scale where that changed undeclared; `is_replaced` (T, N) are settles that are
+    estimates, against which no change is measured.
+    """
+    settle = np.where(is_replaced, np.nan, clean_prices[PRICE_FIELDS.index("settle")])
+    # On which of two scales the limit was declared nobody can know.
+    is_one_scale = bool((levels == 1.0).all())
     return [
-        *_off_tick(panel),
+        *_off_tick(panel, levels),
         *_broken_ranges(panel, clean_prices),
         *_outside_range(panel),
-        *_limits(panel, clean_prices[PRICE_FIELDS.index("settle")]),
+        *(_limits(panel, settle) if is_one_scale else ()),
     ]
 
 
-def _off_tick(panel: Panel) -> list[Finding]:
+def _off_tick(panel: Panel, levels: np.ndarray) -> list[Finding]:
     market, tick = panel.market, panel.market.tick_size
     found = []
     for name in PRICE_FIELDS:
-        ticks = panel.field(name) / tick
+        ticks = panel.field(name) * levels / tick
         with np.errstate(invalid="ignore"):
             off = np.abs(ticks - np.round(ticks)) > np.maximum(_TICK_TOLERANCE, 1e-12 * np.abs(ticks))
         for contract in np.flatnonzero(off.any(axis=0)):
@@ -105,7 +114,7 @@ def _outside_range(panel: Panel) -> list[Finding]:
 
 
 def _limits(panel: Panel, settle: np.ndarray) -> list[Finding]:
-    """Changes beyond the daily limit, and sessions on which the whole curve closed at it."""
+    """Changes beyond the daily limit, and sessions on which the whole curve closed at it or went beyond."""
     limit = panel.market.daily_limit
     if limit is None:
         return []
@@ -115,8 +124,25 @@ def _limits(panel: Panel, settle: np.ndarray) -> list[Finding]:
     with np.errstate(invalid="ignore"):
         beyond = np.abs(change) > limit + half
         locked = np.abs(np.abs(change) - limit) <= half
+    alive = (~np.isnan(change)).sum(axis=1)
     found = []
-    for session, contract in np.argwhere(beyond):
+    # Exchanges widen or lift a limit; a curve that goes beyond it together says that the declared one is not in force.
+    together = (alive >= 2) & (2 * beyond.sum(axis=1) > alive)
+    for session in np.flatnonzero(together):
+        day, count = day_of(panel.sessions[session]), int(beyond[session].sum())
+        message = (
+            f"{market}, {day}: {count} of {alive[session]} contracts moved more than the declared daily limit of "
+            f"{limit:.10g}; a fact, kept; was the limit another?"
+        )
+        found.append(
+            Finding(
+                Kind.LIMIT_EXCEEDED, Severity.NOTE, message, market, session=day, score=float(count),
+                threshold=0.5 * float(alive[session]),
+            )
+        )  # fmt: skip
+    for session, contract in np.argwhere(beyond & ~together[:, None]):
+        if _comes_late_or_back(panel, settle, change, beyond, int(session), int(contract)):
+            continue
         label, day = panel.contracts[contract], day_of(panel.sessions[session])
         moved = float(change[session, contract])
         message = f"{label}, {day}: settle moved {moved:+.10g}, more than the daily limit of {limit:.10g}"
@@ -126,13 +152,34 @@ def _limits(panel: Panel, settle: np.ndarray) -> list[Finding]:
                 float(settle[session, contract]), score=abs(moved), threshold=limit,
             )
         )  # fmt: skip
-    alive = (~np.isnan(change)).sum(axis=1)
     at_limit = locked.sum(axis=1)
     for session in np.flatnonzero((alive >= 2) & (2 * at_limit > alive)):
         day = day_of(panel.sessions[session])
-        count = f"{at_limit[session]} of {alive[session]} contracts"
-        message = f"{market}, {day}: {count} settled at the daily limit of {limit:.10g}; a fact, kept"
+        count_told = f"{at_limit[session]} of {alive[session]} contracts"
+        message = f"{market}, {day}: {count_told} settled at the daily limit of {limit:.10g}; a fact, kept"
         found.append(
             Finding(Kind.LIMIT_LOCKED, Severity.NOTE, message, market, session=day, score=float(at_limit[session]))
         )
     return found
+
+
+def _comes_late_or_back(
+    panel: Panel, settle: np.ndarray, change: np.ndarray, beyond: np.ndarray, session: int, contract: int
+) -> bool:
+    """Whether a change beyond the limit only makes up for sessions the settle stood still, or undoes another one.
+
+    A wrong price that is let stand breaks the limit on its way back too; it is told on its way out. A contract that
+    does not trade, or whose price was not updated (`stale_price`), comes after its curve in one move.
+    """
+    limit = float(panel.market.daily_limit or 0.0)
+    moved = change[:, contract]
+    stood = 0
+    while session - stood - 1 >= 0 and moved[session - stood - 1] == 0.0:
+        stood += 1
+    if stood >= 2 and abs(moved[session]) <= (stood + 1) * limit:
+        return True
+    for before in range(session - 1, max(0, session - _LONGEST_WAY_BACK) - 1, -1):
+        if beyond[before, contract] and moved[before] * moved[session] < 0:
+            away = abs(settle[session, contract] - settle[before - 1, contract])
+            return bool(away <= (session - before + 1) * limit)
+    return False

@@ -2,6 +2,9 @@
 
 Belongs here: telling a price that was not updated from a market that did not move. Does not belong here:
 prices that stand apart from the curve (`prices.py`).
+
+The statistic is the length of the run in sessions, of which the median move of the contracts that did move is at least
+two ticks on six in ten, and the contract itself traded on six in ten: common practice, no source.
 """
 
 from dataclasses import dataclass
@@ -16,23 +19,27 @@ from contracts.quality import Quality
 _LEAST_TICKS = 2.0
 # and on so large a share of the run.
 _LEAST_SHARE = 0.6
+# and the contract has to trade on so large a share of it.
+_LEAST_TRADED = 0.6
 
 
 @dataclass(frozen=True)
 class StaleRun:
-    """A run of unchanged settles: first and last session, contract, and how far the curve moved meanwhile."""
+    """A run of unchanged settles: first and last session, contract, how far the curve moved meanwhile, and the
+    settles that would have moved with it."""
 
     first: int
     last: int
     contract: int
     moved: float
+    path: tuple[float, ...]
 
 
 def find_stale_runs(panel: Panel, settle: np.ndarray, quality: Quality) -> list[StaleRun]:
     """Runs of at least `stale_sessions` unchanged settles (after their first) in a curve that moves.
 
-    `settle` (T, N), NaN where absent. A contract without volume through the whole run does not trade, and its
-    standing price is a fact.
+    `settle` (T, N), NaN where absent. A contract that hardly trades through the run stands still for want of
+    trade, and its standing price is a fact. Where a market reports no volume, its rows count as trade.
     """
     change = np.full(settle.shape, np.nan)
     change[1:] = settle[1:] - settle[:-1]
@@ -46,7 +53,9 @@ def find_stale_runs(panel: Panel, settle: np.ndarray, quality: Quality) -> list[
         for first, end in zip(edges[::2], edges[1::2], strict=True):
             if end - first < quality.stale_sessions or moves[first:end].mean() < _LEAST_SHARE:
                 continue
-            if not (volume[first:end, contract] > 0).any():
+            if not (volume[first:end, contract] <= 0).mean() <= 1 - _LEAST_TRADED:
                 continue
-            runs.append(StaleRun(int(first), int(end) - 1, int(contract), float(np.nansum(common[first:end]))))
+            path = np.cumsum(np.nan_to_num(common[first:end]))
+            expected = tuple((settle[first, contract] + path).tolist())
+            runs.append(StaleRun(int(first), int(end) - 1, int(contract), float(path[-1]), expected))
     return runs

@@ -125,9 +125,13 @@ def test_findings_as_text_say_how_many_there_are_in_all(published: Path, run: Ru
     assert total >= 2
     result = run("findings", "--desk", published, "--limit", "1")
     lines = result.stdout.splitlines()
-    assert lines[0].split()[:3] == ["impact_sessions", "severity", "action"]
-    assert "decimal_shift" not in lines[0] and "TINA-2024-03, 2023-12-27" in lines[1]
+    assert lines[0].startswith("TINA-2024-03, 2023-12-27: settle")
+    assert "Cost: had it stood, the trend score would be another on" in " ".join(line.strip() for line in lines[1:5])
     assert lines[-1] == f"the first 1 of {total}; --limit {total} shows all"
+    of_market = run("findings", "TINA", "--limit", "1", "--desk", published).stdout
+    assert "replaced; without cleaning the trend score would differ on" in " ".join(of_market.split())
+    cleaning = json.loads(run("findings", "TINA", "--desk", published, "--json").stdout)["cleaning"]
+    assert list(cleaning) == ["TINA"] and all(one["turned"] > 0 for one in cleaning["TINA"].values())
     none = run("findings", "TINB", "--kind", "decimal_shift", "--desk", published)
     assert (none.exit_code, none.stdout) == (0, "no findings\n")
 
@@ -205,7 +209,7 @@ def test_verify_deep_with_another_desk_is_5_and_says_so(published: Path, tmp_pat
     (other / "desk.toml").write_text((other / "desk.toml").read_text().replace("[5, 10]", "[5, 11]"))
     result = run("verify", "--deep", "--desk", other, "--store", published / "published")
     assert result.exit_code == 5
-    assert "was made with desk" in result.stdout
+    assert "the desk is another: desk.toml look_backs: [5, 10] -> [5, 11]" in result.stdout
 
 
 def test_a_store_that_was_moved_says_so_and_is_pointed_right(published: Path, tmp_path: Path, run: Run) -> None:

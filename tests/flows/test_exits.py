@@ -23,7 +23,7 @@ from contracts.errors import (
     StoreUnsound,
     UsageError,
 )
-from flows.exits import Exit, code_of
+from flows.exits import Exit, Terminated, code_of, code_of_any, sigterm_raises
 from tests.flows.conftest import ROOT, Run, RunApart
 from tests.integration.tiny import write_raw
 
@@ -45,6 +45,17 @@ def snapshots(store: Path) -> list[str]:
 )
 def test_an_error_raised_on_purpose_has_its_code(error: RopewalkError, code: int) -> None:
     assert code_of(error) == code
+
+
+def test_a_query_cut_off_by_a_signal_has_the_code_of_the_signal() -> None:
+    """DuckDB raises the same for either."""
+    cut = RuntimeError("Query interrupted")
+    with sigterm_raises():
+        assert code_of_any(cut) == 130
+        with pytest.raises(Terminated):
+            os.kill(os.getpid(), signal.SIGTERM)
+        assert code_of_any(cut) == 143
+    assert code_of_any(RuntimeError("a bug")) == 1
 
 
 def test_published_is_0_and_so_is_nothing_new(desk: Path, run: Run) -> None:

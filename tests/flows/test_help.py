@@ -30,6 +30,7 @@ COMMANDS = (
     "propose",
     "prune",
     "rolls",
+    "schedule",
     "sql",
     "study",
     "trace",

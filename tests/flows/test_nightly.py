@@ -122,3 +122,35 @@ def test_a_password_in_an_address_is_not_shown(desk: Path, run_apart: RunApart) 
     assert done.returncode == 0
     assert "http://127.0.0.1:9/api" in done.stderr
     assert "secret" not in done.stderr + done.stdout
+
+
+def test_a_night_killed_in_the_middle_leaves_what_stands_and_the_next_start_puts_all_right(
+    desk: Path, tmp_path: Path, run_apart: RunApart
+) -> None:
+    """SIGKILL while TINB is built: no part of it stays after the next night, which publishes."""
+    assert run_apart("build", "--desk", desk).returncode == 0
+    store = desk / "published"
+    before = (store / "CURRENT").read_text()
+    write_raw(desk, 81)
+    code = (
+        "import os, signal, sys\n"
+        "import catalog.night as nights\n"
+        "real = nights.build_one\n"
+        "def build_one(night, market):\n"
+        "    result = real(night, market)\n"
+        "    if market == 'TINB':\n        os.kill(os.getpid(), signal.SIGKILL)\n"
+        "    return result\n"
+        "nights.build_one = build_one\n"
+        "from flows.commands import main\nmain(sys.argv[1:])\n"
+    )
+    killed = run_apart("nightly", "--desk", desk, "--jobs", "1", code=code, PREFECT_API_URL=REFUSED)
+    assert killed.returncode == -9
+    assert (store / "CURRENT").read_text() == before
+    left = [entry.name for entry in (store / "snapshots").iterdir() if entry.name.startswith(".staging")]
+    assert len(left) == 1, "the kill came in the middle of a night"
+
+    after = run_apart("nightly", "--desk", desk, PREFECT_API_URL=REFUSED)
+    assert after.returncode == 0
+    assert after.stdout.startswith("published snapshot 000002-")
+    assert not [entry for entry in (store / "snapshots").iterdir() if entry.name.startswith(".")]
+    assert run_apart("verify", "--deep", "--desk", desk).returncode == 0

@@ -86,3 +86,28 @@ def test_dask_gives_the_same_tables_as_threads(desk: Path, tmp_path: Path, run_a
     (desk / "desk.toml").write_text(text.replace('"dask"', '"threads"'))
     assert run_apart("build", "--desk", desk, "--store", tmp_path / "threads").returncode == 0
     assert hashes(tmp_path / "dask") == hashes(tmp_path / "threads")
+
+
+@pytest.mark.skipif(importlib.util.find_spec("distributed") is None, reason="the extra ropewalk[dask]")
+def test_a_dask_worker_that_is_killed_costs_nothing_and_the_writer_stays_one(
+    desk: Path, tmp_path: Path, run: Run, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """A cluster of two worker processes on loopback; the first to begin TINB is killed in the middle of it."""
+    from distributed import LocalCluster
+
+    from flows.settings import Where
+    from flows.work import pool_builder, run_night
+
+    declare_workers(desk, "threads")
+    assert run("build", "--desk", desk, "--store", tmp_path / "threads").exit_code == 0
+    text = (desk / "desk.toml").read_text()
+    marker = tmp_path / "killed"
+    monkeypatch.setenv("ROPEWALK_TEST_KILL_ONCE", str(marker))
+    monkeypatch.setattr("catalog.night.build_one", importlib.import_module("tests.flows.dying").build_one_killed_once)
+    with LocalCluster(n_workers=2, threads_per_worker=1, dashboard_address=None, host="127.0.0.1") as cluster:
+        declared = text.replace('"threads"', f'"dask"\ndask_address = "{cluster.scheduler_address}"')
+        (desk / "desk.toml").write_text(declared)
+        summary = run_night(Where(desk, None, tmp_path / "dask"), "build", pool_builder(2))
+    assert marker.exists(), "no worker was killed"
+    assert (summary.published, summary.held_back) == (("TINA", "TINB"), ())
+    assert hashes(tmp_path / "dask") == hashes(tmp_path / "threads")

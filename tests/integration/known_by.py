@@ -13,7 +13,8 @@ import pyarrow.compute as pc
 import pytest
 
 import contracts.build
-from contracts.build import Inputs, Laid, build_market
+from contracts.build import Inputs, build_market
+from contracts.impact import Laid
 from contracts.intake import RawFile, parse_rows, split_file
 from contracts.panel import Panel
 from contracts.repairs import Clean

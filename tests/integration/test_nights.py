@@ -156,6 +156,24 @@ def test_declared_repair_that_no_longer_stands_holds_its_market_back(tiny: Path,
     assert "the repair by desk expects 999 as reported" in reason
 
 
+def test_waived_block_does_not_hold_its_market_back(tiny: Path, tmp_path: Path) -> None:
+    """The same refused repair as above, accepted by a person until a day."""
+    (tiny / "repairs").mkdir()
+    (tiny / "repairs" / "one.toml").write_text(
+        '[[repair]]\ncontract = "TINA-2024-06"\nsession = 2023-12-01\nfield = "settle"\nreported = 999.0\n'
+        'corrected = 1.0\nreason = "test"\nby = "desk"\non = 2024-01-01\n'
+    )
+    store = tmp_path / "published"
+    assert len(run_night(tiny, store).held_back) == 1
+    ((finding,),) = rows(store, "select finding from findings where kind = 'repair_refused'")
+    (tiny / "waivers.toml").write_text(
+        f'[[waiver]]\nfinding = "{finding}"\nreason = "the file is on its way"\nby = "desk"\non = 2024-01-01\n'
+        "until = 2024-12-31\n"
+    )
+    assert run_night(tiny, store).held_back == ()
+    assert rows(store, "select waived_until::varchar from findings where kind = 'repair_refused'") == [("2024-12-31",)]
+
+
 def test_waiver_past_its_day_stops_working_and_says_so(tiny: Path, tmp_path: Path) -> None:
     file = tiny / "raw" / "TINA_2024_06.csv"
     lines = file.read_text().splitlines(keepends=True)

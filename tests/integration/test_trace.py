@@ -50,8 +50,11 @@ def test_line_shown_is_the_line_in_the_file_and_the_sum_adds_up(sample_store: Pa
 def test_repaired_session_shows_what_was_reported_and_why_it_was_replaced(sample_store: Path) -> None:
     lines = trace_lines(trace(sample_store, "NCOC", "2022-05-17"))
     assert lines[0] == "NCOC, 2022-05-17, plan by_open_interest, nearby 1: repaired"
-    assert "NCOC-2022-07 on 2022-05-17: reported 170100, used 1697 (repaired)" in lines
-    assert "  NCOC-2022-07, 2022-05-17: settle 170100 is 100 times too large; repaired to 1697" in lines
+    assert "NCOC-2022-07 on 2022-05-17: reported 170100, used 1698 (repaired)" in lines
+    found = (
+        "  NCOC-2022-07, 2022-05-17: settle 170100 is 100 times too large; repaired to 1698 from its neighbours' moves"
+    )
+    assert f"{found}, within about 4.3" in lines
     assert "  soft/NCOC.zip/NCOC_2022_07.csv:353" in lines
     assert "  17/05/2022,169500,170400,168900,170100,33847,108132" in lines
 

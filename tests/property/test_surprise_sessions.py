@@ -3,9 +3,8 @@
 from dataclasses import replace
 
 from hypothesis import given
-from hypothesis import strategies as st
 
-from tests.property.strategies import EFFORT, markets_and_plans
+from tests.property.strategies import LESS_EFFORT, surprised
 from tests.reference.agree import differences
 from tests.reference.plain_market import PlainMarket, PlainPlan, truncate
 from tests.reference.plain_rolls import foreseen
@@ -13,23 +12,13 @@ from tests.reference.real import lay_real
 from tests.reference.small import small_market
 
 
-@st.composite
-def surprised(draw: st.DrawFn) -> tuple[PlainMarket, PlainPlan]:
-    """A market of which up to four sessions were not to be, and a plan."""
-    market, plan = draw(markets_and_plans())
-    days = draw(st.sets(st.integers(0, len(market.sessions) - 1), min_size=1, max_size=4))
-    # A desk refuses a decision for a day that its calendar calls closed.
-    force = tuple(decision for decision in plan.force if decision[1] not in days)
-    return replace(market, unscheduled=days), replace(plan, force=force)
-
-
-@EFFORT
+@LESS_EFFORT
 @given(surprised())
 def test_real_and_plain_agree_on_surprise_sessions(drawn: tuple[PlainMarket, PlainPlan]) -> None:
     assert differences(*drawn) == []
 
 
-@EFFORT
+@LESS_EFFORT
 @given(surprised())
 def test_real_decisions_count_on_no_session_that_nobody_knew_of(drawn: tuple[PlainMarket, PlainPlan]) -> None:
     market, plan = drawn

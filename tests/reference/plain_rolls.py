@@ -317,6 +317,7 @@ class _Strand:
             "last_trade": market.last_trade[roll.outgoing],
             "first_notice": None if market.first_notice is None else market.first_notice[roll.outgoing],
             "is_stale": is_stale,
+            "postponed": 0 if measured is None else effective - (roll.planned + roll.moved),
         }
         if measured is not None:
             left, right = market.prices[(roll.outgoing, measured)], market.prices[(roll.incoming, measured)]

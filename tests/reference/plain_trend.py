@@ -60,17 +60,30 @@ def impact_of_price(
     reported: float,
     look_backs: tuple[int, ...] = LOOK_BACKS,
 ) -> int:
-    """Sessions whose score would differ had `reported` stood as the contract's settle, all rolls as they are.
+    """Sessions whose score would differ had `reported` stood as the contract's settle, all rolls as they are."""
+    return impact_of_prices(market, chain, contract, {session: reported}, look_backs)
 
-    A roll measured on that session is measured on the reported price too.
+
+def impact_of_prices(
+    market: PlainMarket,
+    chain: Chain,
+    contract: str,
+    reported: dict[int, float],
+    look_backs: tuple[int, ...] = LOOK_BACKS,
+) -> int:
+    """Sessions whose score would differ had these stood as the contract's settles by session, all rolls as they are.
+
+    A roll measured on one of the sessions is measured on the reported price too.
     """
     prices = dict(market.prices)
-    prices[(contract, session)] = reported
+    for session, price in reported.items():
+        prices[(contract, session)] = price
     rows = []
     for row in chain.rows:
         row = dict(row)
-        if row["measured_on"] == session and contract in (row["outgoing"], row["incoming"]):
-            left, right = prices[(row["outgoing"], session)], prices[(row["incoming"], session)]
+        measured = row["measured_on"]
+        if measured in reported and contract in (row["outgoing"], row["incoming"]):
+            left, right = prices[(row["outgoing"], measured)], prices[(row["incoming"], measured)]
             row["gap"] = (row["weight_after"] - row["weight_before"]) * (right - left)
         rows.append(row)
     before = [row["back_adjusted"] for row in splice_plain(market, chain)]

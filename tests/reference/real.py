@@ -16,8 +16,8 @@ from contracts.panel import Panel
 from contracts.rolls import NEVER, Held, lay_rolls
 from contracts.sessions import day_number, market_days
 from contracts.splice import STATUS_NAMES, carry_forward, check_identities, splice
+from tests.reference.plain_days import PlainCalendar
 from tests.reference.plain_market import Cell, PlainMarket, PlainPlan
-from tests.reference.small import weekdays
 
 Row = dict[str, Any]
 
@@ -27,6 +27,7 @@ class RealChain:
     """What the real code lays for one nearby, in session indices and contract names."""
 
     start: int | None
+    held: Held
     decisions: list[tuple[int, str, str, str]] = field(default_factory=list)
     rows: list[Row] = field(default_factory=list)
     series: list[Row] = field(default_factory=list)
@@ -73,7 +74,7 @@ nearbys = {list(plan.nearbys)}
         text += f"""
 [[plans.{plan.name}.force]]
 outgoing = "{outgoing}"
-effective = {weekdays(effective + 1, market.sessions[0])[effective].isoformat()}
+effective = {PlainCalendar().shift(market.sessions[0], effective).isoformat()}
 reason = "drawn"
 by = "test"
 """
@@ -134,7 +135,7 @@ def lay_real(market: PlainMarket, plan: PlainPlan) -> dict[int, RealChain]:
     carried, status = carry_forward(settle, is_repaired)
     chains: dict[int, RealChain] = {}
     for held in lay_rolls(panel, usable, settle, declared):
-        chain = RealChain(None if held.start == NEVER else held.start)
+        chain = RealChain(None if held.start == NEVER else held.start, held)
         names = market.contracts
         chain.decisions = [(d.decided, names[d.outgoing], names[d.incoming], d.trigger) for d in held.decisions]
         chain.rows = [
@@ -153,6 +154,7 @@ def lay_real(market: PlainMarket, plan: PlainPlan) -> dict[int, RealChain]:
                 "ratio": _or_none(s.ratio),
                 "trigger": s.decision.trigger,
                 "is_stale": s.is_stale,
+                "postponed": s.postponed,
             }
             for s in held.steps
         ]

@@ -8,7 +8,7 @@ import pytest
 from catalog.declarations import SAMPLE_DESK, load_desk
 from tests.reference.agree import row_differences
 from tests.reference.plain_rolls import lay_plain
-from tests.reference.plain_trend import impact_of_price
+from tests.reference.plain_trend import impact_of_prices
 from tests.reference.sample_markets import (
     NOT_COMPARED,
     Row,
@@ -67,21 +67,38 @@ def test_published_rolls_and_series_are_those_of_the_plain_telling(sample_store:
 def test_a_repaired_settle_counts_the_sessions_whose_score_it_would_have_turned(
     sample_store: pathlib.Path, code: str
 ) -> None:
-    """The worst of the market's plans, told again with the reported price (on the present scale) in place."""
+    """The worst of the market's plans, told again with the reported prices (on the present scale) in place.
+
+    Replaced settles of a contract on its sessions one after another stand together.
+    """
     snapshot, desk = newest_snapshot(sample_store), load_desk(SAMPLE_DESK)
     declared = desk.markets[code]
     market, days = read_market(snapshot, declared)
     laid = [lay_plain(market, read_plan(declared, name, days)).chains[1] for name in declared.plans]
+    bars = [row for row in read_rows(snapshot, "bars", code) if row["status"] != "not a session"]
+    day_at = {days.index(row["session"]): row["session"] for row in bars}
+    replaced = {
+        (row["contract"], days.index(row["session"])) for row in bars if row["status"] in ("repaired", "masked")
+    }
     found = {}
     for row in read_rows(snapshot, "findings", code):
         if row["field"] != "settle" or row["action"] not in ("repaired", "masked") or row["session"] is None:
             continue
-        place = days.index(row["session"])
-        reported = market.settle[(row["contract"], place)]
-        for change in declared.rescaled:
-            if row["session"] < change.before:
-                reported *= change.multiply
-        worst = max(impact_of_price(market, chain, row["contract"], place, reported, desk.look_backs) for chain in laid)
+        contract, place = row["contract"], days.index(row["session"])
+        priced = [at for at in sorted(day_at) if market.settle.get((contract, at)) is not None]
+        run = {place}
+        for way in (priced[priced.index(place) + 1 :], priced[: priced.index(place)][::-1]):
+            for at in way:
+                if (contract, at) not in replaced:
+                    break
+                run.add(at)
+        reported = {}
+        for at in run:
+            reported[at] = market.settle[(contract, at)]
+            for change in declared.rescaled:
+                if day_at[at] < change.before:
+                    reported[at] *= change.multiply
+        worst = max(impact_of_prices(market, chain, contract, reported, desk.look_backs) for chain in laid)
         found[(row["contract"], row["session"], row["kind"])] = (worst, row["impact_sessions"])
     assert found, f"{code}: the sample has no repaired or masked settle"
     assert {key: told for key, (_, told) in found.items()} == {key: worst for key, (worst, _) in found.items()}

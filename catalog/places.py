@@ -29,6 +29,7 @@ _SNAPSHOT = re.compile(r"(\d{6,})-[0-9a-f]{12}")
 _MARKET = re.compile(CODE)
 _TABLE = re.compile(r"[a-z_]{1,40}")
 _READ_BACK = 1 << 20
+_LOOKS, _BETWEEN_LOOKS = 100, 0.02
 # DuckDB takes these for a pattern of several files wherever it is given a path.
 _UNNAMEABLE = re.compile(r"[*?\[\]\x00-\x1f\x7f]")
 
@@ -253,13 +254,7 @@ def write_lock(places: Places) -> Iterator[None]:
         flags = os.O_RDWR | os.O_CREAT | os.O_NOFOLLOW | os.O_CLOEXEC
         opened = os.open(places.lock, flags, 0o644)
     try:
-        try:
-            fcntl.flock(opened, fcntl.LOCK_EX | fcntl.LOCK_NB)
-        except OSError as error:
-            if error.errno in (errno.EWOULDBLOCK, errno.EACCES):
-                holder = _describe_holder(os.pread(opened, 4096, 0))
-                raise StoreBusy(f"{places.store} is being written by {holder}; nothing was done") from None
-            raise StoreError(f"{places.lock} cannot be locked: {error.strerror}; nothing was done") from error
+        _take_lock(opened, places)
         _held.add(opened)
         with store_errors(f"the store {places.store} cannot be written"):
             os.ftruncate(opened, 0)
@@ -272,6 +267,21 @@ def write_lock(places: Places) -> Iterator[None]:
             with suppress(OSError):
                 os.ftruncate(opened, 0)
         os.close(opened)
+
+
+def _take_lock(opened: int, places: Places) -> None:
+    """Lock the open file; raises StoreBusy. A holder that just came or is about to go has no name there yet."""
+    for _ in range(_LOOKS):
+        try:
+            fcntl.flock(opened, fcntl.LOCK_EX | fcntl.LOCK_NB)
+            return
+        except OSError as error:
+            if error.errno not in (errno.EWOULDBLOCK, errno.EACCES):
+                raise StoreError(f"{places.lock} cannot be locked: {error.strerror}; nothing was done") from error
+        if content := os.pread(opened, 4096, 0):
+            break
+        time.sleep(_BETWEEN_LOOKS)
+    raise StoreBusy(f"{places.store} is being written by {_describe_holder(content)}; nothing was done")
 
 
 def _describe_self() -> dict[str, str | int]:

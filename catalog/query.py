@@ -6,6 +6,7 @@ themselves (`catalog_file.py`), what is asked.
 
 import shlex
 from collections.abc import Sequence
+from concurrent.futures import ThreadPoolExecutor
 from typing import TYPE_CHECKING, Any
 
 from catalog.catalog_file import lay_views, quote_text
@@ -94,18 +95,37 @@ def run_query(
         if kinds != ["SELECT"]:
             seen = ", ".join(kinds) or "nothing"
             raise UsageError(f"seen {seen}; expected one query that only reads, such as: from series limit 5")
-        if not parameters:
-            # Since 2.0 a WITH clause at the top may hold a COPY or INSERT, and is a SELECT all the same;
-            # within query() it may not, and explaining runs nothing.
-            connection.execute(f"explain select * from query({quote_text(sql)})")  # noqa: S608
-        cursor = connection.execute(sql, list(parameters))
-        return [column[0] for column in cursor.description or ()], cursor.fetchall()
+        return _run_apart(connection, sql, parameters)
     except duckdb.Error as error:
         if _is_about_a_file(error):
             text = f"a published file cannot be read: {_first_line(error)}; run ropewalk verify"
             raise StoreUnsound(text) from error
         text = str(error).partition("\n\nLINE ")[0]
         raise UsageError(f"the query cannot be run: {text}") from error
+
+
+def _run_apart(
+    connection: "duckdb.DuckDBPyConnection", sql: str, parameters: Sequence[Any]
+) -> tuple[list[str], list[tuple[Any, ...]]]:
+    """Run a query on a thread of its own: the main one hears no signal while it works inside DuckDB."""
+    with ThreadPoolExecutor(1) as pool:
+        answer = pool.submit(_run_typed, connection, sql, parameters)
+        try:
+            return answer.result()
+        except BaseException:
+            connection.interrupt()
+            raise
+
+
+def _run_typed(
+    connection: "duckdb.DuckDBPyConnection", sql: str, parameters: Sequence[Any]
+) -> tuple[list[str], list[tuple[Any, ...]]]:
+    if not parameters:
+        # Since 2.0 a WITH clause at the top may hold a COPY or INSERT, and is a SELECT all the same;
+        # within query() it may not, and explaining runs nothing.
+        connection.execute(f"explain select * from query({quote_text(sql)})")  # noqa: S608
+    cursor = connection.execute(sql, list(parameters))
+    return [column[0] for column in cursor.description or ()], cursor.fetchall()
 
 
 def _kind_of(statement: "duckdb.Statement") -> str:

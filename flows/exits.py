@@ -57,6 +57,8 @@ def code_of(error: RopewalkError) -> Exit:
 
 # The world, not the program: a full disk, a folder that may not be written, a broken drive.
 _WORLD = frozenset({errno.ENOSPC, errno.EDQUOT, errno.EROFS, errno.EACCES, errno.EPERM, errno.EIO, errno.EMFILE})
+# What DuckDB raises in the place of what a signal raised.
+_CUT_QUERY = "Query interrupted"
 # What is said where not even a library can be loaded or a thread started.
 _SHORT_OF_MEMORY = ("failed to map segment", "annot allocate memory", "can't start new thread")
 
@@ -74,6 +76,8 @@ def code_of_any(error: BaseException) -> Exit:
         return Exit.INTERRUPTED
     if isinstance(error, Terminated):
         return Exit.TERMINATED
+    if isinstance(error, RuntimeError) and str(error) == _CUT_QUERY:
+        return Exit.TERMINATED if _ended else Exit.INTERRUPTED
     if is_short_of_memory(error) or (isinstance(error, OSError) and error.errno in _WORLD):
         return Exit.NOT_PUBLISHED
     return Exit.BUG
@@ -81,6 +85,9 @@ def code_of_any(error: BaseException) -> Exit:
 
 class Terminated(BaseException):
     """SIGTERM arrived. Like KeyboardInterrupt it passes every `except Exception` on its way out."""
+
+
+_ended: list[int] = []
 
 
 @contextmanager
@@ -95,9 +102,11 @@ def sigterm_raises() -> Iterator[None]:
 
     def stop(_signal: int, _frame: FrameType | None) -> None:
         signal.signal(signal.SIGTERM, signal.SIG_DFL)
+        _ended.append(signal.SIGTERM)
         raise Terminated
 
     before = signal.signal(signal.SIGTERM, stop)
+    _ended.clear()
     try:
         yield
     finally:

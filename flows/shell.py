@@ -20,6 +20,8 @@ from flows.exits import Exit, Terminated, code_of, code_of_any, exit_table, is_s
 from flows.render import complain, say, say_json
 from flows.settings import Where, find_desk, find_where
 
+_STOPPED = (Exit.INTERRUPTED, Exit.TERMINATED)
+
 
 @dataclass(frozen=True)
 class Asked:
@@ -138,14 +140,14 @@ def _run(run: Callable[[], Any]) -> int:
         error.show()
         return Exit.REFUSED
     except (KeyboardInterrupt, click.Abort):
-        complain("stopped by Ctrl-C; the last snapshot stands")
-        return Exit.INTERRUPTED
+        return _tell_stopped(Exit.INTERRUPTED)
     except Terminated:
-        complain("stopped by SIGTERM; the last snapshot stands")
-        return Exit.TERMINATED
+        return _tell_stopped(Exit.TERMINATED)
     except SystemExit as end:
         return end.code if isinstance(end.code, int) else Exit.BUG
     except Exception as error:
+        if code_of_any(error) in _STOPPED:
+            return _tell_stopped(code_of_any(error))
         if is_short_of_memory(error):
             complain("out of memory; nothing was published, the last snapshot stands; give it more, or fewer --jobs")
             return Exit.NOT_PUBLISHED
@@ -154,6 +156,11 @@ def _run(run: Callable[[], Any]) -> int:
             return Exit.NOT_PUBLISHED
         complain(f"{traceback.format_exc()}this is a bug in ropewalk; the last snapshot stands")
         return Exit.BUG
+
+
+def _tell_stopped(code: Exit) -> Exit:
+    complain(f"stopped by {'SIGTERM' if code is Exit.TERMINATED else 'Ctrl-C'}; the last snapshot stands")
+    return code
 
 
 def _leave(code: int) -> None:

@@ -1,10 +1,12 @@
 """Where things are in a store, who may write it, and how a file gets into it."""
 
+import fcntl
 import os
 import signal
 import subprocess
 import sys
 import textwrap
+import threading
 import time
 from pathlib import Path
 
@@ -204,3 +206,26 @@ def test_a_lock_that_is_a_link_is_refused(places: Places, tmp_path: Path) -> Non
     with pytest.raises(StoreError, match="cannot be written"), write_lock(places):
         pass
     assert (tmp_path / "precious").read_text() == "precious"
+
+
+def test_the_name_of_a_holder_that_has_just_come_is_waited_for(places: Places) -> None:
+    """Between taking the lock and writing who took it nobody is named there."""
+    with write_lock(places):
+        named = places.lock.read_bytes()
+        places.lock.write_bytes(b"")
+        later = threading.Timer(0.2, places.lock.write_bytes, [named])
+        later.start()
+        with pytest.raises(StoreBusy, match=f"by process {os.getpid()} on "), write_lock(places):
+            pytest.fail("two writers hold the store")
+        later.join()
+
+
+def test_a_holder_that_goes_while_its_name_is_waited_for_is_followed(places: Places) -> None:
+    places.store.mkdir(exist_ok=True)
+    opened = os.open(places.lock, os.O_RDWR | os.O_CREAT)
+    fcntl.flock(opened, fcntl.LOCK_EX)
+    later = threading.Timer(0.2, os.close, [opened])
+    later.start()
+    with write_lock(places):
+        assert str(os.getpid()) in places.lock.read_text()
+    later.join()

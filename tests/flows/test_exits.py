@@ -23,7 +23,7 @@ from contracts.errors import (
     StoreUnsound,
     UsageError,
 )
-from flows.exits import Exit, code_of
+from flows.exits import Exit, Terminated, code_of, code_of_any, sigterm_raises
 from tests.flows.conftest import ROOT, Run, RunApart
 from tests.integration.tiny import write_raw
 
@@ -45,6 +45,17 @@ def snapshots(store: Path) -> list[str]:
 )
 def test_an_error_raised_on_purpose_has_its_code(error: RopewalkError, code: int) -> None:
     assert code_of(error) == code
+
+
+def test_a_query_cut_off_by_a_signal_has_the_code_of_the_signal() -> None:
+    """DuckDB raises the same for either."""
+    cut = RuntimeError("Query interrupted")
+    with sigterm_raises():
+        assert code_of_any(cut) == 130
+        with pytest.raises(Terminated):
+            os.kill(os.getpid(), signal.SIGTERM)
+        assert code_of_any(cut) == 143
+    assert code_of_any(RuntimeError("a bug")) == 1
 
 
 def test_published_is_0_and_so_is_nothing_new(desk: Path, run: Run) -> None:
@@ -208,6 +219,30 @@ def test_a_stopped_build_frees_the_lock_and_removes_its_staging(
     assert "stopped by" in err and "Traceback" not in err
     assert snapshots(desk / "published") == []
     assert run("build", "--desk", desk).exit_code == 0
+
+
+@pytest.mark.parametrize(("name", "code", "told"), [("SIGINT", 130, "Ctrl-C"), ("SIGTERM", 143, "SIGTERM")])
+def test_a_query_that_is_stopped_says_so_and_is_no_bug(
+    name: str, code: int, told: str, desk: Path, run: Run, tmp_path: Path
+) -> None:
+    assert run("build", "--desk", desk).exit_code == 0
+    asking = (
+        "import catalog.query as query\nreal = query.run_query\n"
+        "def tell(*given):\n    print('asking', flush=True)\n    return real(*given)\n"
+        "query.run_query = tell\nimport sys\nfrom flows.commands import main\nmain(sys.argv[1:])"
+    )
+    process = subprocess.Popen(
+        [sys.executable, "-c", asking, "sql", "select sum(range * 7 % 13) from range(500000000000)", "--desk", desk],
+        cwd=tmp_path, env={**os.environ, "PYTHONPATH": str(ROOT)}, stdout=subprocess.PIPE, stderr=subprocess.PIPE,
+        text=True,
+    )  # fmt: skip
+    assert process.stdout is not None and process.stdout.readline() == "asking\n"
+    time.sleep(0.5)
+    process.send_signal(getattr(signal, name))
+    out, err = process.communicate(timeout=60)
+    assert (process.returncode, out) == (code, "")
+    assert err.endswith(f"stopped by {told}; the last snapshot stands\n")
+    assert "Traceback" not in err
 
 
 def test_a_reader_that_has_had_enough_is_no_error(desk: Path, run: Run, tmp_path: Path) -> None:

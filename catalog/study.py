@@ -1,20 +1,19 @@
 """Roll plans side by side on one market's own data.
 
-Belongs here: the snapshot's raw rows and desk, the plans that are asked about, and writing the picture. Does
-not belong here: the figures (`contracts/compared.py`), drawing (`study_picture.py`).
+Belongs here: the snapshot's raw rows and desk, and the plans that are asked about. Does not belong here: the
+figures (`contracts/compared.py`), the picture (`study_picture.py`).
 """
 
 import re
 import tomllib
 from dataclasses import dataclass, replace
-from pathlib import Path
 
 from catalog.archive import Intake, read_register
 from catalog.assignment import assign_files, code_digest, gather_inputs
 from catalog.declarations import Desk
 from catalog.kept_desk import desk_of
 from catalog.listings import nearest
-from catalog.places import Places, store_errors, write_whole
+from catalog.places import Places
 from catalog.standing import find_snapshot, origin_of, read_manifest
 from catalog.wishes import until_of
 from contracts.build import lay_plans, prepare_market
@@ -167,15 +166,3 @@ def read_plans(texts: tuple[str, ...], market: Market) -> dict[str, Plan]:
 
 def _is_plain(name: str) -> bool:
     return re.fullmatch(PLAIN_NAME, name) is not None
-
-
-def save_picture(study: Study, target: Path) -> None:
-    """Write the study's picture as .svg or .png; raises UsageError for another ending, StoreError."""
-    from catalog.study_picture import draw_study
-
-    ending = target.suffix.lower().removeprefix(".")
-    if ending not in ("svg", "png"):
-        raise UsageError(f"{target}: seen the ending {target.suffix!r}; expected .svg or .png")
-    content = draw_study(study, ending)
-    with store_errors(f"{target} could not be written"):
-        write_whole(target, content)

@@ -1,20 +1,21 @@
 """The one picture of a study: what each plan held, what its rolls were worth, and the series that came of it.
 
-Belongs here: drawing. Does not belong here: the figures, writing the file (`study.py`). The drawing library is
+Belongs here: drawing, and writing the file. Does not belong here: the figures (`study.py`). The drawing library is
 imported only when a picture is asked for.
 """
 
 import io
 from itertools import pairwise
-from typing import TYPE_CHECKING, Any
+from pathlib import Path
+from typing import Any
 
 import numpy as np
 
+from catalog.places import store_errors, write_whole
+from catalog.study import Study
 from contracts.compared import main_contract, whole_rolls
+from contracts.errors import UsageError
 from contracts.sessions import day_of
-
-if TYPE_CHECKING:
-    from catalog.study import Study
 
 # Told apart by people who see red and green alike, and by their lightness in print
 # (Okabe and Ito, Color Universal Design, 2008; the values from memory).
@@ -24,7 +25,17 @@ _STROKES = ("-", "--", "-.", ":")
 _TONES = ("#5B7C99", "#C9D6E2")
 
 
-def draw_study(study: "Study", ending: str) -> bytes:
+def save_picture(study: Study, target: Path) -> None:
+    """Write the study's picture as .svg or .png; raises UsageError for another ending, StoreError."""
+    ending = target.suffix.lower().removeprefix(".")
+    if ending not in ("svg", "png"):
+        raise UsageError(f"{target}: seen the ending {target.suffix!r}; expected .svg or .png")
+    content = draw_study(study, ending)
+    with store_errors(f"{target} could not be written"):
+        write_whole(target, content)
+
+
+def draw_study(study: Study, ending: str) -> bytes:
     """The picture as bytes of an SVG or PNG; the same study gives the same bytes."""
     import matplotlib
 
@@ -59,7 +70,7 @@ def _style(number: int) -> dict[str, Any]:
     return {"color": _COLOURS[number % len(_COLOURS)], "linestyle": _STROKES[number % len(_STROKES)]}
 
 
-def _draw_series(pane: Any, study: "Study", laid: list[Any], days: np.ndarray) -> None:
+def _draw_series(pane: Any, study: Study, laid: list[Any], days: np.ndarray) -> None:
     for number, one in enumerate(laid):
         pane.plot(days[one.series.start :], one.series.back_adjusted, label=one.name, linewidth=1.1, **_style(number))
     pane.set_title("Back-adjusted price", loc="left", fontsize=9)
@@ -80,7 +91,7 @@ def _draw_apart(pane: Any, laid: list[Any], days: np.ndarray) -> None:
     pane.grid(alpha=0.25)
 
 
-def _draw_holdings(pane: Any, study: "Study", laid: list[Any], days: np.ndarray) -> None:
+def _draw_holdings(pane: Any, study: Study, laid: list[Any], days: np.ndarray) -> None:
     """A band a plan, its tone turning at each roll; the delivery month is written where there is room."""
     names = study.panel.contracts
     shares = {figures.plan: figures.volume_held for figures in study.figures}
@@ -104,7 +115,7 @@ def _draw_holdings(pane: Any, study: "Study", laid: list[Any], days: np.ndarray)
     pane.set_title("Contract held: the tone turns at each roll", loc="left", fontsize=9)
 
 
-def _draw_gaps(pane: Any, study: "Study", laid: list[Any], days: np.ndarray) -> None:
+def _draw_gaps(pane: Any, study: Study, laid: list[Any], days: np.ndarray) -> None:
     tick = study.panel.market.tick_size
     for number, one in enumerate(laid):
         rolls = whole_rolls(one.held)

@@ -28,7 +28,8 @@ def _study(asked: Asked, market: str, plan: tuple[str, ...], snapshot: str | Non
     """
     from catalog.declarations import load_desk
     from catalog.places import Places
-    from catalog.study import save_picture, study_market
+    from catalog.study import study_market
+    from catalog.study_picture import save_picture
     from contracts.errors import DeskError
 
     where = asked.where()
